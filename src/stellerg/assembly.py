@@ -1,0 +1,309 @@
+"""From Stars to Problems: rows are grouped by the measurements they hold; nothing is looped over stars.
+
+What keeps a row from an answer becomes a status with its sentence here; a row that stands in no problem has
+one, and no row is dropped.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from stellerg.energetics import OUTPUTS, Conventions
+from stellerg.errors import InputError
+from stellerg.observables import LATENTS, OBSERVABLES
+from stellerg.problem import COEFFICIENT, Problem
+from stellerg.selection import Need, Selection, determined, select
+from stellerg.stars import EvolutionaryState, Stars
+from stellerg.status import STATUS_TEXT, Flag, Status
+from stellerg.structure.model import StructureModel
+
+__all__ = ["Assembly", "Notes", "assemble"]
+
+_EXACT_TOLERANCE = 1e-9  # relative disagreement of exact values that is taken for rounding
+_SEMIDEFINITE = -1e-10  # an eigenvalue below is negative, not rounding
+
+
+@dataclass
+class Notes:
+    """What became of each row before any engine saw it.
+
+    Attributes
+    ----------
+    status : ndarray of uint8, (star,)
+    reason : ndarray of int32, (star,)
+        Index into `sentences`; 0 is the empty sentence.
+    culprit : ndarray of int16, (star,)
+        Index of the observable at fault in the order of `OBSERVABLES`; -1 if there is none.
+    flags : ndarray of int64, (star,)
+        Bit mask of `Flag`.
+    aside : ndarray of int16, (star,)
+        Index into `aside_sets`.
+    """
+
+    status: np.ndarray
+    reason: np.ndarray
+    culprit: np.ndarray
+    flags: np.ndarray
+    aside: np.ndarray
+    sentences: list[str] = field(default_factory=lambda: [""])
+    aside_sets: list[tuple[str, ...]] = field(default_factory=lambda: [()])
+
+    @classmethod
+    def empty(cls, count: int) -> "Notes":
+        """Notes of rows about which nothing is known yet."""
+        return cls(
+            np.zeros(count, np.uint8),
+            np.zeros(count, np.int32),
+            np.full(count, -1, np.int16),
+            np.zeros(count, np.int64),
+            np.zeros(count, np.int16),
+        )
+
+    def set(self, rows: np.ndarray, status: Status, sentence: str, culprit: str = "") -> None:
+        """Give rows a status with its sentence."""
+        if not len(rows):
+            return
+        if sentence not in self.sentences:
+            self.sentences.append(sentence)
+        self.status[rows] = status
+        self.reason[rows] = self.sentences.index(sentence)
+        self.culprit[rows] = list(OBSERVABLES).index(culprit) if culprit else -1
+
+
+@dataclass(frozen=True)
+class Assembly:
+    """Problems, the outputs asked for, and notes on every row."""
+
+    problems: tuple[Problem, ...]
+    outputs: tuple[str, ...]
+    notes: Notes
+
+
+def assemble(
+    stars: Stars,
+    outputs: Sequence[str],
+    conventions: Conventions,
+    structure: StructureModel,
+    use: Sequence[str] | None = None,
+) -> Assembly:
+    """Group stars into problems.
+
+    Raises
+    ------
+    InputError
+        If an output or an observable of `use` is unknown.
+    """
+    _check_names(outputs, OUTPUTS, "output")
+    if use is not None:
+        _check_names(use, OBSERVABLES, "observable in use")
+        absent = [name for name in use if name not in stars.measured]
+        if absent:
+            raise InputError(f"use: {', '.join(absent)} was not given; name observables that the stars have")
+    notes = Notes.empty(len(stars))
+    needs, bound = _needs(outputs, conventions, structure)
+    problems: list[Problem] = []
+    for rows, selection in _patterns(stars, needs, use, notes):
+        if selection.status != Status.OK:
+            notes.set(rows, selection.status, selection.reason, selection.culprit)
+        given = [n for n, has in zip(needs, selection.given, strict=True) if has]
+        if not given:
+            continue
+        given = [need for need in given if need.name in bound]
+        if not given:
+            notes.set(rows, Status.NOT_BOUND, STATUS_TEXT[Status.NOT_BOUND].sentence)
+            continue
+        if len(given) < sum(selection.given):
+            lacking = ", ".join(n.name for n, has in zip(needs, selection.given, strict=True) if has and n not in given)
+            notes.set(rows, Status.PARTIAL, f"{lacking} not given: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
+        problems += _problems_of_pattern(stars, rows, selection, given, conventions, structure, notes)
+    return Assembly(tuple(_applicable(problems, stars, structure, notes)), tuple(outputs), notes)
+
+
+def _check_names(names: Sequence[str], known: Sequence[str], what: str) -> None:
+    if not names:
+        raise InputError(f"{what}: none was named; choose from {', '.join(known)}")
+    for name in names:
+        if name not in known:
+            raise InputError(f"{what}: {name!r} is unknown; choose from {', '.join(known)}")
+    if len(set(names)) < len(names):
+        raise InputError(f"{what}: {', '.join(names)} names one twice")
+
+
+def _needs(outputs, conventions, structure) -> tuple[list[Need], set[str]]:
+    """What must be determined for each output, and the outputs whose factor is positive.
+
+    A structure that looks at the mass makes the mass a need of every output that carries structure.
+    """
+    unit = np.eye(len(LATENTS))
+    mass = tuple(unit[LATENTS.index("mass")])
+    needs, bound = [], set()
+    for name in outputs:
+        output = OUTPUTS[name]
+        looks_at_mass = structure.needs_mass and output.carries_structure(conventions)
+        monomial = tuple(map(float, (*output.exponents, 0.0)))
+        needs.append(Need(name, (monomial, mass) if looks_at_mass else (monomial,)))
+        if output.factor(conventions) > 0.0:
+            bound.add(name)
+    return needs, bound
+
+
+def _patterns(stars: Stars, needs, use, notes: Notes):
+    """Yield the rows of each pattern of usable and faulty cells with what is selected for them."""
+    names = [name for name in OBSERVABLES if name in stars.measured]
+    if len(stars) == 0:
+        return
+    # one integer a row: the fault, or the presence, of every observable
+    states = np.stack([np.where(stars.measured[n].usable, 1, stars.measured[n].fault + 1) for n in names], axis=1)
+    present = np.stack([stars.measured[n].usable | (stars.measured[n].fault != 0) for n in names], axis=1)
+    patterns, which = np.unique(np.where(present, states, 0).astype(np.uint8), axis=0, return_inverse=True)
+    order = np.argsort(which.ravel(), kind="stable")
+    starts = np.searchsorted(which.ravel()[order], np.arange(len(patterns) + 1))
+    for number, pattern in enumerate(patterns):
+        rows = np.sort(order[starts[number] : starts[number + 1]])
+        usable = [n for n, state in zip(names, pattern, strict=True) if state == 1]
+        faults = {n: Status(state - 1) for n, state in zip(names, pattern, strict=True) if state > 1}
+        selection = select(usable, faults, needs, use)
+        if selection.aside not in notes.aside_sets:
+            notes.aside_sets.append(selection.aside)
+        notes.aside[rows] = notes.aside_sets.index(selection.aside)
+        if faults and any(selection.given):
+            notes.flags[rows] |= Flag.MEASUREMENT_UNUSABLE
+        yield rows, selection
+
+
+def _problems_of_pattern(
+    stars: Stars, rows, selection: Selection, given, conventions, structure, notes: Notes
+) -> list[Problem]:
+    """Split the rows of a pattern by which values are exact, eliminate those, and check the correlations."""
+    exact = np.stack([stars.measured[name].exact[rows] for name in selection.chosen], axis=1)
+    cases, which = np.unique(exact, axis=0, return_inverse=True)
+    problems = []
+    for number, case in enumerate(cases):
+        here = rows[which.ravel() == number]
+        problem, conflict = _eliminate(stars, here, selection.chosen, case, given, conventions, structure)
+        notes.set(
+            here[conflict], Status.EXACT_VALUES_CONFLICT, STATUS_TEXT[Status.EXACT_VALUES_CONFLICT].sentence
+        )
+        invalid = _invalid_correlations(stars, problem)
+        notes.set(
+            here[invalid & ~conflict], Status.CORRELATION_INVALID, STATUS_TEXT[Status.CORRELATION_INVALID].sentence
+        )
+        problem = problem.take(np.flatnonzero(~conflict & ~invalid))
+        if len(problem):
+            problems.append(problem)
+    return problems
+
+
+def _eliminate(stars, rows, chosen, exact, given, conventions, structure) -> tuple[Problem, np.ndarray]:
+    """The problem of some rows, with exact values as constraints; and where these contradict each other."""
+    observables = [OBSERVABLES[name] for name in chosen]
+    exponents = np.array([o.exponents for o in observables], float)
+    reference = np.array([o.reference_for(stars.solar) for o in observables])
+    # parameters: an orthonormal basis of what the observables see of (ln M, ln R, ln L, ln d)
+    _, size, basis = np.linalg.svd(exponents, full_matrices=False)
+    basis = basis[size > 1e-9]
+    design = exponents @ basis.T
+    measured = [stars.measured[name].take(rows) for name in chosen]
+    fixed, conflict, free = np.zeros((len(rows), len(basis))), np.zeros(len(rows), bool), np.eye(len(basis))
+    if exact.any():
+        quoted = np.stack([m.log_median for m, e in zip(measured, exact, strict=True) if e], axis=1) - reference[exact]
+        fixed = np.einsum("re,se->sr", np.linalg.pinv(design[exact]), quoted)
+        misfit = np.einsum("er,sr->se", design[exact], fixed) - quoted
+        conflict = np.abs(misfit).max(axis=1) > _EXACT_TOLERANCE
+        _, size, directions = np.linalg.svd(design[exact])
+        rank = int((size > 1e-9).sum())
+        free = directions[rank:].T
+    base = reference + np.einsum("jr,sr->sj", design, fixed)
+    design = design @ free
+    # a measured value of something that exact values fix carries no information
+    kept = np.flatnonzero(~exact & (np.abs(design).max(axis=1, initial=0.0) > 1e-9))
+    names = [need.name for need in given]
+    wanted = np.array([need.monomials[0] for need in given]).reshape(len(given), len(LATENTS))
+    structured = [OUTPUTS[name].carries_structure(conventions) for name in names]
+    constant = [
+        OUTPUTS[name].log_constant(conventions) + np.log(OUTPUTS[name].factor(conventions)) for name in names
+    ]
+    known = [n for n, latent in enumerate(LATENTS) if determined(tuple(np.eye(len(LATENTS))[n]), chosen)]
+    latent = np.eye(len(LATENTS))[known]
+    if LATENTS.index("mass") in known or not structure.needs_mass:
+        names, structured, constant = [*names, COEFFICIENT], [*structured, True], [*constant, 0.0]
+        wanted = np.concatenate([wanted, np.zeros((1, len(LATENTS)))])
+    problem = Problem(
+        rows=rows,
+        key=stars.key[rows],
+        inputs=tuple(chosen[j] for j in kept),
+        measured=tuple(measured[j] for j in kept),
+        design=design[kept],
+        base=base[:, kept],
+        correlation=_correlation(stars, rows, [chosen[j] for j in kept]),
+        outputs=tuple(names),
+        weights=wanted @ basis.T @ free,
+        constant=np.array(constant) + np.einsum("or,sr->so", wanted @ basis.T, fixed),
+        structured=np.array(structured, bool),
+        latents=tuple(LATENTS[n] for n in known),
+        latent_weights=latent @ basis.T @ free,
+        latent_constant=np.einsum("lr,sr->sl", latent @ basis.T, fixed),
+        structure=structure,
+    )
+    return problem, conflict
+
+
+def _correlation(stars: Stars, rows, inputs) -> np.ndarray | None:
+    """Correlation matrices, (star, input, input); None if no correlation was given."""
+    matrix = None
+    for (first, second), values in stars.correlation.items():
+        if first in inputs and second in inputs and (values[rows] != 0.0).any():
+            if matrix is None:
+                matrix = np.tile(np.eye(len(inputs)), (len(rows), 1, 1))
+            i, j = inputs.index(first), inputs.index(second)
+            matrix[:, i, j] = matrix[:, j, i] = values[rows]
+    return matrix
+
+
+def _invalid_correlations(stars: Stars, problem: Problem) -> np.ndarray:
+    """Where correlations are not numbers in [-1, 1] or not positive semidefinite, (star,).
+
+    A correlation of two observables is checked also where one of them is exact or left aside.
+    """
+    invalid = np.zeros(len(problem), bool)
+    for values in stars.correlation.values():
+        here = values[problem.rows]
+        invalid |= ~(np.abs(here) <= 1.0)
+    if problem.correlation is not None:
+        safe = np.where(invalid[:, None, None], np.eye(len(problem.inputs)), problem.correlation)
+        least = np.linalg.eigvalsh(safe)[:, 0]
+        invalid |= least < (-_SEMIDEFINITE if problem.over_determined else _SEMIDEFINITE)
+    return invalid
+
+
+def _applicable(problems, stars: Stars, structure: StructureModel, notes: Notes) -> list[Problem]:
+    """Take out the stars to which the structure model does not apply, decided on the medians."""
+    limits = structure.applies_to
+    if limits.mass is None and not limits.evolutionary_state:
+        return list(problems)
+    kept = []
+    states = [EvolutionaryState[word.replace("-", "_").upper()] for word in limits.evolutionary_state]
+    for problem in problems:
+        if not problem.structured.any():
+            kept.append(problem)
+            continue
+        outside = np.zeros(len(problem), bool)
+        if states:
+            state = stars.evolutionary_state[problem.rows]
+            outside |= (state != EvolutionaryState.UNKNOWN) & ~np.isin(state, states)
+        if limits.mass is not None:
+            mass = np.exp(problem.log_latents(problem.log_median)[:, problem.latent("mass")])
+            outside |= (mass < limits.mass[0]) | (mass > limits.mass[1])
+        where = [f"{limits.mass[0]:g} to {limits.mass[1]:g} solar masses"] if limits.mass else []
+        where += ["stars stated " + " or ".join(limits.evolutionary_state)] if states else []
+        sentence = f"prior {structure.name} applies only to {', '.join(where)}; choose another prior"
+        plain = np.flatnonzero(~problem.structured)
+        if len(plain):  # what carries no structure stays available
+            kept.append(problem.take(np.flatnonzero(outside)).only(plain))
+            lacking = ", ".join(n for n in problem.outputs if n not in kept[-1].outputs and n != COEFFICIENT)
+            notes.set(problem.rows[outside], Status.PARTIAL, f"{lacking} not given: {sentence}")
+        else:
+            notes.set(problem.rows[outside], Status.OUTSIDE_CALIBRATION, sentence)
+        kept.append(problem.take(np.flatnonzero(~outside)))
+    return [problem for problem in kept if len(problem)]

@@ -1,0 +1,64 @@
+"""What every engine gives back: distributions of ln Y over (star, output)."""
+
+from collections.abc import Mapping
+from typing import Protocol, runtime_checkable
+
+import numpy as np
+
+from stellerg.problem import Problem
+
+__all__ = ["ACCEPTED", "Answer", "Engine"]
+
+ACCEPTED = 0  # index of the empty reason in every engine's table of reasons
+
+
+@runtime_checkable
+class Answer(Protocol):
+    """Distributions of the natural logarithm of each output.
+
+    Attributes
+    ----------
+    problem : Problem
+    status : ndarray of uint8, (star,)
+        OK, or NOT_CONVERGED.
+    log_mean, log_sd : ndarray, (star, output)
+        Mean and standard deviation of ln Y.
+    numerical_error : ndarray, (star, output)
+        Estimated error of the cumulative at a reported quantile (a standard error for draws).
+    diagnostics : mapping of str to ndarray, (star,)
+    """
+
+    problem: Problem
+    status: np.ndarray
+    log_mean: np.ndarray
+    log_sd: np.ndarray
+    numerical_error: np.ndarray
+    diagnostics: Mapping[str, np.ndarray]
+
+    def quantile(self, p: np.ndarray) -> np.ndarray:
+        """ln Y at cumulative probabilities p (m,): (star, output, m)."""
+        ...
+
+    def cumulative(self, log_value: np.ndarray) -> np.ndarray:
+        """Cumulative probability at ln Y (star, output, m)."""
+        ...
+
+    def density(self, log_value: np.ndarray) -> np.ndarray:
+        """Density over ln Y at (star, output, m)."""
+        ...
+
+
+@runtime_checkable
+class Engine(Protocol):
+    """A method. Its fields are all its options."""
+
+    name: str
+    reasons: tuple[str, ...]
+
+    def accepts(self, problem: Problem) -> np.ndarray:
+        """Index into `reasons` for each star: 0 where the engine answers, else why not."""
+        ...
+
+    def solve(self, problem: Problem) -> Answer:
+        """Answer a problem all of whose stars are accepted."""
+        ...

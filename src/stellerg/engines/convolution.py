@@ -1,0 +1,114 @@
+"""The measured part of ln Y for independent inputs of any shape, on a grid scaled to each star.
+
+ln Y's measured part is a sum of independent terms w_j ln(obs_j). Their characteristic functions are
+multiplied: normal terms in closed form, wide terms by the discrete Fourier transform of their sampled
+densities (spectrally accurate for smooth densities), narrow ones by Gauss-Hermite nodes in the normal score.
+"""
+
+import numpy as np
+from scipy import fft
+
+from stellerg.engines.parts import GridPart
+from stellerg.measured import Measured
+
+__all__ = ["convolve"]
+
+_CELLS = 10.0  # grid cells in one standard deviation of the sum
+_NARROW = 1.5  # terms narrower than this many cells are not sampled
+_REACH = 5.0  # normal scores kept of each sampled term: 6e-7 lies outside
+_SIZES = 2 ** np.arange(7, 13)  # grid sizes
+_HERMITE, _HERMITE_WEIGHT = np.polynomial.hermite_e.hermegauss(24)
+_HERMITE_WEIGHT = _HERMITE_WEIGHT / _HERMITE_WEIGHT.sum()
+_WINDOW = 1e-9  # probability outside the window of the result
+_BATCH = 512  # stars transformed together, for the sake of the cache; no result depends on it
+
+
+def convolve(
+    terms: list[tuple[Measured, np.ndarray, np.ndarray]], mean: np.ndarray, normal_sd: np.ndarray
+) -> tuple[GridPart, np.ndarray]:
+    """Distribution of a sum of independent terms.
+
+    Parameters
+    ----------
+    terms : list of (Measured, weights, included)
+        Each adds ``weight * (ln obs - mean of ln obs)`` to the stars where `included`; (star,) each.
+    mean : ndarray, (star,)
+        Mean of the sum.
+    normal_sd : ndarray, (star,)
+        Standard deviation of the normal term of the sum, 0 where there is none.
+
+    Returns
+    -------
+    part : GridPart
+    error : ndarray, (star,)
+        Estimate of the error in the cumulative: what lies outside the grid and beyond its frequencies.
+    """
+    low, high = -7.0 * normal_sd, 7.0 * normal_sd
+    variance = normal_sd**2
+    for measured, weight, included in terms:
+        ends = weight[:, None] * (measured.log_quantile(np.array([[-_REACH, _REACH]])) - measured.log_mean[:, None])
+        low = low + np.where(included, ends.min(axis=1), 0.0)
+        high = high + np.where(included, ends.max(axis=1), 0.0)
+        variance = variance + np.where(included, (weight * measured.log_sd) ** 2, 0.0)
+    size = np.searchsorted(_SIZES, _CELLS * (high - low) / np.sqrt(variance))
+    size = _SIZES[np.minimum(size, len(_SIZES) - 1)]
+    step = (high - low) / size
+    largest = int(size.max(initial=0))
+    table = np.ones((len(mean), largest))
+    slope = np.zeros((len(mean), largest))
+    error = np.zeros(len(mean))
+    for number in np.unique(size):
+        rows = np.flatnonzero(size == number)
+        for start in range(0, len(rows), _BATCH):
+            some = rows[start : start + _BATCH]
+            chosen = [(m.take(some), w[some], i[some]) for m, w, i in terms if i[some].any()]
+            cumulative, density, error[some] = _transform(chosen, low[some], step[some], normal_sd[some], int(number))
+            table[some, :number], slope[some, :number] = cumulative, density
+    first = np.argmax(table > _WINDOW, axis=1)
+    last = np.argmax(table >= 1.0 - _WINDOW, axis=1)
+    begin = low + mean
+    part = GridPart(
+        start=begin,
+        step=step,
+        lower=begin + np.maximum(first - 1, 0) * step,
+        upper=begin + np.where(table[:, -1] > 1.0 - _WINDOW, last, size - 1) * step,
+        table=table,
+        slope=slope,
+    )
+    return part, error
+
+
+def _transform(terms, low, step, normal_sd, size):
+    """Cumulative and density on one grid size, and the error estimate."""
+    frequency = (2.0 * np.pi / size) * np.arange(size // 2 + 1) / step[:, None]
+    spectrum = np.exp(-0.5 * (frequency * normal_sd[:, None]) ** 2).astype(complex)
+    points = low[:, None] + step[:, None] * np.arange(size)
+    sampled = np.zeros(len(low))
+    outside = np.zeros(len(low))
+    for measured, weight, included in terms:
+        wide = included & (np.abs(weight) * measured.log_sd > _NARROW * step)
+        for rows, wide_here in ((np.flatnonzero(wide), True), (np.flatnonzero(included & ~wide), False)):
+            if not rows.size:
+                continue
+            here, scale = measured.take(rows), weight[rows, None]
+            if wide_here:
+                where = points[rows] / scale + here.log_mean[:, None]
+                density = np.exp(here.log_density(where)) * (step[rows, None] / np.abs(scale))
+                outside[rows] += np.abs(1.0 - density.sum(axis=-1))
+                spectrum[rows] *= fft.rfft(density, axis=-1)
+                sampled[rows] += 1.0
+            else:
+                nodes = scale * (here.log_quantile(_HERMITE[None, :]) - here.log_mean[:, None])
+                phase = np.exp(-1j * frequency[rows, None, :] * nodes[:, :, None])
+                spectrum[rows] *= (_HERMITE_WEIGHT[None, :, None] * phase).sum(axis=1)
+    # every sampled density carries the phase of its first point; one of them belongs to the result
+    spectrum *= np.exp(-1j * frequency * (low * (sampled - 1.0))[:, None])
+    spectrum /= spectrum[:, :1].real
+    high_frequencies = np.abs(spectrum[:, -(size // 16) :]).max(axis=1)
+    density = fft.irfft(spectrum, n=size, axis=-1) / step[:, None]
+    # the integral, frequency by frequency; the mean density 1/(size step) integrates to a ramp
+    integrated = np.zeros_like(spectrum)
+    integrated[:, 1:-1] = spectrum[:, 1:-1] / (1j * frequency[:, 1:-1])
+    ripple = fft.irfft(integrated, n=size, axis=-1) / step[:, None]
+    cumulative = np.arange(size) / size + ripple - ripple[:, :1]
+    return np.clip(cumulative, 0.0, 1.0), np.maximum(density, 0.0), outside + high_frequencies

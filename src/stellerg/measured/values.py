@@ -1,0 +1,301 @@
+"""Measured: one quantity of many stars, each a value with the distribution that its error assigns to it."""
+
+from dataclasses import dataclass, field, fields
+from functools import cached_property
+
+import numpy as np
+
+from stellerg.errors import InputError
+from stellerg.measured import shapes
+from stellerg.measured.shapes import SHAPE_WORDS, Scale, Shape
+from stellerg.status import Status
+
+__all__ = ["Measured", "assign"]
+
+LN10 = float(np.log(10.0))
+# d ln(quantity)/d(quoted value); a magnitude is -2.5 log10 of a flux or luminosity
+LOG_PER_UNIT = {Scale.DEX: LN10, Scale.MAGNITUDE: -0.4 * LN10}
+
+# Trapezoid in the normal score: spectrally accurate for smooth integrands, 1e-18 of the probability lies outside.
+_SCORE = np.linspace(-9.0, 9.0, 73)
+_WEIGHT = np.exp(-0.5 * _SCORE**2)
+_WEIGHT /= _WEIGHT.sum()
+
+
+@dataclass(frozen=True)
+class Measured:
+    """One quantity of many stars in the scale in which it is quoted.
+
+    Attributes
+    ----------
+    value, upper, lower : ndarray, (star,)
+        Quoted value, upper and lower error (equal when symmetric; NaN where there is none).
+    shape : ndarray of uint8, (star,)
+        `Shape`: ABSENT where nothing usable was given.
+    scale : Scale
+        Linear, dex or magnitude; the same for all stars.
+    fault : ndarray of uint8, (star,)
+        `Status.OK`, or why the cell cannot be used (its shape is then ABSENT).
+    """
+
+    value: np.ndarray
+    upper: np.ndarray
+    lower: np.ndarray
+    shape: np.ndarray
+    scale: Scale = Scale.LINEAR
+    fault: np.ndarray = field(default_factory=lambda: np.zeros(0, np.uint8))
+
+    def __post_init__(self):
+        if self.fault.shape != self.shape.shape:
+            object.__setattr__(self, "fault", np.zeros(self.shape.shape, np.uint8))
+
+    def __len__(self) -> int:
+        return len(self.value)
+
+    def take(self, rows: np.ndarray) -> "Measured":
+        """Return the rows asked for."""
+        parts = {f.name: getattr(self, f.name) for f in fields(self)}
+        return Measured(**{k: v if k == "scale" else v[rows] for k, v in parts.items()})
+
+    @property
+    def usable(self) -> np.ndarray:
+        """Whether a row holds a measurement, (star,)."""
+        return self.shape != Shape.ABSENT
+
+    @property
+    def exact(self) -> np.ndarray:
+        """Whether a row holds an exact value, (star,)."""
+        return self.shape == Shape.EXACT
+
+    @property
+    def log_normal(self) -> np.ndarray:
+        """Whether ln(quantity) is normal or exact, (star,)."""
+        return (self.shape == Shape.LOGNORMAL) | self.exact
+
+    @cached_property
+    def removed(self) -> np.ndarray:
+        """Probability below zero that the restriction to positive values removed, (star,)."""
+        removed = np.zeros(len(self))
+        if self.scale is Scale.LINEAR:
+            for shape, rows in self._by_shape():
+                removed[rows] = shapes.probability_below_zero(shape, *self._parameters(rows))[:, 0]
+        return removed
+
+    @cached_property
+    def log_median(self) -> np.ndarray:
+        """Logarithm of the quantity at normal score 0, (star,)."""
+        return self.log_quantile(np.zeros((len(self), 1)))[:, 0]
+
+    @cached_property
+    def log_mean(self) -> np.ndarray:
+        """Mean of ln(quantity), (star,)."""
+        return self._moments[0]
+
+    @cached_property
+    def log_sd(self) -> np.ndarray:
+        """Standard deviation of ln(quantity), (star,)."""
+        return self._moments[1]
+
+    @cached_property
+    def expectation(self) -> np.ndarray:
+        """Expectation of the quantity in its quoted scale, (star,)."""
+        return self._moments[2]
+
+    @cached_property
+    def standard_deviation(self) -> np.ndarray:
+        """Standard deviation of the quantity in its quoted scale, (star,)."""
+        return self._moments[3]
+
+    @cached_property
+    def _moments(self) -> np.ndarray:
+        """Means and standard deviations of ln(quantity) and of the quoted quantity, (4, star)."""
+        moments = np.full((4, len(self)), np.nan)
+        for shape, rows in self._by_shape():
+            # normal in the scale where the moments are wanted: exact formulas; else the trapezoid below
+            quoted = self._quoted(shape, _SCORE[None, :], rows)
+            logarithm = self._log(quoted)
+            if shape in (Shape.EXACT, Shape.LOGNORMAL):
+                sd = np.abs(self._log_slope(rows)) if shape is Shape.LOGNORMAL else np.zeros(len(rows))
+                moments[0, rows], moments[1, rows] = self._log(self.value[rows]), sd
+            else:
+                moments[0, rows], moments[1, rows] = _mean_and_sd(logarithm)
+            if shape is Shape.LOGNORMAL and self.scale is Scale.LINEAR:
+                # expectation and variance of a log-normal: exact
+                moments[2, rows] = self.value[rows] * np.exp(0.5 * sd**2)
+                moments[3, rows] = moments[2, rows] * np.sqrt(np.expm1(sd**2))
+            elif shape in (Shape.EXACT, Shape.LOGNORMAL):
+                moments[2, rows] = self.value[rows]
+                moments[3, rows] = 0.0 if shape is Shape.EXACT else self.upper[rows]
+            else:
+                moments[2, rows], moments[3, rows] = _mean_and_sd(quoted)
+        return moments
+
+    def log_quantile(self, score: np.ndarray) -> np.ndarray:
+        """ln(quantity) at normal scores.
+
+        Parameters
+        ----------
+        score : ndarray, (star, k) or (1, k)
+
+        Returns
+        -------
+        ndarray, (star, k)
+            Decreasing in the score for magnitudes.
+        """
+        out = np.full((len(self), score.shape[1]), np.nan)
+        for shape, rows in self._by_shape():
+            here = score if len(score) == 1 else score[rows]
+            if shape is Shape.LOGNORMAL:
+                out[rows] = self._log(self.value[rows])[:, None] + self._log_slope(rows)[:, None] * here
+            else:
+                out[rows] = self._log(self._quoted(shape, here, rows))
+        return out
+
+    def score(self, logarithm: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Normal score of ln(quantity), and ln |d score/d ln(quantity)|: the inverse of `log_quantile`.
+
+        Parameters
+        ----------
+        logarithm : ndarray, (star, k)
+
+        Returns
+        -------
+        score, log_slope : ndarray, (star, k)
+            Infinite, and minus infinity, beyond a hard end of the distribution.
+        """
+        score = np.full(logarithm.shape, np.nan)
+        slope = np.full(logarithm.shape, np.nan)
+        for shape, rows in self._by_shape():
+            here = logarithm[rows]
+            if shape is Shape.LOGNORMAL:
+                step = self._log_slope(rows)[:, None]
+                score[rows] = (here - self._log(self.value[rows])[:, None]) / step
+                slope[rows] = -np.log(np.abs(step)) + 0.0 * here
+                continue
+            parameters = self._parameters(rows)
+            quoted = np.exp(here) if self.scale is Scale.LINEAR else here / LOG_PER_UNIT[self.scale]
+            base = shapes.base_score(shape, quoted, *parameters)
+            score[rows], restricting = shapes.restrict(base, self.removed[rows][:, None])
+            inside = np.isfinite(score[rows])
+            base_slope = shapes.log_base_slope(shape, np.where(inside, base, 0.0), quoted, *parameters)
+            to_log = here if self.scale is Scale.LINEAR else -np.log(abs(LOG_PER_UNIT[self.scale]))
+            slope[rows] = np.where(inside, base_slope + restricting + to_log, -np.inf)
+        return score, slope
+
+    def log_density(self, logarithm: np.ndarray) -> np.ndarray:
+        """Logarithm of the density over ln(quantity), (star, k)."""
+        score, slope = self.score(logarithm)
+        return slope - 0.5 * score**2 - 0.5 * np.log(2.0 * np.pi)
+
+    def _by_shape(self):
+        """Yield each shape present with its rows (at most five passes, never one a star)."""
+        for code in (Shape.EXACT, Shape.NORMAL, Shape.LOGNORMAL, Shape.THREE_QUANTILE, Shape.SPLIT_NORMAL):
+            rows = np.flatnonzero(self.shape == code)
+            if rows.size:
+                yield code, rows
+
+    def _parameters(self, rows):
+        return self.value[rows][:, None], self.upper[rows][:, None], self.lower[rows][:, None]
+
+    def _log_slope(self, rows):
+        """d ln(quantity)/d score of the log-normal rows."""
+        if self.scale is Scale.LINEAR:
+            return self.upper[rows] / self.value[rows]
+        return LOG_PER_UNIT[self.scale] * self.upper[rows]
+
+    def _log(self, quoted):
+        if self.scale is Scale.LINEAR:
+            return np.log(quoted)
+        return LOG_PER_UNIT[self.scale] * quoted
+
+    def _quoted(self, shape, score, rows):
+        value, upper, lower = self._parameters(rows)
+        if shape is Shape.LOGNORMAL and self.scale is Scale.LINEAR:
+            return value * np.exp(upper / value * score)
+        if self.scale is not Scale.LINEAR or shape is Shape.EXACT:
+            return shapes.base_value(shape, score, value, upper, lower)
+        base = shapes.unrestrict(score, self.removed[rows][:, None])
+        # far in the lower tail the restricted value may round to zero: the smallest positive share is kept
+        return np.maximum(shapes.base_value(shape, base, value, upper, lower), 1e-16 * value)
+
+
+def _mean_and_sd(values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Mean and standard deviation of values at `_SCORE`, (star, node) to (star,)."""
+    mean = (values * _WEIGHT).sum(axis=-1)
+    return mean, np.sqrt((np.square(values - mean[:, None]) * _WEIGHT).sum(axis=-1))
+
+
+def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, fault=None) -> Measured:
+    """Assign distributions to quoted values: the rules of shapes and faults in one place.
+
+    Parameters
+    ----------
+    value, upper, lower : array_like, (star,)
+        As quoted; NaN where nothing was given.
+    scale : Scale
+    exact : array_like of bool, (star,), optional
+        Values stated to have no error.
+    shape : str or array_like of str, optional
+        Shape by name, for all rows where it fits or for each row ('' or None: the default). The default is
+        `normal` for symmetric errors (`lognormal` in dex and magnitudes), else `three-quantile`.
+    fault : array_like of uint8, (star,), optional
+        Faults found while reading.
+
+    Raises
+    ------
+    InputError
+        If a shape given for all rows does not exist.
+    """
+    value, upper, lower = (np.array(x, float, ndmin=1) for x in (value, upper, lower))
+    value, upper, lower = (np.array(x) for x in np.broadcast_arrays(value, upper, lower))
+    fault = np.zeros(len(value), np.uint8) if fault is None else np.array(fault, np.uint8)
+    exact = np.zeros(len(value), bool) if exact is None else np.array(np.broadcast_to(exact, value.shape))
+    asymmetric = upper != lower
+    code, unknown = _shape_codes(shape, asymmetric)
+    exact |= code == Shape.EXACT
+    given = ~np.isnan(value) | (fault != Status.OK)
+    default = np.where(asymmetric, Shape.THREE_QUANTILE, Shape.NORMAL)
+    code = np.where(exact, Shape.EXACT, np.where(code == Shape.ABSENT, default, code))
+    if scale is not Scale.LINEAR:
+        code = np.where(code == Shape.NORMAL, Shape.LOGNORMAL, code)
+    # equal errors make the asymmetric shapes normal as quoted: one name for one distribution
+    code = np.where(
+        ~asymmetric & np.isin(code, (Shape.THREE_QUANTILE, Shape.SPLIT_NORMAL)),
+        Shape.NORMAL if scale is Scale.LINEAR else Shape.LOGNORMAL,
+        code,
+    )
+    with np.errstate(invalid="ignore"):
+        for status, wrong in (
+            (Status.NOT_A_NUMBER, np.isinf(value) | np.isinf(upper) | np.isinf(lower)),
+            (Status.NOT_POSITIVE, (value <= 0.0) if scale is Scale.LINEAR else np.zeros(len(value), bool)),
+            (Status.NOT_POSITIVE, ~exact & ((upper < 0.0) | (lower < 0.0))),
+            (Status.ERROR_MISSING, ~exact & (np.isnan(upper) | np.isnan(lower))),
+            (Status.ERROR_ZERO, ~exact & ((upper == 0.0) | (lower == 0.0))),
+            (Status.SHAPE_INVALID, unknown),
+            (Status.SHAPE_INVALID, asymmetric & np.isin(code, (Shape.NORMAL, Shape.LOGNORMAL))),
+        ):
+            fault = np.where((fault == Status.OK) & given & wrong, status, fault)
+    code = np.where(given & (fault == Status.OK), code, Shape.ABSENT).astype(np.uint8)
+    return Measured(value, upper, lower, code, scale, fault.astype(np.uint8))
+
+
+def _shape_codes(shape, asymmetric: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Codes of shapes given by name (ABSENT where none), and where the name is unknown.
+
+    One name for all rows applies where it fits: a symmetric shape to symmetric errors, an asymmetric one to
+    asymmetric errors. A name in a row is meant for that row.
+    """
+    if shape is None or isinstance(shape, str):
+        if shape and SHAPE_WORDS.get(shape, Shape.EXACT) is Shape.EXACT:
+            choice = ", ".join(word for word, code in SHAPE_WORDS.items() if code is not Shape.EXACT)
+            raise InputError(f"shape: {shape!r} cannot be the shape of all errors; choose one of {choice}")
+        code = SHAPE_WORDS[shape] if shape else Shape.ABSENT
+        fits = asymmetric == (code in (Shape.THREE_QUANTILE, Shape.SPLIT_NORMAL))
+        return np.where(fits, code, Shape.ABSENT).astype(np.uint8), np.zeros(len(asymmetric), bool)
+    words = np.array(["" if word is None else str(word).strip() for word in shape])
+    code = np.zeros(len(asymmetric), np.uint8)
+    unknown = words != ""
+    for word, member in SHAPE_WORDS.items():
+        here = words == word
+        code[here], unknown[here] = member, False
+    return code, unknown

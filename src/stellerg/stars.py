@@ -1,0 +1,195 @@
+"""Stars: what was measured of one or many stars, star axis first."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from enum import IntEnum
+
+import numpy as np
+
+from stellerg.errors import InputError
+from stellerg.inputs import measured_from
+from stellerg.keyed_random import hash_identifiers
+from stellerg.measured import Measured
+from stellerg.observables import OBSERVABLES, SolarReferences
+
+__all__ = ["EvolutionaryState", "Stars", "state_codes"]
+
+
+class EvolutionaryState(IntEnum):
+    """What is stated about a star's evolution; masses and radii alone cannot tell a giant from a young star."""
+
+    UNKNOWN = 0
+    MAIN_SEQUENCE = 1
+    PRE_MAIN_SEQUENCE = 2
+    EVOLVED = 3
+
+
+STATE_WORDS = {state.name.lower().replace("_", "-"): state for state in EvolutionaryState}
+
+
+@dataclass(frozen=True)
+class Stars:
+    """Measurements of stars.
+
+    Attributes
+    ----------
+    identifier : ndarray of str, (star,)
+    measured : dict of str to Measured
+        By observable name; each over all stars, ABSENT where a star has no such measurement.
+    correlation : dict of (str, str) to ndarray, (star,)
+        Correlations of the normal scores of two observables, 0 where none was given.
+    evolutionary_state : ndarray of uint8, (star,)
+        `EvolutionaryState`.
+    solar : SolarReferences
+        For the asteroseismic scaling relations.
+    key : ndarray of uint64, (star,)
+        Hash of the identifier: what randomness is keyed by.
+    """
+
+    identifier: np.ndarray
+    measured: Mapping[str, Measured]
+    correlation: Mapping[tuple[str, str], np.ndarray] = field(default_factory=dict)
+    evolutionary_state: np.ndarray | None = None
+    solar: SolarReferences = field(default_factory=SolarReferences)
+    key: np.ndarray | None = None
+
+    def __post_init__(self):
+        if self.key is None:
+            object.__setattr__(self, "key", hash_identifiers(self.identifier))
+        if self.evolutionary_state is None:
+            object.__setattr__(self, "evolutionary_state", np.zeros(len(self.identifier), np.uint8))
+
+    def __len__(self) -> int:
+        return len(self.identifier)
+
+    @classmethod
+    def of(
+        cls,
+        star=None,
+        *,
+        correlation: Mapping | None = None,
+        shape=None,
+        unit: Mapping[str, str] | None = None,
+        evolutionary_state=None,
+        solar: SolarReferences | None = None,
+        **observables,
+    ) -> "Stars":
+        """Build stars from whatever was measured.
+
+        Parameters
+        ----------
+        star : str or sequence of str, optional
+            Identifiers; the row number (from 1) where none is given.
+        correlation : mapping of (str, str) to float or array_like, optional
+            Correlations between two observables, in [-1, 1]. Correlations that ufloats carry are used too.
+        shape : str or mapping of str to str or sequence of str, optional
+            Shape of the errors, for all observables or by observable.
+        unit : mapping of str to str, optional
+            Units of bare numbers, by observable.
+        evolutionary_state : str or sequence of str, optional
+            main-sequence, pre-main-sequence, evolved or unknown.
+        solar : SolarReferences, optional
+        **observables
+            By name (``mass="1.02 ± 0.03"``, ``radius=(value, error)``, ...): see `measured_from`.
+
+        Raises
+        ------
+        InputError
+            If an observable is unknown, lengths differ, or a state or shape is unknown.
+
+        Examples
+        --------
+        >>> Stars.of("K-7", mass="1.02 ± 0.03", radius="1.05(2)", luminosity="1.10 +0.12 -0.10")  # doctest: +SKIP
+        """
+        for name in observables:
+            if name not in OBSERVABLES:
+                raise InputError(f"{name!r} is not an observable; choose from {', '.join(OBSERVABLES)}")
+        shapes = shape if isinstance(shape, Mapping) else dict.fromkeys(observables, shape)
+        units = unit or {}
+        measured = {
+            name: measured_from(
+                OBSERVABLES[name], given, shape=shapes.get(name), unit=units.get(name, "")
+            )
+            for name, given in observables.items()
+            if given is not None
+        }
+        count = _common_length(measured, star)
+        if star is None:
+            star = np.arange(1, count + 1).astype(str)
+        correlations = _correlations_of_ufloats(observables)
+        correlations.update(correlation or {})
+        return cls(
+            identifier=np.atleast_1d(np.asarray(star)).astype(str),
+            measured=measured,
+            correlation={pair: _correlation(pair, value, measured, count) for pair, value in correlations.items()},
+            evolutionary_state=state_codes(evolutionary_state, count),
+            solar=solar or SolarReferences(),
+        )
+
+    def take(self, rows: np.ndarray) -> "Stars":
+        """Return the rows asked for."""
+        return replace(
+            self,
+            identifier=self.identifier[rows],
+            measured={name: m.take(rows) for name, m in self.measured.items()},
+            correlation={pair: c[rows] for pair, c in self.correlation.items()},
+            evolutionary_state=self.evolutionary_state[rows],
+            key=self.key[rows],
+        )
+
+
+def state_codes(states, count: int) -> np.ndarray:
+    """Codes of evolutionary states given by name, (star,).
+
+    Raises
+    ------
+    InputError
+        If a name is unknown.
+    """
+    words = np.broadcast_to(np.atleast_1d(np.array("" if states is None else states, dtype=str)), (count,))
+    codes = np.zeros(count, np.uint8)
+    unknown = ~np.isin(words, ("", *STATE_WORDS))
+    if unknown.any():
+        row = int(np.flatnonzero(unknown)[0])
+        raise InputError(
+            f"evolutionary_state: {words[row]!r} at row {row + 1} is unknown; choose from {', '.join(STATE_WORDS)}"
+        )
+    for word, state in STATE_WORDS.items():
+        codes[words == word] = state
+    return codes
+
+
+def _common_length(measured: Mapping[str, Measured], star) -> int:
+    lengths = {name: len(m) for name, m in measured.items()}
+    if star is not None:
+        lengths["star"] = len(np.atleast_1d(np.asarray(star)))
+    if not lengths:
+        raise InputError("no measurement was given; give at least one observable, such as mass")
+    if len(set(lengths.values())) > 1:
+        raise InputError(f"columns have different lengths: {lengths}; give one value per star in each")
+    return next(iter(lengths.values()))
+
+
+def _correlation(pair, value, measured: Mapping[str, Measured], count: int) -> np.ndarray:
+    if len(pair) != 2 or pair[0] == pair[1]:
+        raise InputError(f"correlation: {pair!r} must name two different observables")
+    for name in pair:
+        if name not in measured:
+            raise InputError(f"correlation: {name!r} was not given as an observable; give it, or drop the correlation")
+    return np.array(np.broadcast_to(np.asarray(value, float), (count,)))
+
+
+def _correlations_of_ufloats(observables: Mapping) -> dict:
+    """Correlations that single ufloats carry between each other."""
+    from itertools import combinations
+
+    found = {}
+    single = {name: x for name, x in observables.items() if hasattr(x, "nominal_value") and hasattr(x, "derivatives")}
+    if len(single) > 1:
+        import uncertainties
+
+        for (a, x), (b, y) in combinations(single.items(), 2):
+            rho = float(uncertainties.correlation_matrix([x, y])[0, 1]) if x.std_dev and y.std_dev else 0.0
+            if rho != 0.0:
+                found[a, b] = rho
+    return found

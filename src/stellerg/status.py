@@ -1,0 +1,168 @@
+"""What became of a row (status) and what to know about it (flags): one table each.
+
+Both are small integers everywhere inside; words and sentences are looked up when something is written.
+"""
+
+from dataclasses import dataclass
+from enum import IntEnum, IntFlag
+
+import numpy as np
+
+__all__ = ["FLAG_TEXT", "STATUS_TEXT", "Flag", "Status", "carries_results", "flag_words", "status_word"]
+
+
+class Status(IntEnum):
+    """What became of a row. `OK`, `PARTIAL` and `DOUBTFUL` carry results."""
+
+    OK = 0
+    PARTIAL = 1
+    DOUBTFUL = 2
+    UNDERDETERMINED = 3
+    ERROR_MISSING = 4
+    ERROR_ZERO = 5
+    NOT_POSITIVE = 6
+    NOT_A_NUMBER = 7
+    LIMIT_ONLY = 8
+    UNIT_MISSING = 9
+    SHAPE_INVALID = 10
+    CORRELATION_INVALID = 11
+    EXACT_VALUES_CONFLICT = 12
+    PARALLAX_NOT_USABLE = 13
+    EVOLVED_OR_CONTRACTING = 14
+    OUTSIDE_CALIBRATION = 15
+    NOT_BOUND = 16
+    NOT_CONVERGED = 17
+
+
+class Flag(IntFlag):
+    """What to know about a result that was given."""
+
+    NONE = 0
+    MEASUREMENT_UNUSABLE = 1
+    STRONGLY_ASYMMETRIC = 2
+    POSITIVITY_RESTRICTED = 4
+    PARALLAX_IMPRECISE = 8
+    INCONSISTENT_OBSERVABLES = 16
+    ABOVE_EDDINGTON_LIMIT = 32
+    MASS_OUT_OF_RANGE = 64
+    FEW_EFFECTIVE_DRAWS = 128
+
+
+@dataclass(frozen=True)
+class Text:
+    """A word for a column, and the sentence (with the way out) for a reader."""
+
+    word: str
+    sentence: str
+
+
+STATUS_TEXT: dict[Status, Text] = {
+    Status.OK: Text("ok", "All requested outputs are given."),
+    Status.PARTIAL: Text("partial", "Some requested outputs are given; the others lack a measurement."),
+    Status.DOUBTFUL: Text("doubtful", "Numbers are given, but may be wrong by far: see the sentence."),
+    Status.UNDERDETERMINED: Text("underdetermined", "The measurements do not determine the requested outputs."),
+    Status.ERROR_MISSING: Text(
+        "error-missing",
+        "a value without an error; quote the error, or write 'exact' after a value that has none",
+    ),
+    Status.ERROR_ZERO: Text(
+        "error-zero",
+        "an error of zero; quote the error, or write 'exact' after a value that has none",
+    ),
+    Status.NOT_POSITIVE: Text(
+        "not-positive",
+        "the value must be positive and its errors must not be negative; leave the cell empty if unknown",
+    ),
+    Status.NOT_A_NUMBER: Text(
+        "not-a-number", "the cell cannot be read as a finite number; leave the cell empty if unknown"
+    ),
+    Status.LIMIT_ONLY: Text(
+        "limit-only", "a limit is not a measurement; give a value with its error, or leave the cell empty"
+    ),
+    Status.UNIT_MISSING: Text(
+        "unit-missing", "this quantity has no customary unit, or the unit does not fit; state the unit"
+    ),
+    Status.SHAPE_INVALID: Text(
+        "shape-invalid",
+        "the shape named does not exist or does not fit the errors; upper and lower errors that differ "
+        "need three-quantile or split-normal",
+    ),
+    Status.CORRELATION_INVALID: Text(
+        "correlation-invalid",
+        "the correlations must lie in [-1, 1] and form a positive semidefinite matrix (definite for "
+        "over-determined stars); correct or drop them",
+    ),
+    Status.EXACT_VALUES_CONFLICT: Text(
+        "exact-values-conflict", "values given as exact contradict each other; give at least one an error"
+    ),
+    Status.PARALLAX_NOT_USABLE: Text(
+        "parallax-not-usable", "a parallax of zero or less gives no distance; give a distance instead"
+    ),
+    Status.EVOLVED_OR_CONTRACTING: Text(
+        "evolved-or-contracting",
+        "the star is too large for the main sequence; add the column evolutionary_state",
+    ),
+    Status.OUTSIDE_CALIBRATION: Text(
+        "outside-calibration", "the structure model does not apply to this star; choose another prior"
+    ),
+    Status.NOT_BOUND: Text(
+        "not-bound",
+        "with an adiabatic index of 4/3 or less the total energy is not negative; give a larger "
+        "--adiabatic-index or ask for potential_energy",
+    ),
+    Status.NOT_CONVERGED: Text(
+        "not-converged", "the engine did not reach a usable answer; see its diagnostics or try another engine"
+    ),
+}
+
+FLAG_TEXT: dict[Flag, Text] = {
+    Flag.MEASUREMENT_UNUSABLE: Text(
+        "measurement-unusable",
+        "A measurement that cannot be used was left aside; the others determine the result.",
+    ),
+    Flag.STRONGLY_ASYMMETRIC: Text(
+        "strongly-asymmetric",
+        "An error pair has a ratio outside [1/2, 2]: the quoted numbers hardly fix the distribution (judgement).",
+    ),
+    Flag.POSITIVITY_RESTRICTED: Text(
+        "positivity-restricted",
+        "More than 0.1 % of the probability of a quoted value lay below zero and was removed (judgement).",
+    ),
+    Flag.PARALLAX_IMPRECISE: Text(
+        "parallax-imprecise",
+        "The parallax error exceeds 10 %: its inverse is a poor distance; give a distance (common practice).",
+    ),
+    Flag.INCONSISTENT_OBSERVABLES: Text(
+        "inconsistent-observables",
+        "The redundant measurements disagree: chi-squared probability below 0.01 (judgement).",
+    ),
+    Flag.ABOVE_EDDINGTON_LIMIT: Text(
+        "above-eddington-limit",
+        "With more than 5 % probability L exceeds 3.84e4 (M/Msun) Lsun, the Eddington limit for X = 0.7.",
+    ),
+    Flag.MASS_OUT_OF_RANGE: Text(
+        "mass-out-of-range", "The mass lies below 0.075 or above 150 solar masses (judgement)."
+    ),
+    Flag.FEW_EFFECTIVE_DRAWS: Text(
+        "few-effective-draws",
+        "The weighted draws are worth fewer than 1,000 independent ones: intervals are rough (judgement).",
+    ),
+}
+
+# A row carries results when its status is one of the first three.
+_LAST_WITH_RESULTS = Status.DOUBTFUL
+
+
+def carries_results(status: np.ndarray) -> np.ndarray:
+    """Whether rows carry results: boolean, of the shape of `status`."""
+    return np.asarray(status) <= _LAST_WITH_RESULTS
+
+
+def status_word(status: int) -> str:
+    """Return the word written for a status."""
+    return STATUS_TEXT[Status(status)].word
+
+
+def flag_words(flags: int) -> tuple[str, ...]:
+    """Return the words of the flags set in a bit mask, in the fixed order of the table."""
+    return tuple(text.word for flag, text in FLAG_TEXT.items() if flags & flag)
