@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from stellerg.observables import LATENTS, OBSERVABLES, SELECTION_ORDER
-from stellerg.status import STATUS_TEXT, Status
+from stellerg.status import STATUS_TEXT, VALUE, Status
 
 __all__ = ["Need", "Selection", "determined", "select"]
 
@@ -139,7 +139,7 @@ def _why_not(chosen, faulty, faults, needs, given) -> tuple[Status, str, str]:
         for name in faulty:
             others = [other for other in extended if other != name]
             if name in extended and not need.met_by(others):
-                return faults[name], f"{name}: {STATUS_TEXT[faults[name]].sentence}", name
+                return faults[name], f"{name}{VALUE}: {STATUS_TEXT[faults[name]].sentence}", name
     missing = [
         latent
         for latent in ("mass", "radius", "luminosity")

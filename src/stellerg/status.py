@@ -8,7 +8,10 @@ from enum import IntEnum, IntFlag
 
 import numpy as np
 
-__all__ = ["FLAG_TEXT", "STATUS_TEXT", "Flag", "Status", "carries_results", "flag_words", "status_word"]
+__all__ = ["FLAG_TEXT", "STATUS_TEXT", "VALUE", "Flag", "Status", "carries_results", "flag_words", "status_word"]
+
+
+VALUE = "{value}"  # in a sentence, stands for the value of the cell at fault
 
 
 class Status(IntEnum):
@@ -32,6 +35,7 @@ class Status(IntEnum):
     OUTSIDE_CALIBRATION = 15
     NOT_BOUND = 16
     NOT_CONVERGED = 17
+    ENGINE_REFUSED = 18
 
 
 class Flag(IntFlag):
@@ -112,6 +116,9 @@ STATUS_TEXT: dict[Status, Text] = {
     ),
     Status.NOT_CONVERGED: Text(
         "not-converged", "the engine did not reach a usable answer; see its diagnostics or try another engine"
+    ),
+    Status.ENGINE_REFUSED: Text(
+        "engine-refused", "the engine chosen does not answer this star; choose the one named, or auto"
     ),
 }
 

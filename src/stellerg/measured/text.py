@@ -14,13 +14,13 @@ A unit may follow. It is cut out, not interpreted. Exponents are e, E or Fortran
 The minus signs, plus signs and spaces that come with pasted text count as the plain ones.
 
 What is refused (`NOT_A_NUMBER`), because it has more than one meaning or none: a decimal comma; an error that
-is missing, negative, or without its sign in an upper and lower pair; a single signed error; `~x` and `x:`
-(about x: the error is not stated); `x (3)` with a blank (often the number of a reference); `x ± a %` without
-brackets (a per cent of x, or both in per cent); `5d` without a blank (a day, or a broken exponent);
-`x × 10^-5`; a unit written twice; a unit that holds a number of its own; a second error; a number too large
-or too small for float64; a cell of more than 400 bytes.
+is missing, negative, or without its sign in an upper and lower pair; a single signed error; a second error;
+`~x` and `x:` (about x: the error is not stated); `x (3)` with a blank (often the number of a reference);
+`x ± a %` without brackets (a per cent of x, or both in per cent); `5d` without a blank (a day, or a broken
+exponent); `x × 10^-5`; a unit written twice, or one that holds a separate number or a decimal power; a number
+too large or too small for float64; a cell of more than 400 bytes.
 
-Everything is a few passes of linear-time regular expressions (RE2) over the column; none is over cells.
+All is done in a few passes of linear-time regular expressions (RE2) over the column.
 """
 
 from dataclasses import dataclass
@@ -202,12 +202,11 @@ class _Column:
         good = good & ~np.isnan(value)
         if upper is not None:
             good &= ~(np.isnan(upper) | np.isnan(lower))
-            kind = np.where(upper == lower, TextKind.SYMMETRIC, TextKind.ASYMMETRIC)[good]
             self.upper[rows[good]], self.lower[rows[good]] = upper[good], lower[good]
-        self.kind[rows[good]], self.value[rows[good]] = kind, value[good]
+        self.value[rows[good]] = value[good]
+        self.kind[rows[good]] = np.broadcast_to(kind, good.shape)[good]
         if unit is not None:
-            place = self._places + np.arange(len(unit))
-            self._place[rows[good]] = place[good]
+            self._place[rows[good]] = self._places + np.flatnonzero(good)
             self._pieces.append(unit)
             self._places += len(unit)
 
@@ -223,14 +222,15 @@ def _read_symmetric(column, rows, parts):
     unit, good = _unit(parts["rest"])
     error = _numbers(parts["upper"])
     good &= _brackets_agree(parts, unit)
-    column.write(rows, None, _numbers(parts["value"]), error, error, good, unit)
+    column.write(rows, TextKind.SYMMETRIC, _numbers(parts["value"]), error, error, good, unit)
 
 
 def _read_asymmetric(column, rows, parts):
     unit, good = _unit(parts["rest"])
     good &= _brackets_agree(parts, unit)
     value, upper, lower = (_numbers(parts[name]) for name in ("value", "upper", "lower"))
-    column.write(rows, None, value, upper, lower, good, unit)
+    kind = np.where(upper == lower, TextKind.SYMMETRIC, TextKind.ASYMMETRIC)
+    column.write(rows, kind, value, upper, lower, good, unit)
 
 
 def _read_last_places(column, rows, parts):
@@ -248,7 +248,7 @@ def _read_last_places(column, rows, parts):
         _numbers(pc.binary_join_element_wise(digits, pc.cast(ten, pa.large_string()), _TEN_TO))
         for digits, ten in ((mantissa, power), (error, error_power))
     )
-    column.write(rows, None, value, error, error, good, unit)
+    column.write(rows, TextKind.SYMMETRIC, value, error, error, good, unit)
 
 
 def _read_limit(column, rows, parts):
@@ -267,9 +267,8 @@ def _read_bare(column, rows, parts):
         twice = _mask(pc.and_(_written(before), _written(after)))
         rest = pc.if_else(pa.array(exact), pc.binary_join_element_wise(before, after, _NOTHING), rest)
     unit, good = _unit(rest)
-    good &= ~twice & ~np.isnan(value)
-    kind = np.where(exact, TextKind.EXACT, TextKind.VALUE_ONLY)[good]
-    column.write(rows, kind, value, good=good, unit=unit)
+    kind = np.where(exact, TextKind.EXACT, TextKind.VALUE_ONLY)
+    column.write(rows, kind, value, good=good & ~twice, unit=unit)
 
 
 # joining needs separators of the type of the texts
@@ -294,9 +293,11 @@ def _strings(cells) -> pa.Array:
         try:
             return _strings(pa.array(cells, pa.large_string()))
         except (pa.ArrowInvalid, pa.ArrowTypeError) as error:
-            raise InputError(
-                f"cells: a column of texts or None is wanted ({error}); pass numbers as numbers"
-            ) from error
+            message = f"cells: a column of texts or None is wanted ({error}); pass numbers as numbers"
+            raise InputError(message) from error
+        except UnicodeEncodeError as error:
+            message = f"cells: texts must be Unicode ({error}); decode the file with errors='replace'"
+            raise InputError(message) from error
     kind = cells.type.value_type if pa.types.is_dictionary(cells.type) else cells.type
     if kind not in (pa.string(), pa.large_string(), pa.string_view(), pa.null()):
         raise InputError(f"cells: a column of texts is wanted, got the type {kind}; pass numbers as numbers")

@@ -113,10 +113,10 @@ class Measured:
         for shape, rows in self._by_shape():
             # normal in the scale where the moments are wanted: exact formulas; else the trapezoid below
             quoted = self._quoted(shape, _SCORE[None, :], rows)
-            logarithm = self._log(quoted)
+            logarithm = self.to_log(quoted)
             if shape in (Shape.EXACT, Shape.LOGNORMAL):
                 sd = np.abs(self._log_slope(rows)) if shape is Shape.LOGNORMAL else np.zeros(len(rows))
-                moments[0, rows], moments[1, rows] = self._log(self.value[rows]), sd
+                moments[0, rows], moments[1, rows] = self.to_log(self.value[rows]), sd
             else:
                 moments[0, rows], moments[1, rows] = _mean_and_sd(logarithm)
             if shape is Shape.LOGNORMAL and self.scale is Scale.LINEAR:
@@ -146,9 +146,9 @@ class Measured:
         for shape, rows in self._by_shape():
             here = score if len(score) == 1 else score[rows]
             if shape is Shape.LOGNORMAL:
-                out[rows] = self._log(self.value[rows])[:, None] + self._log_slope(rows)[:, None] * here
+                out[rows] = self.to_log(self.value[rows])[:, None] + self._log_slope(rows)[:, None] * here
             else:
-                out[rows] = self._log(self._quoted(shape, here, rows))
+                out[rows] = self.to_log(self._quoted(shape, here, rows))
         return out
 
     def score(self, logarithm: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -169,7 +169,7 @@ class Measured:
             here = logarithm[rows]
             if shape is Shape.LOGNORMAL:
                 step = self._log_slope(rows)[:, None]
-                score[rows] = (here - self._log(self.value[rows])[:, None]) / step
+                score[rows] = (here - self.to_log(self.value[rows])[:, None]) / step
                 slope[rows] = -np.log(np.abs(step)) + 0.0 * here
                 continue
             parameters = self._parameters(rows)
@@ -203,10 +203,19 @@ class Measured:
             return self.upper[rows] / self.value[rows]
         return LOG_PER_UNIT[self.scale] * self.upper[rows]
 
-    def _log(self, quoted):
+    def to_log(self, quoted):
+        """ln(quantity) of a value in the quoted scale."""
         if self.scale is Scale.LINEAR:
             return np.log(quoted)
         return LOG_PER_UNIT[self.scale] * quoted
+
+    def to_log_of_variable(self, quoted, log):
+        """ln(quantity) of one value that carries its own arithmetic, given the logarithm that goes with it."""
+        return log(quoted) if self.scale is Scale.LINEAR else LOG_PER_UNIT[self.scale] * quoted
+
+    def log_derivative(self, quoted):
+        """d ln(quantity)/d(quoted value)."""
+        return 1.0 / quoted if self.scale is Scale.LINEAR else LOG_PER_UNIT[self.scale] + 0.0 * quoted
 
     def _quoted(self, shape, score, rows):
         value, upper, lower = self._parameters(rows)

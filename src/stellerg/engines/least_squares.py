@@ -1,0 +1,124 @@
+"""Least squares in normal scores: the point where chi^2 = z' C^-1 z is least, for all stars at once.
+
+Levenberg-Marquardt (Marquardt 1963, doi:10.1137/0111030) with a fixed number of steps; a step that does not
+lower chi^2, or leaves the support of a distribution, is not taken and the damping grows.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import chdtrc
+
+from stellerg.problem import Problem
+
+__all__ = ["Fit", "fit", "whitened_scores"]
+
+_STEPS = 60
+_CONVERGED = 1e-6  # largest whitened gradient at an accepted minimum
+
+
+@dataclass(frozen=True)
+class Fit:
+    """The least-squares point.
+
+    Attributes
+    ----------
+    parameters : ndarray, (star, parameter)
+    jacobian : ndarray, (star, input, parameter)
+        Derivative of the whitened scores.
+    chi2, probability : ndarray, (star,)
+    degrees_of_freedom : int
+    converged : ndarray of bool, (star,)
+    """
+
+    parameters: np.ndarray
+    jacobian: np.ndarray
+    chi2: np.ndarray
+    probability: np.ndarray
+    degrees_of_freedom: int
+    converged: np.ndarray
+
+
+def root_of_precision(problem: Problem) -> np.ndarray | None:
+    """L with L' L = C^-1, (star, input, input); None for independent inputs."""
+    if problem.correlation is None:
+        return None
+    values, vectors = np.linalg.eigh(problem.correlation)
+    return np.swapaxes(vectors, 1, 2) / np.sqrt(values)[:, :, None]
+
+
+def whitened_scores(problem: Problem, parameters: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Scores of the inputs at parameters, their slopes, and the logarithm of the slopes.
+
+    Parameters
+    ----------
+    parameters : ndarray, (star, draw, parameter)
+
+    Returns
+    -------
+    score, log_slope : ndarray, (star, draw, input)
+        Normal scores z, and ln |dz/d ln obs|.
+    sign : ndarray, (input,)
+        Sign of dz/d ln obs.
+    """
+    log_inputs = problem.base[:, None, :] + np.einsum("jr,sdr->sdj", problem.design, parameters)
+    columns = [m.score(log_inputs[:, :, j]) for j, m in enumerate(problem.measured)]
+    score = np.stack([c[0] for c in columns], axis=2)
+    log_slope = np.stack([c[1] for c in columns], axis=2)
+    sign = np.array([np.sign(problem.log_sd[0, j]) for j in range(len(columns))])
+    return score, log_slope, sign
+
+
+def fit(problem: Problem) -> Fit:
+    """Find the least-squares point of an over-determined problem."""
+    root = root_of_precision(problem)
+    theta = np.einsum("srj,sj->sr", problem.solution, problem.log_median - problem.base)
+    residual, jacobian = _residual(problem, root, theta)
+    # where the start lies outside a support, the nearest supported start is that of the single inputs' means
+    outside = ~np.isfinite(residual).all(axis=1)
+    if outside.any():
+        other = np.einsum("srj,sj->sr", problem.solution, problem.log_mean - problem.base)
+        theta = np.where(outside[:, None], other, theta)
+        residual, jacobian = _residual(problem, root, theta)
+    chi2 = _square(residual)
+    damping = np.full(len(problem), 1e-3)
+    unit = np.eye(problem.design.shape[1])
+    for _ in range(_STEPS):
+        safe = np.where(np.isfinite(jacobian), jacobian, 0.0)
+        normal = np.einsum("sjr,sjq->srq", safe, safe)
+        gradient = np.einsum("sjr,sj->sr", safe, np.where(np.isfinite(residual), residual, 0.0))
+        scale = np.einsum("srr->sr", normal) + 1e-300
+        system = normal + damping[:, None, None] * scale[:, :, None] * unit
+        step = np.linalg.solve(system + 1e-300 * unit, gradient[:, :, None])[:, :, 0]
+        trial = theta - step
+        trial_residual, trial_jacobian = _residual(problem, root, trial)
+        trial_chi2 = _square(trial_residual)
+        better = trial_chi2 <= chi2
+        theta = np.where(better[:, None], trial, theta)
+        residual = np.where(better[:, None], trial_residual, residual)
+        jacobian = np.where(better[:, None, None], trial_jacobian, jacobian)
+        chi2 = np.where(better, trial_chi2, chi2)
+        damping = np.clip(np.where(better, damping * 0.1, damping * 10.0), 1e-15, 1e12)
+    gradient = np.einsum("sjr,sj->sr", jacobian, residual)
+    size = np.sqrt(np.einsum("sjr,sjr->sr", jacobian, jacobian))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        relative = np.abs(gradient / size).max(axis=1)
+    freedom = problem.design.shape[0] - problem.design.shape[1]
+    converged = np.isfinite(chi2) & (relative < _CONVERGED * (1.0 + np.sqrt(chi2)))
+    return Fit(theta, jacobian, chi2, chdtrc(freedom, chi2), freedom, converged)
+
+
+def _residual(problem: Problem, root, theta):
+    score, log_slope, sign = whitened_scores(problem, theta[:, None, :])
+    jacobian = (sign * np.exp(log_slope[:, 0]))[:, :, None] * problem.design
+    residual = score[:, 0]
+    if root is not None:
+        residual = np.einsum("sij,sj->si", root, residual)
+        jacobian = np.einsum("sij,sjr->sir", root, jacobian)
+    return residual, jacobian
+
+
+def _square(residual):
+    with np.errstate(invalid="ignore", over="ignore"):
+        chi2 = np.square(residual).sum(axis=-1)
+    return np.where(np.isfinite(chi2), chi2, np.inf)

@@ -1,0 +1,61 @@
+"""The columns of a summary: names, units, descriptions and values, for every table that is written."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from stellerg.posterior.result import STANDARD_PROBABILITIES, Posterior
+from stellerg.status import STATUS_TEXT, Status, flag_words
+
+__all__ = ["Column", "summary_columns"]
+
+_ENDS = ("", "_lower68", "_upper68", "_lower95", "_upper95")
+_MEANING = ("median", "lower end of 68.27 %", "upper end of 68.27 %", "lower end of 95.45 %", "upper end of 95.45 %")
+
+
+@dataclass(frozen=True)
+class Column:
+    """A column; NaN in numbers stands for "no value"."""
+
+    name: str
+    values: np.ndarray
+    unit: str
+    description: str
+
+
+def _words(codes: np.ndarray, word) -> np.ndarray:
+    """Words of small integers: one look-up for each different code."""
+    different, which = np.unique(codes, return_inverse=True)
+    return np.array([word(int(code)) for code in different], dtype=object)[which.ravel()]
+
+
+def summary_columns(posterior: Posterior) -> list[Column]:
+    """Columns of the summary, one row per star in the order of the input."""
+    engines = (*posterior.engines, "")
+    columns = [
+        Column("star", posterior.star.astype(object), "", "identifier"),
+        Column("status", _words(posterior.status, lambda c: STATUS_TEXT[Status(c)].word), "", "what became of the row"),
+        Column("status_text", np.array(posterior.status_text(), dtype=object), "", "why, and the way out"),
+        Column("flags", _words(posterior.flags, lambda c: " ".join(flag_words(c))), "", "what to know of the result"),
+        Column("engine", _words(posterior.engine, lambda c: engines[c]), "", "method that gave the result"),
+    ]
+    for output in posterior.outputs:
+        unit, meaning = posterior.units[output], posterior.descriptions[output]
+        values = posterior.quantile(STANDARD_PROBABILITIES, output)
+        for k, (end, which) in enumerate(zip(_ENDS, _MEANING, strict=True)):
+            columns.append(Column(output + end, values[:, k], unit, f"{meaning}: {which}"))
+        logarithm = f"log10 of the {meaning}" + (f" in {unit}" if unit else "")
+        columns.append(Column(f"{output}_log10_mean", posterior.log10_mean(output), "", f"mean of {logarithm}"))
+        columns.append(
+            Column(f"{output}_log10_sd", posterior.log10_sd(output), "", f"standard deviation of {logarithm}")
+        )
+        value, uncertainty = posterior.linear_value(output), posterior.linear_uncertainty(output)
+        columns.append(Column(f"{output}_linear", value, unit, f"{meaning}: first-order value"))
+        columns.append(
+            Column(f"{output}_linear_u", uncertainty, unit, f"{meaning}: first-order standard uncertainty")
+        )
+        for name, share in posterior.budget(output).items():
+            columns.append(
+                Column(f"{output}_budget_{name}", share, "", f"share of {name} in the variance of ln {output}")
+            )
+    return columns

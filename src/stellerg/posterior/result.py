@@ -1,0 +1,301 @@
+"""Posterior: the answers of all engines, scattered back to the rows of the input."""
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from stellerg.errors import InputError
+from stellerg.status import STATUS_TEXT, VALUE, Status, carries_results
+
+__all__ = ["INTERVAL68", "INTERVAL95", "STANDARD_PROBABILITIES", "Piece", "Posterior", "StarDraws"]
+
+# Central intervals of 68.27 % and 95.45 %: the probabilities within one and two standard deviations.
+INTERVAL68 = (0.15865525393145707, 0.8413447460685429)
+INTERVAL95 = (0.02275013194817921, 0.9772498680518208)
+STANDARD_PROBABILITIES = (0.5, *INTERVAL68, *INTERVAL95)
+COEFFICIENT = "structure_coefficient"
+EFFECTIVE_INDEX = "n_effective"
+LN10 = float(np.log(10.0))
+
+
+@dataclass(frozen=True)
+class Piece:
+    """Rows answered together.
+
+    Attributes
+    ----------
+    rows : ndarray of int, (m,)
+    answer : engines' Answer
+    linear : engines' LinearAnswer
+    budget_names : tuple of str
+    budget : ndarray, (m, output, name)
+        Outputs in the order of the answer's problem.
+    """
+
+    rows: np.ndarray
+    answer: Any
+    linear: Any
+    budget_names: tuple[str, ...]
+    budget: np.ndarray
+
+    def position(self, output: str) -> int | None:
+        """Position of an output in this piece; None where it is not given."""
+        outputs = self.answer.problem.outputs
+        return outputs.index(output) if output in outputs else None
+
+
+@dataclass(frozen=True)
+class StarDraws:
+    """Draws of all stars, (star, draw) each; NaN where a star has no result.
+
+    Attributes
+    ----------
+    u : ndarray
+        Uniform variate of structure.
+    latents : dict of str to ndarray
+        mass, radius, luminosity (nominal solar), distance (pc), where determined.
+    outputs : dict of str to ndarray
+        In the units of the posterior; with the structure coefficient.
+    log_weight : ndarray
+        Logarithm of importance weights; 0 for exactly determined stars.
+    log_reference_density : ndarray
+        ln |J' C^-1 J|^(1/2), over the determined combinations of ln M, ln R, ln L and ln d.
+    """
+
+    u: np.ndarray
+    latents: dict[str, np.ndarray]
+    outputs: dict[str, np.ndarray]
+    log_weight: np.ndarray
+    log_reference_density: np.ndarray
+
+
+@dataclass(frozen=True)
+class Posterior:
+    """Posterior distributions of the outputs of many stars; the row order is that of the input.
+
+    Attributes
+    ----------
+    star : ndarray of str, (star,)
+    outputs : tuple of str
+    units, descriptions : dict of str to str
+        By output.
+    status : ndarray of uint8, (star,)
+    flags : ndarray of int64, (star,)
+    engine : ndarray of int8, (star,)
+        Index into `engines`; -1 where no engine ran.
+    engines : tuple of str
+    prior, energy_convention, time_convention : str
+    chi2, probability : ndarray, (star,)
+        Of over-determined stars; NaN elsewhere.
+    degrees_of_freedom : ndarray of int, (star,)
+    pieces : tuple of Piece
+    """
+
+    star: np.ndarray
+    outputs: tuple[str, ...]
+    units: Mapping[str, str]
+    descriptions: Mapping[str, str]
+    status: np.ndarray
+    reason: np.ndarray
+    sentences: tuple[str, ...]
+    quoted: np.ndarray
+    flags: np.ndarray
+    aside: np.ndarray
+    aside_sets: tuple[tuple[str, ...], ...]
+    engine: np.ndarray
+    engine_reason: np.ndarray
+    engines: tuple[str, ...]
+    engine_reasons: tuple[str, ...]
+    prior: str
+    energy_convention: str
+    time_convention: str
+    chi2: np.ndarray
+    degrees_of_freedom: np.ndarray
+    probability: np.ndarray
+    pieces: tuple[Piece, ...]
+    sampler: Callable = field(repr=False)
+    _cache: dict = field(default_factory=dict, repr=False, compare=False)
+
+    def __len__(self) -> int:
+        return len(self.star)
+
+    @property
+    def has_results(self) -> np.ndarray:
+        """Whether a row carries results, (star,)."""
+        return carries_results(self.status)
+
+    def status_text(self) -> list[str]:
+        """A sentence for each row: what is wrong, the value got, the way out; empty for `ok`."""
+        texts = np.array([sentence.replace(VALUE, "") for sentence in self.sentences], dtype=object)[self.reason]
+        for row in np.flatnonzero(~np.isnan(self.quoted)):  # only rows with a value at fault
+            texts[row] = self.sentences[self.reason[row]].replace(VALUE, f" = {self.quoted[row]:g}")
+        return texts.tolist()
+
+    def quantile(self, p, output: str) -> np.ndarray:
+        """Quantiles of an output.
+
+        Parameters
+        ----------
+        p : float or array_like, (m,)
+            Cumulative probabilities in (0, 1).
+        output : str
+            An output, ``structure_coefficient`` or ``n_effective``.
+
+        Returns
+        -------
+        ndarray, (star,) or (star, m)
+            In `units[output]`; NaN where a star has no result.
+
+        Raises
+        ------
+        InputError
+            If the output was not asked for, or p does not lie in (0, 1).
+        """
+        scalar = np.ndim(p) == 0
+        probabilities = np.atleast_1d(np.asarray(p, float))
+        if not ((probabilities > 0.0) & (probabilities < 1.0)).all():
+            raise InputError(f"p: probabilities must lie between 0 and 1, got {p}")
+        name = COEFFICIENT if output == EFFECTIVE_INDEX else output
+        values = np.exp(self._scatter(name, lambda a, o: self._quantiles(a, probabilities)[:, o], len(probabilities)))
+        if output == EFFECTIVE_INDEX:
+            values = 5.0 - 3.0 / values
+        return values[:, 0] if scalar else values
+
+    def median(self, output: str) -> np.ndarray:
+        """Median of an output, (star,)."""
+        return self.quantile(STANDARD_PROBABILITIES, output)[:, 0]
+
+    def interval(self, output: str, probability: float = INTERVAL68[1] - INTERVAL68[0]) -> np.ndarray:
+        """Central interval of an output, (star, 2)."""
+        if not 0.0 < probability < 1.0:
+            raise InputError(f"probability: must lie between 0 and 1, got {probability}")
+        tail = 0.5 * (1.0 - probability)
+        return self.quantile((tail, 1.0 - tail), output)
+
+    def cumulative(self, values, output: str) -> np.ndarray:
+        """Cumulative probability at values (m,) or (star, m) of an output, (star, m)."""
+        return self._evaluate("cumulative", values, output)
+
+    def density(self, values, output: str) -> np.ndarray:
+        """Density of the output (per its unit) at values (m,) or (star, m), (star, m)."""
+        at = np.atleast_1d(np.asarray(values, float))
+        return self._evaluate("density", at, output) / at
+
+    def log10_mean(self, output: str) -> np.ndarray:
+        """Mean of log10 of an output, (star,). The mean of the output itself need not exist."""
+        return self._scatter(output, lambda a, o: a.log_mean[:, o, None], 1)[:, 0] / LN10
+
+    def log10_sd(self, output: str) -> np.ndarray:
+        """Standard deviation of log10 of an output, (star,)."""
+        return self._scatter(output, lambda a, o: a.log_sd[:, o, None], 1)[:, 0] / LN10
+
+    def numerical_error(self, output: str) -> np.ndarray:
+        """Estimated error of the cumulative at a reported quantile, (star,)."""
+        return self._scatter(output, lambda a, o: a.numerical_error[:, o, None], 1)[:, 0]
+
+    def linear_value(self, output: str) -> np.ndarray:
+        """First-order value, (star,); NaN where it does not exist."""
+        return self._scatter(output, lambda p, o: p.linear.value[:, o, None], 1, whole=True)[:, 0]
+
+    def linear_uncertainty(self, output: str) -> np.ndarray:
+        """First-order standard uncertainty, (star,); NaN where it does not exist."""
+        return self._scatter(output, lambda p, o: p.linear.standard_uncertainty[:, o, None], 1, whole=True)[:, 0]
+
+    def linear(self, row: int = 0) -> dict:
+        """Variables of the `uncertainties` package for one star: inputs and outputs, correlated.
+
+        Raises
+        ------
+        InputError
+            If the star has no result.
+        """
+        for piece in self.pieces:
+            position = np.flatnonzero(piece.rows == row)
+            if position.size:
+                return piece.linear.variables(int(position[0]))
+        raise InputError(f"row {row} has no result: {STATUS_TEXT[Status(self.status[row])].word}")
+
+    def budget_names(self) -> tuple[str, ...]:
+        """Every quantity that stands in the budget of some star, in the order of first appearance."""
+        names = dict.fromkeys(name for piece in self.pieces for name in piece.budget_names)
+        tail = [name for name in ("correlations", "structure") if name in names]
+        return (*(name for name in names if name not in tail), *tail)
+
+    def budget(self, output: str) -> dict[str, np.ndarray]:
+        """Share of the variance of ln(output) by quantity, (star,) each; NaN where a star has no such quantity."""
+        shares = {name: np.full(len(self), np.nan) for name in self.budget_names()}
+        for piece in self.pieces:
+            position = piece.position(output)
+            if position is not None:
+                for k, name in enumerate(piece.budget_names):
+                    shares[name][piece.rows] = piece.budget[:, position, k]
+        return shares
+
+    def draws(self, count: int = 1024, seed: int = 0) -> StarDraws:
+        """Draws of every star, keyed by its identifier; u is stored with them.
+
+        Parameters
+        ----------
+        count : int
+            A power of two.
+        seed : int
+        """
+        shape = (len(self), count)
+        outputs = {name: np.full(shape, np.nan) for name in (*self.outputs, COEFFICIENT)}
+        latents: dict[str, np.ndarray] = {}
+        u, weight, reference = (np.full(shape, np.nan) for _ in range(3))
+        for piece in self.pieces:
+            drawn = self.sampler(piece.answer.problem, count, seed)
+            u[piece.rows] = drawn.u
+            weight[piece.rows] = 0.0 if drawn.log_weight is None else drawn.log_weight
+            reference[piece.rows] = drawn.log_reference_density()
+            for k, name in enumerate(piece.answer.problem.latents):
+                latents.setdefault(name, np.full(shape, np.nan))[piece.rows] = np.exp(drawn.log_latents[:, k])
+            for k, name in enumerate(piece.answer.problem.outputs):
+                outputs[name][piece.rows] = np.exp(drawn.log_outputs[:, k])
+        return StarDraws(u, latents, outputs, weight, reference)
+
+    def table(self):
+        """Return a table of the summary (astropy QTable with units and descriptions)."""
+        from stellerg.posterior.table import to_table
+
+        return to_table(self)
+
+    def _quantiles(self, answer, probabilities: np.ndarray) -> np.ndarray:
+        key = (id(answer), tuple(probabilities))
+        if key not in self._cache:
+            self._cache[key] = answer.quantile(probabilities)
+        return self._cache[key]
+
+    def _evaluate(self, what: str, values, output: str) -> np.ndarray:
+        at = np.atleast_1d(np.asarray(values, float))
+        at = np.broadcast_to(at, (len(self), at.shape[-1]))
+        with np.errstate(divide="ignore", invalid="ignore"):
+            logs = np.log(at)
+        out = np.full(at.shape, np.nan)
+        self._check(output)
+        for piece in self.pieces:
+            position = piece.position(output)
+            if position is not None:
+                outputs = piece.answer.problem.outputs
+                cube = np.repeat(logs[piece.rows][:, None, :], len(outputs), axis=1)
+                out[piece.rows] = getattr(piece.answer, what)(cube)[:, position]
+        return out
+
+    def _scatter(self, output: str, read: Callable, width: int, whole: bool = False) -> np.ndarray:
+        """Fill (star, width) from what `read(answer, position)` gives for each piece."""
+        self._check(output)
+        out = np.full((len(self), width), np.nan)
+        for piece in self.pieces:
+            position = piece.position(output)
+            if position is not None:
+                out[piece.rows] = read(piece if whole else piece.answer, position)
+        return out
+
+    def _check(self, output: str) -> None:
+        if output not in (*self.outputs, COEFFICIENT):
+            raise InputError(
+                f"output: {output!r} was not asked for; here are {', '.join(self.outputs)} and {COEFFICIENT}"
+            )

@@ -1,0 +1,185 @@
+"""The one question: from what was measured of stars to the posterior of their energies and times."""
+
+from collections.abc import Sequence
+from dataclasses import fields, replace
+from pathlib import Path
+
+import numpy as np
+
+from stellerg.assembly import Notes, assemble
+from stellerg.checks.budget import budget
+from stellerg.checks.validity import flags
+from stellerg.energetics import DEFAULT_OUTPUTS, OUTPUTS, Conventions
+from stellerg.engines import AUTO_ORDER, ENGINES, Engine
+from stellerg.engines.least_squares import fit
+from stellerg.engines.linear import Linear
+from stellerg.engines.sampling import Draws, Plan, sample
+from stellerg.errors import InputError
+from stellerg.observables import OBSERVABLES
+from stellerg.posterior import Piece, Posterior
+from stellerg.problem import Problem
+from stellerg.stars import Stars
+from stellerg.status import Status
+from stellerg.structure.files import load_prior
+from stellerg.structure.model import StructureModel
+
+__all__ = ["propagate"]
+
+
+def propagate(
+    stars: Stars,
+    *,
+    outputs: Sequence[str] = DEFAULT_OUTPUTS,
+    prior: str | Path | StructureModel = "uniform-index",
+    engine: str | Engine = "auto",
+    conventions: Conventions | None = None,
+    use: Sequence[str] | None = None,
+    seed: int = 0,
+) -> Posterior:
+    """Propagate measurements to posterior distributions.
+
+    Parameters
+    ----------
+    stars : Stars
+    outputs : sequence of str
+        Of `stellerg.energetics.OUTPUTS`.
+    prior : str, Path or StructureModel
+        A shipped structure model by name, a .toml file, or a loaded model.
+    engine : str or Engine
+        ``auto`` (for each star the cheapest engine that is exact for it), a name of
+        `stellerg.engines.ENGINES`, or an engine with options of its own.
+    conventions : Conventions, optional
+        Which energy and time.
+    use : sequence of str, optional
+        Observables that are independent measurements; all of them are used. Default: the first determining
+        set, since redundant columns are not evidence.
+    seed : int
+        For engines that draw; randomness is keyed by (seed, star).
+
+    Returns
+    -------
+    Posterior
+        One row per star, in order; a star that cannot be done has a status and a sentence.
+
+    Raises
+    ------
+    InputError
+        If an output, observable or engine is unknown.
+    PriorError
+        If the structure model does not exist or is not a proper density.
+    """
+    conventions = conventions or Conventions()
+    structure = prior if isinstance(prior, StructureModel) else load_prior(prior)
+    choices = _choices(engine, seed)
+    assembly = assemble(stars, outputs, conventions, structure, use)
+    notes = assembly.notes
+    used = np.full(len(stars), -1, np.int8)
+    why = np.zeros(len(stars), np.int16)
+    reasons = [""]
+    chi2, probability = np.full((2, len(stars)), np.nan)
+    freedom = np.zeros(len(stars), int)
+    pieces = []
+    for problem in assembly.problems:
+        for part, number, reason in _assign(problem, choices, engine == "auto", notes):
+            if reason not in reasons:
+                reasons.append(reason)
+            answer = choices[number].solve(part)
+            if part.over_determined:
+                best = fit(part)
+                chi2[part.rows], probability[part.rows] = best.chi2, best.probability
+                freedom[part.rows] = best.degrees_of_freedom
+            notes.flags[part.rows] |= flags(part, answer, probability[part.rows])
+            used[part.rows], why[part.rows] = number, reasons.index(reason)
+            failed = answer.status != Status.OK
+            _note_failures(notes, part, answer, failed)
+            if failed.any():
+                part = part.take(np.flatnonzero(~failed))
+                answer = choices[number].solve(part)
+            if len(part):
+                pieces.append(Piece(part.rows, answer, Linear().solve(part), *budget(answer)))
+    return Posterior(
+        star=stars.identifier,
+        outputs=assembly.outputs,
+        units={name: OUTPUTS[name].unit_for(conventions) for name in assembly.outputs},
+        descriptions={name: OUTPUTS[name].meaning for name in assembly.outputs},
+        status=notes.status,
+        reason=notes.reason,
+        sentences=tuple(notes.sentences),
+        quoted=_quoted(stars, notes),
+        flags=notes.flags,
+        aside=notes.aside,
+        aside_sets=tuple(notes.aside_sets),
+        engine=used,
+        engine_reason=why,
+        engines=tuple(choice.name for choice in choices),
+        engine_reasons=tuple(reasons),
+        prior=structure.name,
+        energy_convention=conventions.energy_text,
+        time_convention=conventions.time_text,
+        chi2=chi2,
+        degrees_of_freedom=freedom,
+        probability=probability,
+        pieces=tuple(pieces),
+        sampler=_sampler,
+    )
+
+
+def _choices(engine: str | Engine, seed: int) -> list[Engine]:
+    """Engines to try, in order."""
+    if not isinstance(engine, str):
+        return [engine]
+    names = AUTO_ORDER if engine == "auto" else (engine,)
+    unknown = [name for name in names if name not in ENGINES]
+    if unknown:
+        raise InputError(f"engine: {engine!r} is unknown; choose from auto, {', '.join(ENGINES)}")
+    made = [ENGINES[name]() for name in names]
+    return [replace(e, seed=seed) if any(f.name == "seed" for f in fields(e)) else e for e in made]
+
+
+def _assign(problem: Problem, choices: list[Engine], auto: bool, notes: Notes):
+    """Yield (stars, engine number, reason): each star goes to the first engine that accepts it."""
+    left = np.arange(len(problem))
+    refusal = np.zeros(len(problem), int)
+    for number, engine in enumerate(choices):
+        if not left.size:
+            return
+        verdict = engine.accepts(problem.take(left))
+        for previous in np.unique(refusal[left][verdict == 0]):
+            rows = left[(verdict == 0) & (refusal[left] == previous)]
+            if not auto:
+                reason = "asked for"
+            elif number == 0:
+                reason = "the cheapest engine that is exact for these measurements"
+            else:
+                reason = f"{choices[number - 1].name} refuses: {choices[number - 1].reasons[previous]}"
+            yield problem.take(rows), number, reason
+        refusal[left] = verdict
+        left = left[verdict != 0]
+    for code in np.unique(refusal[left]):
+        rows = problem.rows[left[refusal[left] == code]]
+        notes.set(rows, Status.ENGINE_REFUSED, f"{choices[-1].name} refuses: {choices[-1].reasons[code]}")
+
+
+def _note_failures(notes: Notes, problem: Problem, answer, failed: np.ndarray) -> None:
+    if failed.any():
+        least = float(np.min(answer.diagnostics["effective_draws"][failed]))
+        notes.set(
+            problem.rows[failed],
+            Status.NOT_CONVERGED,
+            f"too few effective draws are left ({least:.3g} or more, 100 are needed): the measurements hardly agree; "
+            "check them, name the independent ones with use, or draw more",
+        )
+
+
+def _quoted(stars: Stars, notes: Notes) -> np.ndarray:
+    """The value at fault of each row whose status is about a value, (star,); NaN elsewhere."""
+    quoted = np.full(len(stars), np.nan)
+    names = list(OBSERVABLES)
+    for code in np.unique(notes.culprit[notes.culprit >= 0]):
+        rows = notes.culprit == code
+        quoted[rows] = stars.measured[names[code]].value[rows]
+    return quoted
+
+
+def _sampler(problem: Problem, count: int, seed: int) -> Draws:
+    return sample(problem, Plan(count, seed, randomisations=1, shuffled=True))
