@@ -114,6 +114,7 @@ def propagate(
         engines=tuple(choice.name for choice in choices),
         engine_reasons=tuple(reasons),
         prior=structure.name,
+        prior_summary=structure.summary,
         energy_convention=conventions.energy_text,
         time_convention=conventions.time_text,
         chi2=chi2,

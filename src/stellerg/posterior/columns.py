@@ -29,8 +29,17 @@ def _words(codes: np.ndarray, word) -> np.ndarray:
     return np.array([word(int(code)) for code in different], dtype=object)[which.ravel()]
 
 
-def summary_columns(posterior: Posterior) -> list[Column]:
-    """Columns of the summary, one row per star in the order of the input."""
+def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None = None) -> list[Column]:
+    """Columns of the summary, one row per star in the order of the input.
+
+    Parameters
+    ----------
+    posterior : Posterior
+    budget_names : tuple of str, optional
+        Quantities that have a budget column; default: those that some star has. Parts of one catalogue
+        share one list.
+    """
+    nothing = np.full(len(posterior), np.nan)
     engines = (*posterior.engines, "")
     columns = [
         Column("star", posterior.star.astype(object), "", "identifier"),
@@ -54,7 +63,9 @@ def summary_columns(posterior: Posterior) -> list[Column]:
         columns.append(
             Column(f"{output}_linear_u", uncertainty, unit, f"{meaning}: first-order standard uncertainty")
         )
-        for name, share in posterior.budget(output).items():
+        shares = posterior.budget(output)
+        for name in shares if budget_names is None else budget_names:
+            share = shares.get(name, nothing)
             columns.append(
                 Column(f"{output}_budget_{name}", share, "", f"share of {name} in the variance of ln {output}")
             )

@@ -86,7 +86,7 @@ class Posterior:
     engine : ndarray of int8, (star,)
         Index into `engines`; -1 where no engine ran.
     engines : tuple of str
-    prior, energy_convention, time_convention : str
+    prior, prior_summary, energy_convention, time_convention : str
     chi2, probability : ndarray, (star,)
         Of over-determined stars; NaN elsewhere.
     degrees_of_freedom : ndarray of int, (star,)
@@ -109,6 +109,7 @@ class Posterior:
     engines: tuple[str, ...]
     engine_reasons: tuple[str, ...]
     prior: str
+    prior_summary: str
     energy_convention: str
     time_convention: str
     chi2: np.ndarray

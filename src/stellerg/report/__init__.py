@@ -1,0 +1,1 @@
+"""Figures and tables for people. Imports `posterior`, and `stars` for what was read; nothing imports it but `cli`."""

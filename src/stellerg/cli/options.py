@@ -1,0 +1,231 @@
+"""The options that commands share, and the settings they make."""
+
+import functools
+import inspect
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Annotated
+
+import typer
+
+from stellerg.errors import InputError
+
+__all__ = ["OBSERVABLE_OPTIONS", "Settings", "with_options"]
+
+# The observables with a line of help each. They stand here too so that `--help` need not load the physics; a
+# test holds them equal to `stellerg.observables.OBSERVABLES`.
+OBSERVABLE_OPTIONS = {
+    "mass": "mass, nominal solar",
+    "radius": "radius, nominal solar",
+    "luminosity": "bolometric luminosity, nominal solar",
+    "log_mass": "log10 of the mass, dex",
+    "log_radius": "log10 of the radius, dex",
+    "log_luminosity": "log10 of the luminosity, dex",
+    "log_effective_temperature": "log10 of the temperature in K, dex",
+    "effective_temperature": "effective temperature, K",
+    "log_surface_gravity": "log10 of the surface gravity in cm s^-2, dex",
+    "mean_density": "mean density, unit required (solar, g/cm3)",
+    "large_frequency_separation": "asteroseismic large frequency separation, muHz",
+    "frequency_of_maximum_power": "asteroseismic frequency of maximum power, muHz",
+    "angular_diameter": "angular diameter, limb-darkened, mas",
+    "parallax": "parallax, mas",
+    "distance": "distance, pc",
+    "bolometric_flux": "bolometric flux, unit required (W/m2, erg/(s cm2))",
+    "absolute_bolometric_magnitude": "absolute bolometric magnitude, IAU 2015 zero point, mag",
+    "apparent_bolometric_magnitude": "apparent bolometric magnitude, IAU 2015 zero point, mag",
+}
+
+_MODEL = "Model and outputs"
+_STARS = "Stars"
+_MEASURED = "Measured quantities (value with error: '1.02 ± 0.03', '1.05(2)', '1.10 +0.12 -0.10', '1 exact')"
+
+_SHARED: list[tuple[str, object, object]] = [
+    ("prior", str, typer.Option("uniform-index", help="Structure model: a name or a .toml file.", rich_help_panel=_MODEL)),
+    ("engine", str, typer.Option("auto", help="auto, quadrature, montecarlo or linear.", rich_help_panel=_MODEL)),
+    ("seed", int, typer.Option(0, help="Seed of engines that draw.", rich_help_panel=_MODEL)),
+    (
+        "outputs",
+        str,
+        typer.Option(
+            "binding_energy,kelvin_helmholtz_time",
+            help="Comma-separated: potential_energy, internal_energy, binding_energy, kelvin_helmholtz_time, "
+            "rest_energy_fraction, specific_binding_energy, free_fall_time, nuclear_time.",
+            rich_help_panel=_MODEL,
+        ),
+    ),
+    (
+        "time_convention",
+        str,
+        typer.Option(
+            "total",
+            help="Kelvin-Helmholtz time: total abs(E)/L, potential abs(Omega)/L, GM2/RL or GM2/2RL.",
+            rich_help_panel=_MODEL,
+        ),
+    ),
+    ("adiabatic_index", str, typer.Option("5/3", help="Adiabatic index of the gas, above 4/3.", rich_help_panel=_MODEL)),
+    ("energy_unit", str, typer.Option("erg", help="erg or J.", rich_help_panel=_MODEL)),
+    (
+        "nuclear_mass_fraction",
+        float,
+        typer.Option(0.1, help="Share of the mass that burns, for nuclear_time.", rich_help_panel=_MODEL),
+    ),
+    (
+        "nuclear_efficiency",
+        float,
+        typer.Option(0.007, help="Share of its rest energy set free, for nuclear_time.", rich_help_panel=_MODEL),
+    ),
+    (
+        "use",
+        str,
+        typer.Option(
+            "",
+            help="Comma-separated independent measurements; all of them are used. Default: the first that "
+            "determine the star, since redundant columns are not evidence.",
+            rich_help_panel=_STARS,
+        ),
+    ),
+    (
+        "shape",
+        str,
+        typer.Option(
+            "",
+            help="Distribution of errors where it fits: normal, lognormal, three-quantile, split-normal.",
+            rich_help_panel=_STARS,
+        ),
+    ),
+    (
+        "correlation",
+        list[str],
+        typer.Option([], help="Of two measurements: mass,radius=0.6 (repeatable).", rich_help_panel=_STARS),
+    ),
+    (
+        "evolutionary_state",
+        str,
+        typer.Option(
+            "", help="main-sequence, pre-main-sequence, evolved or unknown.", rich_help_panel=_STARS
+        ),
+    ),
+    (
+        "solar_large_frequency_separation",
+        float,
+        typer.Option(135.1, help="Solar reference, muHz.", rich_help_panel=_STARS),
+    ),
+    (
+        "solar_frequency_of_maximum_power",
+        float,
+        typer.Option(3090.0, help="Solar reference, muHz.", rich_help_panel=_STARS),
+    ),
+]
+
+
+@dataclass(frozen=True)
+class Settings:
+    """What the shared options say."""
+
+    prior: str
+    engine: str
+    seed: int
+    outputs: str
+    time_convention: str
+    adiabatic_index: str
+    energy_unit: str
+    nuclear_mass_fraction: float
+    nuclear_efficiency: float
+    use: str
+    shape: str
+    correlation: list[str]
+    evolutionary_state: str
+    solar_large_frequency_separation: float
+    solar_frequency_of_maximum_power: float
+
+    def propagation(self) -> dict:
+        """Return the keyword arguments of `stellerg.propagate`."""
+        from stellerg.energetics import Conventions
+
+        return {
+            "outputs": _names(self.outputs),
+            "prior": self.prior,
+            "engine": self.engine,
+            "seed": self.seed,
+            "use": _names(self.use) or None,
+            "conventions": Conventions(
+                time=self.time_convention,
+                adiabatic_index=_fraction("adiabatic-index", self.adiabatic_index),
+                energy_unit=self.energy_unit,
+                nuclear_mass_fraction=self.nuclear_mass_fraction,
+                nuclear_efficiency=self.nuclear_efficiency,
+            ),
+        }
+
+    def solar(self):
+        """Return the solar references of the scaling relations."""
+        from stellerg.observables import SolarReferences
+
+        for name in ("solar_large_frequency_separation", "solar_frequency_of_maximum_power"):
+            if not getattr(self, name) > 0.0:
+                raise InputError(f"--{name.replace('_', '-')}: must be positive, got {getattr(self, name)}")
+        return SolarReferences(self.solar_large_frequency_separation, self.solar_frequency_of_maximum_power)
+
+    def correlations(self) -> dict[tuple[str, str], float]:
+        """Return the correlations by pair of observables."""
+        found = {}
+        for text in self.correlation:
+            pair, equals, value = text.partition("=")
+            names = _names(pair)
+            if not equals or len(names) != 2:
+                raise InputError(f"--correlation: {text!r} is not of the form mass,radius=0.6")
+            try:
+                found[names[0], names[1]] = float(value)
+            except ValueError:
+                raise InputError(f"--correlation: {value!r} in {text!r} is not a number") from None
+        return found
+
+
+def _names(text: str) -> tuple[str, ...]:
+    return tuple(name.strip() for name in text.split(",") if name.strip())
+
+
+def _fraction(option: str, text: str) -> float:
+    """Return a number written as 1.6667 or 5/3."""
+    numerator, slash, denominator = text.partition("/")
+    try:
+        return float(numerator) / float(denominator) if slash else float(text)
+    except (ValueError, ZeroDivisionError):
+        raise InputError(f"--{option}: {text!r} is not a number; write 1.6667 or 5/3") from None
+
+
+def with_options(command: Callable, *, observables: bool) -> Callable:
+    """Give a command the shared options (as `settings`) and, if asked, one option per observable (as `given`)."""
+    own = [p for p in inspect.signature(command).parameters.values() if p.name not in ("settings", "given")]
+    extra: list[tuple[str, object, object]] = []
+    if observables:
+        extra += [
+            (name, str, typer.Option("", help=text, rich_help_panel=_MEASURED, show_default=False))
+            for name, text in OBSERVABLE_OPTIONS.items()
+        ]
+    extra += _SHARED
+    parameters = [
+        inspect.Parameter(name, inspect.Parameter.KEYWORD_ONLY, annotation=Annotated[kind, _bare(option)], default=option.default)
+        for name, kind, option in extra
+    ]
+
+    @functools.wraps(command)
+    def wrapped(*args, **options):
+        shared = {name: options.pop(name) for name, _, _ in _SHARED}
+        if observables:
+            options["given"] = {name: text for name in OBSERVABLE_OPTIONS if (text := options.pop(name))}
+        return command(*args, settings=Settings(**shared), **options)
+
+    wrapped.__signature__ = inspect.Signature([*own, *parameters])
+    wrapped.__annotations__ = {p.name: p.annotation for p in (*own, *parameters)}
+    del wrapped.__wrapped__  # typer would look through it
+    return wrapped
+
+
+def _bare(option):
+    """The same option without its default, which the signature carries."""
+    import copy
+
+    bare = copy.copy(option)
+    bare.default = ...
+    return bare

@@ -1,0 +1,59 @@
+"""``stellerg star``: one star, in words, as JSON or as a figure."""
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from stellerg.cli.options import Settings
+
+__all__ = ["star"]
+
+
+def star(
+    *,
+    settings: Settings,
+    given: dict[str, str],
+    name: Annotated[str, typer.Option(help="Name of the star, to which randomness is keyed.")] = "star",
+    as_json: Annotated[bool, typer.Option("--json", help="Print one JSON object.")] = False,
+    plot: Annotated[Path | None, typer.Option(help="Write a figure (PNG, PDF or SVG) of the answer.")] = None,
+    explain: Annotated[bool, typer.Option("--explain", help="Say first how each measurement was read.")] = False,
+) -> None:
+    """Binding energy and Kelvin-Helmholtz time of one star.
+
+    Example: stellerg star --mass "1.02 ± 0.03" --radius "1.05(2)" --luminosity "1.10 +0.12 -0.10"
+    """
+    import json
+
+    from rich.console import Console
+
+    from stellerg.posterior.document import star_document
+    from stellerg.propagate import propagate
+    from stellerg.stars import Stars
+
+    stars = Stars.of(
+        name,
+        correlation=settings.correlations(),
+        shape=settings.shape,
+        evolutionary_state=settings.evolutionary_state,
+        solar=settings.solar(),
+        **given,
+    )
+    posterior = propagate(stars, **settings.propagation())
+    console = Console(highlight=False)
+    if as_json:
+        print(json.dumps(star_document(posterior), indent=2, ensure_ascii=False))
+    else:
+        from stellerg.posterior.text import star_text
+
+        if explain:
+            from stellerg.report.reading import explanation
+
+            console.print(explanation(stars, posterior))
+        console.print(star_text(posterior))
+    if plot is not None and posterior.has_results[0]:
+        from stellerg.report.figures import star_figure, write
+
+        write(star_figure(posterior), plot)
+    if not posterior.has_results[0]:
+        raise typer.Exit(3)
