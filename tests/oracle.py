@@ -23,6 +23,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import pairwise
 
 import numpy as np
 from scipy.integrate import quad
@@ -30,7 +31,7 @@ from scipy.optimize import brentq
 from scipy.special import ndtr, ndtri
 
 _CLIP = 8.3  # scores beyond this carry a probability of 1e-16
-_TOLERANCE = 1e-11  # accepted error of one panel of an intermediate distribution
+_TOLERANCE = 1e-12  # accepted error of one panel of an intermediate distribution
 _ORDER = 16  # Chebyshev nodes per stored panel
 _NODES = 16  # Gauss-Legendre nodes per quadrature panel
 _ROWS = 200  # abscissae folded at once (memory only)
@@ -58,7 +59,7 @@ def _above(low, mass):
     z = np.maximum(ndtri(np.minimum(ndtr(low) + mass, 1.0)), low)
     gap = z - low
     if abs(low) < 37.0:
-        e = mass / _density(low)
+        e = np.minimum(mass / _density(low), 1.0)
         series = e * (1.0 + e * (low / 2.0 + e * (1.0 + 2.0 * low**2) / 6.0))
         gap = np.where(e * (1.0 + abs(low)) < 1e-4, series, gap)
     return z, gap
@@ -463,6 +464,6 @@ def lognormal_cumulative(t, location, sigma, prior):
         return float(density(y) * ndtr((s - q_of(y)) / sigma))
 
     total = 0.0
-    for a, b in zip(breaks[:-1], breaks[1:], strict=True):
+    for a, b in pairwise(breaks):
         total += quad(integrand, a, b, epsabs=1e-13, epsrel=1e-12, limit=200)[0]
     return total

@@ -9,7 +9,7 @@ from stellerg.measured import Measured, Scale, assign
 from stellerg.observables import Observable, unit_conversion
 from stellerg.status import Status
 
-__all__ = ["Exact", "measured_from", "measured_from_columns"]
+__all__ = ["Exact", "in_unit_of_value", "measured_from", "measured_from_columns"]
 
 
 @dataclass(frozen=True)
@@ -138,15 +138,27 @@ def _number(value, unit: str) -> tuple[np.ndarray, str]:
 def _error(observable: Observable, error, value_unit: str, unit: str) -> np.ndarray:
     """An error in the unit of its value (a Quantity is converted, a bare number is taken to be in it)."""
     number, own = _number(error, value_unit)
-    if own == value_unit or not hasattr(error, "unit"):
-        return number
+    return in_unit_of_value(observable, number, own, value_unit) if hasattr(error, "unit") else number
+
+
+def in_unit_of_value(observable: Observable, error: np.ndarray, own: str, value_unit: str) -> np.ndarray:
+    """Convert errors to the unit of their values; NaN where the units are not of one kind.
+
+    Parameters
+    ----------
+    observable : Observable
+    error : ndarray, (star,)
+    own, value_unit : str
+    """
+    if own == value_unit:
+        return error
     target = unit_conversion(observable, value_unit)
     source = unit_conversion(observable, own)
+    if observable.scale is not Scale.LINEAR and own in ("", "dex", "mag"):
+        return error
     if target is None or source is None:
-        if observable.scale is not Scale.LINEAR and own in ("", "dex", "mag"):
-            return number
-        return np.full(number.shape, np.nan)
-    return number * (source[0] / target[0])
+        return np.full(error.shape, np.nan)
+    return error * (source[0] / target[0])
 
 
 def _from_ufloats(given) -> tuple[np.ndarray | None, np.ndarray | None]:

@@ -138,7 +138,7 @@ class Stars:
         )
 
 
-def state_codes(states, count: int) -> np.ndarray:
+def state_codes(states, count: int, first_row: int = 1) -> np.ndarray:
     """Codes of evolutionary states given by name, (star,).
 
     Raises
@@ -152,7 +152,7 @@ def state_codes(states, count: int) -> np.ndarray:
     if unknown.any():
         row = int(np.flatnonzero(unknown)[0])
         raise InputError(
-            f"evolutionary_state: {words[row]!r} at row {row + 1} is unknown; choose from {', '.join(STATE_WORDS)}"
+            f"evolutionary_state: {words[row]!r} at row {row + first_row} is unknown; choose from {', '.join(STATE_WORDS)}"
         )
     for word, state in STATE_WORDS.items():
         codes[words == word] = state

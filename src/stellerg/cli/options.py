@@ -37,7 +37,7 @@ OBSERVABLE_OPTIONS = {
 
 _MODEL = "Model and outputs"
 _STARS = "Stars"
-_MEASURED = "Measured quantities (value with error: '1.02 ± 0.03', '1.05(2)', '1.10 +0.12 -0.10', '1 exact')"
+_MEASURED = "Measured quantities, as '1.02 ± 0.03', '1.05(2)', '1.10 +0.12 -0.10' or '1 exact'"
 
 _SHARED: list[tuple[str, object, object]] = [
     ("prior", str, typer.Option("uniform-index", help="Structure model: a name or a .toml file.", rich_help_panel=_MODEL)),

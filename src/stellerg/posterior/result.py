@@ -242,7 +242,18 @@ class Posterior:
         count : int
             A power of two.
         seed : int
+
+        Raises
+        ------
+        InputError
+            If two stars have the same identifier: their draws would be the same.
         """
+        names, repeats = np.unique(self.star, return_counts=True)
+        if (repeats > 1).any():
+            raise InputError(
+                f"star: {names[repeats > 1][0]!r} names {repeats.max()} stars; draws are keyed by the identifier, "
+                "give each star its own"
+            )
         shape = (len(self), count)
         outputs = {name: np.full(shape, np.nan) for name in (*self.outputs, COEFFICIENT)}
         latents: dict[str, np.ndarray] = {}

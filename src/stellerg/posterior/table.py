@@ -5,22 +5,30 @@ from astropy.table import MaskedColumn, QTable
 from astropy.units import Unit
 from astropy.utils.masked import Masked
 
-from stellerg.posterior.columns import summary_columns
+from stellerg.posterior.columns import Column, summary_columns
 from stellerg.posterior.result import Posterior
 
-__all__ = ["to_table"]
+__all__ = ["columns_to_table", "conventions", "to_table"]
 
 
 def to_table(posterior: Posterior) -> QTable:
-    """Return the summary with units, descriptions and the conventions in its metadata.
+    """Return the summary with units, descriptions and the conventions in its metadata."""
+    return columns_to_table(summary_columns(posterior), conventions(posterior))
 
-    Values that do not exist are masked.
-    """
-    table = QTable()
-    table.meta["prior"] = posterior.prior
-    table.meta["energy_convention"] = posterior.energy_convention
-    table.meta["time_convention"] = posterior.time_convention
-    for column in summary_columns(posterior):
+
+def conventions(posterior: Posterior) -> dict[str, str]:
+    """What a reader of the numbers must know."""
+    return {
+        "prior": posterior.prior,
+        "energy_convention": posterior.energy_convention,
+        "time_convention": posterior.time_convention,
+    }
+
+
+def columns_to_table(columns: list[Column], meta: dict[str, str]) -> QTable:
+    """Return columns as a QTable; values that do not exist are masked."""
+    table = QTable(meta=meta)
+    for column in columns:
         if column.values.dtype == object:
             table[column.name] = MaskedColumn(column.values.astype(str))
         else:

@@ -1,0 +1,203 @@
+"""What the columns of a table mean: our own names, recognised once, then read part by part."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from stellerg.catalogue.readers import RawColumn, Source
+from stellerg.errors import InputError
+from stellerg.inputs import in_unit_of_value, measured_from_columns
+from stellerg.measured import Measured
+from stellerg.measured.text import TextKind, parse_text
+from stellerg.observables import OBSERVABLES, SolarReferences
+from stellerg.stars import Stars, state_codes
+from stellerg.status import Status
+
+__all__ = ["Columns", "recognise"]
+
+_ERRORS = ("_error", "_error_upper", "_error_lower")
+
+
+@dataclass(frozen=True)
+class Columns:
+    """The columns of a table that mean something here.
+
+    Attributes
+    ----------
+    observables : tuple of str
+        In the order of `OBSERVABLES`.
+    correlations : dict of (str, str) to str
+        Pair of observables to column.
+    names : tuple of str
+        All columns of the table.
+    unrecognised : tuple of str
+    """
+
+    observables: tuple[str, ...]
+    correlations: dict[tuple[str, str], str]
+    names: tuple[str, ...]
+    unrecognised: tuple[str, ...]
+
+    def stars(
+        self,
+        part: Mapping[str, RawColumn],
+        first_row: int,
+        *,
+        shape: str = "",
+        correlation: Mapping[tuple[str, str], float] | None = None,
+        evolutionary_state: str = "",
+        solar: SolarReferences | None = None,
+    ) -> Stars:
+        """Read one part.
+
+        Parameters
+        ----------
+        part : mapping of str to RawColumn
+        first_row : int
+            Number (from 1) of its first row in the table, for rows without an identifier and for messages.
+        shape, correlation, evolutionary_state, solar
+            For rows that do not say themselves.
+        """
+        count = _length(part)
+        measured = {name: _measured(name, part, shape) for name in self.observables}
+        correlations: dict[tuple[str, str], np.ndarray] = {
+            pair: np.full(count, float(value)) for pair, value in (correlation or {}).items()
+        }
+        for pair in correlations:
+            for name in pair:
+                if name not in measured:
+                    raise InputError(f"correlation: the table has no column {name!r}")
+        for pair, column in self.correlations.items():
+            value, bad = _numbers(part[column])
+            given = correlations.pop(pair[::-1], correlations.get(pair, np.zeros(count)))
+            # a cell that is no number is an invalid correlation, not a missing one
+            correlations[pair] = np.where(bad, np.inf, np.where(np.isnan(value), given, value))
+        states = self._states(part, count, evolutionary_state, first_row)
+        return Stars(
+            identifier=self._identifiers(part, count, first_row),
+            measured=measured,
+            correlation=correlations,
+            evolutionary_state=states,
+            solar=solar or SolarReferences(),
+        )
+
+    def _identifiers(self, part, count: int, first_row: int) -> np.ndarray:
+        numbers = np.arange(first_row, first_row + count).astype(str)
+        if "star" in self.names:
+            names = np.char.strip(part["star"].as_texts())
+        elif "system" in self.names and "component" in self.names:
+            both = (np.char.strip(part[name].as_texts()) for name in ("system", "component"))
+            names = np.char.strip(np.char.add(np.char.add(next(both), " "), next(both)))
+        else:
+            return numbers
+        return np.where(names == "", numbers, names)
+
+    def _states(self, part, count: int, default: str, first_row: int) -> np.ndarray:
+        if "evolutionary_state" not in self.names:
+            return state_codes(default, count)
+        words = np.char.strip(part["evolutionary_state"].as_texts())
+        return state_codes(np.where(words == "", default, words), count, first_row)
+
+
+def recognise(source: Source) -> Columns:
+    """Recognise the columns of a table by name.
+
+    Raises
+    ------
+    InputError
+        If no observable is there, or an error or shape column has no value column.
+    """
+    names = source.names
+    observables = tuple(name for name in OBSERVABLES if name in names)
+    pairs = {
+        f"correlation_{first}_{second}": (first, second)
+        for first in OBSERVABLES
+        for second in OBSERVABLES
+        if first != second
+    }
+    known = {"star", "system", "component", "evolutionary_state", *observables}
+    for name in OBSERVABLES:
+        attached = [name + ending for ending in (*_ERRORS, "_shape") if name + ending in names]
+        if attached and name not in observables:
+            raise InputError(f"column {attached[0]!r} has no column {name!r} beside it")
+        sides = [name + ending in names for ending in _ERRORS[1:]]
+        if sides[0] != sides[1]:
+            raise InputError(f"{name}: give both {name}_error_upper and {name}_error_lower, or {name}_error")
+        known.update(attached)
+    correlations = {pairs[name]: name for name in names if name in pairs}
+    for pair, column in correlations.items():
+        for name in pair:
+            if name not in observables:
+                raise InputError(f"column {column!r}: the table has no column {name!r}")
+        if pair[::-1] in correlations:
+            raise InputError(f"column {column!r} and {correlations[pair[::-1]]!r} say the same; keep one")
+    known.update(correlations.values())
+    if not observables:
+        raise InputError(
+            f"{source.path}: no column is an observable; name columns mass, radius, luminosity, ... "
+            f"(found: {', '.join(names)})"
+        )
+    return Columns(observables, correlations, names, tuple(name for name in names if name not in known))
+
+
+def _length(part: Mapping[str, RawColumn]) -> int:
+    column = next(iter(part.values()))
+    return len(column.numbers if column.numbers is not None else column.texts)
+
+
+def _numbers(column: RawColumn) -> tuple[np.ndarray, np.ndarray]:
+    """Numbers of a column, NaN where empty; and where a cell holds something else."""
+    if column.numbers is not None:
+        return column.numbers, np.zeros(len(column.numbers), bool)
+    text = parse_text(column.texts)
+    bad = ~np.isin(text.kind, (TextKind.VALUE_ONLY, TextKind.EMPTY))
+    return text.value, bad
+
+
+def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
+    """Read one observable: the cell's own error counts, else that of the error columns."""
+    column = part[name]
+    observable = OBSERVABLES[name]
+    if column.numbers is not None:
+        count = len(column.numbers)
+        value, upper, lower = column.numbers, np.full(count, np.nan), np.full(count, np.nan)
+        alone = ~np.isnan(value)
+        exact, fault = np.zeros(count, bool), np.zeros(count, np.uint8)
+        units: np.ndarray = np.full(count, column.unit)
+    else:
+        text = parse_text(column.texts)
+        value, upper, lower = text.value, text.upper.copy(), text.lower.copy()
+        alone, exact = text.kind == TextKind.VALUE_ONLY, text.kind == TextKind.EXACT
+        fault = np.zeros(len(value), np.uint8)
+        fault[text.kind == TextKind.LIMIT] = Status.LIMIT_ONLY
+        fault[text.kind == TextKind.NOT_A_NUMBER] = Status.NOT_A_NUMBER
+        written = np.array(text.unit, dtype=str)
+        units = np.where(written == "", column.unit, written)
+    for ending, sides in zip(_ERRORS, ((upper, lower), (upper,), (lower,)), strict=True):
+        if name + ending in part:
+            errors, bad, none = _errors(observable, part[name + ending], column.unit)
+            exact |= alone & none
+            fault[alone & bad & (fault == Status.OK)] = Status.NOT_A_NUMBER
+            for side in sides:
+                side[:] = np.where(alone & ~np.isnan(errors), errors, side)
+    chosen: object = shape
+    if name + "_shape" in part:
+        words = np.char.strip(part[name + "_shape"].as_texts())
+        fallback = np.where(upper == lower, shape, "") if shape in ("", "normal", "lognormal") else ""
+        chosen = np.where(words == "", fallback, words)
+    return measured_from_columns(
+        observable, value, upper, lower, unit=units, exact=exact, shape=chosen, fault=fault
+    )
+
+
+def _errors(observable, column: RawColumn, value_unit: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Errors in the unit of the values, where they are no numbers, and where they read 'exact'."""
+    numbers, bad = _numbers(column)
+    none = np.zeros(len(numbers), bool)
+    if column.texts is not None:
+        none = np.char.lower(np.char.strip(column.as_texts())) == "exact"
+        bad &= ~none
+    if column.unit:
+        numbers = in_unit_of_value(observable, numbers, column.unit, value_unit)
+    return np.where(none, np.nan, numbers), bad, none
