@@ -34,6 +34,7 @@ _CLIP = 8.3  # scores beyond this carry a probability of 1e-16
 _TOLERANCE = 1e-12  # accepted error of one panel of an intermediate distribution
 _ORDER = 16  # Chebyshev nodes per stored panel
 _NODES = 16  # Gauss-Legendre nodes per quadrature panel
+_MOST_PANELS = 1000  # pending at once, before giving up
 _ROWS = 200  # abscissae folded at once (memory only)
 _TINY = 1e-300
 _SHAPES = ("normal", "lognormal", "three-quantile", "split-normal", "exact")
@@ -49,6 +50,12 @@ def _score(lower, upper):
     """Return the standard score of probabilities `lower` = 1 - `upper`, accurate in both tails."""
     lower, upper = np.clip(lower, 0.0, 1.0), np.clip(upper, 0.0, 1.0)
     return np.where(lower < upper, ndtri(lower), -ndtri(upper))
+
+
+def _mass(low, high):
+    """Return the standard normal probability between scores low <= high (arrays)."""
+    flip = np.asarray(low) > 0.0
+    return np.where(flip, ndtr(-low) - ndtr(-high), ndtr(high) - ndtr(low))
 
 
 def _above(low, mass):
@@ -205,61 +212,69 @@ class _Measured:
 
 
 class _Structure:
-    """The term q = ln w(n) under a prior that is not a point."""
+    """The term q - centre, q = ln w(n), under a prior that is not a point."""
 
     def __init__(self, prior):
-        self.kind, self.first, self.second = prior
+        self.kind, first, second = prior
         if self.kind == "normal":
-            self.low = -self.first / self.second
-            self.high = (5.0 - self.first) / self.second
-            self.kept = max(ndtr(self.high) - ndtr(self.low), ndtr(-self.low) - ndtr(-self.high))
+            self.mean, self.sd = first, second
+            self.low, self.high = -first / second, (5.0 - first) / second
+            self.kept = _mass(self.low, self.high)
+            middle = 5.0 - min(max(first, 0.0), 4.9)
             ends = (0.0, 5.0)
         elif self.kind in ("uniform", "uniform-coefficient", "uniform-log-coefficient"):
-            if not self.first < self.second:
+            if not first < second:
                 raise ValueError("the bounds of a uniform prior must increase")
-            ends = (self.first, self.second)
+            ends = (first, second)
+            self.width = second - first
+            middle = (
+                0.5 * ((5.0 - first) + (5.0 - second)) if self.kind == "uniform" else 0.5 * (first + second)
+            )
+            if self.kind == "uniform-log-coefficient":
+                self.width = np.log(second / first)
+                middle = np.sqrt(first * second)
         else:
             raise ValueError(f"unknown prior {self.kind!r}")
+        self.middle = middle  # 5 - n (priors on n) or w (priors on the coefficient) at the centre
         if self.kind in ("uniform", "normal"):
             ends = tuple(3.0 / (5.0 - n) if n < 5.0 else np.inf for n in ends)
-        self.kinks = tuple(float(np.log(w)) for w in ends if np.isfinite(w))
+            middle = 3.0 / middle
+        self.centre = float(np.log(middle))
+        self.kinks = tuple(float(np.log(w / middle)) for w in ends if np.isfinite(w))
 
     def at(self, u):
-        """Return q at standard score(s) u."""
+        """Return q - centre at standard score(s) u."""
         u = np.asarray(u, dtype=float)
         p, s = ndtr(u), ndtr(-u)
-        width = self.second - self.first
+        offset = np.where(u < 0.0, p - 0.5, 0.5 - s)
         if self.kind == "uniform":
-            return np.log(3.0) - np.log((5.0 - self.second) + s * width)
+            far = (self.middle - 0.5 * self.width) + s * self.width
+            return -_log_of(-offset * self.width / self.middle, far / self.middle)
         if self.kind == "uniform-coefficient":
-            return np.log(self.first + p * width)
+            return np.log1p(offset * self.width / self.middle)
         if self.kind == "uniform-log-coefficient":
-            return np.log(self.first) + p * np.log(self.second / self.first)
-        z, _ = _above(self.low, p * self.kept)
-        gap = _above(-self.high, s * self.kept)[1]
+            return offset * self.width
+        z = _above(self.low, p * self.kept)[0]
+        minus_z, gap = _above(-self.high, s * self.kept)
         below = (self.low <= 0.0) & ((self.high < 0.0) | (ndtr(self.low) + p * self.kept < 0.5))
-        gap = np.where(below, self.high - z, gap)
-        return np.log(3.0) - np.log(np.maximum(self.second * gap, _TINY))
+        z, gap = np.where(below, z, -minus_z), np.where(below, self.high - z, gap)
+        change = (self.mean - (5.0 - self.middle)) + self.sd * z  # n minus its value at the centre
+        return -_log_of(-change / self.middle, self.sd * gap / self.middle)
 
     def tails(self, x):
-        """Return P(q <= x) and its complement."""
-        x = np.asarray(x, dtype=float)
-        if self.kind in ("uniform", "normal"):
-            rest = 3.0 * np.exp(-np.clip(x, -600.0, 600.0))  # 5 - n
-        if self.kind == "uniform":
-            width = self.second - self.first
-            lower, upper = ((5.0 - self.first) - rest) / width, (rest - (5.0 - self.second)) / width
-        elif self.kind == "uniform-coefficient":
-            w = np.exp(np.clip(x, -600.0, 600.0))
-            width = self.second - self.first
-            lower, upper = (w - self.first) / width, (self.second - w) / width
-        elif self.kind == "uniform-log-coefficient":
-            width = np.log(self.second / self.first)
-            lower, upper = (x - np.log(self.first)) / width, (np.log(self.second) - x) / width
+        """Return P(q - centre <= x) and its complement."""
+        x = np.clip(np.asarray(x, dtype=float), -600.0, 600.0)
+        change = -self.middle * np.expm1(-x)  # of n
+        if self.kind == "normal":
+            z = ((5.0 - self.middle) - self.mean + change) / self.sd
+            z = np.clip(z, self.low, self.high)
+            lower, upper = _mass(self.low, z) / self.kept, _mass(z, self.high) / self.kept
         else:
-            z = np.clip(self.high - rest / self.second, self.low, self.high)
-            lower = (ndtr(z) - ndtr(self.low)) / self.kept
-            upper = (ndtr(-z) - ndtr(-self.high)) / self.kept
+            if self.kind == "uniform-coefficient":
+                change = self.middle * np.expm1(x)
+            elif self.kind == "uniform-log-coefficient":
+                change = x
+            lower, upper = 0.5 + change / self.width, 0.5 - change / self.width
         return np.clip(lower, 0.0, 1.0), np.clip(upper, 0.0, 1.0)
 
 
@@ -297,6 +312,8 @@ class _Curve:
             done_left.append(left[good])
             done_coefficients.append(coefficients[good])
             left, right = left[~good], right[~good]
+            if left.size > _MOST_PANELS:
+                raise RuntimeError("an intermediate distribution could not be resolved")
             middle = 0.5 * (left + right)
             left, right = np.concatenate([left, middle]), np.concatenate([middle, right])
         starts = np.concatenate(done_left)
@@ -348,7 +365,9 @@ def _terms(inputs, weights, prior):
         w = 3.0 / (5.0 - prior[1]) if prior[0] == "uniform" else prior[1]
         shift += np.log(w)
     else:
-        parts.append(_Structure(prior))
+        structure = _Structure(prior)
+        shift += structure.centre
+        parts.append(structure)
     parts.sort(key=lambda part: -float(part.at(1.0) - part.at(-1.0)))
     return float(shift), parts
 
@@ -367,7 +386,7 @@ def _prepare(inputs, weights, prior, refine):
     def seeds():
         return np.concatenate([marks, kinks[(kinks > marks[0]) & (kinks < marks[-1])]])
 
-    curve = _Curve(lambda s: widest.tails(s)[0], seeds(), 0.01 * tolerance)
+    curve = _Curve(lambda s: widest.tails(s)[0], seeds(), 0.1 * tolerance)
     for part in parts[1:-1]:
         base = _base_edges(part, refine)
         kinks = np.add.outer(kinks, np.array(part.kinks)).ravel()
@@ -439,7 +458,7 @@ def _index_density(prior):
     if kind == "uniform":
         return q_of, (lambda n: 1.0 / (second - first)), n_of, (first, second)
     low, high = -first / second, (5.0 - first) / second
-    kept = max(ndtr(high) - ndtr(low), ndtr(-low) - ndtr(-high))
+    kept = _mass(low, high)
     ends = (max(0.0, first - 9.0 * second), min(5.0, first + 9.0 * second))
     return q_of, (lambda n: _density((n - first) / second) / (second * kept)), n_of, ends
 

@@ -20,6 +20,7 @@ _SIZES = 2 ** np.arange(7, 13)  # grid sizes
 _HERMITE, _HERMITE_WEIGHT = np.polynomial.hermite_e.hermegauss(24)
 _HERMITE_WEIGHT = _HERMITE_WEIGHT / _HERMITE_WEIGHT.sum()
 _WINDOW = 1e-9  # probability outside the window of the result
+_LARGEST = 300.0  # exponent beyond which no quantile is ever asked for
 _BATCH = 512  # stars transformed together, for the sake of the cache; no result depends on it
 
 
@@ -56,6 +57,7 @@ def convolve(
     largest = int(size.max(initial=0))
     table = np.ones((len(mean), largest))
     slope = np.zeros((len(mean), largest))
+    tilted, tilted_slope = np.zeros((2, len(mean), largest))
     error = np.zeros(len(mean))
     for number in np.unique(size):
         rows = np.flatnonzero(size == number)
@@ -64,6 +66,11 @@ def convolve(
             chosen = [(m.take(some), w[some], i[some]) for m, w, i in terms if i[some].any()]
             cumulative, density, error[some] = _transform(chosen, low[some], step[some], normal_sd[some], int(number))
             table[some, :number], slope[some, :number] = cumulative, density
+            residual = low[some, None] + step[some, None] * np.arange(number)
+            integrand = np.exp(np.minimum(residual, _LARGEST)) * density
+            tilted_slope[some, :number] = integrand
+            running = _running_integral(integrand, step[some])
+            tilted[some, :number], tilted[some, number:] = running, running[:, -1:]
     first = np.argmax(table > _WINDOW, axis=1)
     last = np.argmax(table >= 1.0 - _WINDOW, axis=1)
     begin = low + mean
@@ -72,8 +79,11 @@ def convolve(
         step=step,
         lower=begin + np.maximum(first - 1, 0) * step,
         upper=begin + np.where(table[:, -1] > 1.0 - _WINDOW, last, size - 1) * step,
+        mean=mean,
         table=table,
         slope=slope,
+        tilted=tilted,
+        tilted_slope=tilted_slope,
     )
     return part, error
 
@@ -112,3 +122,13 @@ def _transform(terms, low, step, normal_sd, size):
     ripple = fft.irfft(integrated, n=size, axis=-1) / step[:, None]
     cumulative = np.arange(size) / size + ripple - ripple[:, :1]
     return np.clip(cumulative, 0.0, 1.0), np.maximum(density, 0.0), outside + high_frequencies
+
+
+def _running_integral(values: np.ndarray, step: np.ndarray) -> np.ndarray:
+    """Integral from the first point to each, (star, N): sixth order, from six points around each cell."""
+    padded = np.pad(values, ((0, 0), (2, 2)))
+    inner = padded[:, 2:-3] + padded[:, 3:-2]
+    middle = padded[:, 1:-4] + padded[:, 4:-1]
+    outer = padded[:, :-5] + padded[:, 5:]
+    cells = (802.0 * inner - 93.0 * middle + 11.0 * outer) * (step[:, None] / 1440.0)
+    return np.concatenate([np.zeros((len(values), 1)), np.cumsum(cells, axis=1)], axis=1)

@@ -97,16 +97,23 @@ class GridPart:
     Attributes
     ----------
     start, step, lower, upper : ndarray, (star,)
+    mean : ndarray, (star,)
+        Mean of X.
     table, slope : ndarray, (star, N)
         Cumulative and density.
+    tilted, tilted_slope : ndarray, (star, N)
+        Integral of exp(x - mean) times the density up to a point, and its integrand.
     """
 
     start: np.ndarray
     step: np.ndarray
     lower: np.ndarray
     upper: np.ndarray
+    mean: np.ndarray
     table: np.ndarray
     slope: np.ndarray
+    tilted: np.ndarray
+    tilted_slope: np.ndarray
 
     @property
     def mass(self):
@@ -119,19 +126,31 @@ class GridPart:
 
     def evaluate(self, x):
         """Cumulative and density at x, (star, m)."""
-        step = self.step[:, None]
-        place = (x - self.start[:, None]) / step
+        place = (x - self.start[:, None]) / self.step[:, None]
         index = np.clip(np.floor(place), 0, self.table.shape[1] - 2).astype(np.intp)
         t = np.clip(place - index, 0.0, 1.0)
-        value = [np.take_along_axis(self.table, index + i, axis=1) for i in (0, 1)]
-        slope = [np.take_along_axis(self.slope, index + i, axis=1) * step for i in (0, 1)]
+        cumulative, density = self._hermite(self.table, self.slope, index, t)
+        inside = (place >= 0.0) & (place <= self.table.shape[1] - 1)
+        return np.clip(cumulative, 0.0, 1.0), np.where(inside, np.maximum(density, 0.0), 0.0)
+
+    def evaluate_tilted(self, x):
+        """Cumulative, and integral of exp(x' - mean) f(x') up to x, (star, m)."""
+        place = (x - self.start[:, None]) / self.step[:, None]
+        index = np.clip(np.floor(place), 0, self.table.shape[1] - 2).astype(np.intp)
+        t = np.clip(place - index, 0.0, 1.0)
+        cumulative, _ = self._hermite(self.table, self.slope, index, t)
+        tilted, _ = self._hermite(self.tilted, self.tilted_slope, index, t)
+        return np.clip(cumulative, 0.0, 1.0), tilted
+
+    def _hermite(self, table, slopes, index, t):
+        step = self.step[:, None]
+        value = [np.take_along_axis(table, index + i, axis=1) for i in (0, 1)]
+        slope = [np.take_along_axis(slopes, index + i, axis=1) * step for i in (0, 1)]
         rise = value[1] - value[0]
         quadratic = 3.0 * rise - 2.0 * slope[0] - slope[1]
         cubic = slope[0] + slope[1] - 2.0 * rise
         cumulative = value[0] + t * (slope[0] + t * (quadratic + t * cubic))
-        density = (slope[0] + t * (2.0 * quadratic + 3.0 * t * cubic)) / step
-        inside = (place >= 0.0) & (place <= self.table.shape[1] - 1)
-        return np.clip(cumulative, 0.0, 1.0), np.where(inside, np.maximum(density, 0.0), 0.0)
+        return cumulative, (slope[0] + t * (2.0 * quadratic + 3.0 * t * cubic)) / step
 
 
 @dataclass(frozen=True)

@@ -19,7 +19,7 @@ from scipy.special import ndtri
 from stellerg.engines import smoothing
 from stellerg.engines.convolution import convolve
 from stellerg.engines.intervals import MassScore, mass_score, moments_of_structure
-from stellerg.engines.parts import GaussianPart, MassShift, RestrictedPart, SharpPart
+from stellerg.engines.parts import GaussianPart, GridPart, MassShift, RestrictedPart, SharpPart
 from stellerg.problem import Problem
 from stellerg.status import Status
 from stellerg.structure.distributions import Point
@@ -101,7 +101,13 @@ class QuadratureAnswer:
             guess = self.log_mean[chunk, output, None] + self.log_sd[chunk, output, None] * ndtri(p)
             view = out[chunk, output]
             for rows, terms, _ in _terms(piece, output):
-                view[rows] = smoothing.quantile(terms, p, guess[rows])
+                start = guess[rows]
+                if len(terms) == 1 and isinstance(terms[0][1], GridPart):
+                    # the quantiles for a normal measured part of the same mean and width lie close by
+                    mixture, part = terms[0]
+                    normal = GaussianPart(part.mean, np.sqrt(_variance(piece, output)[rows]))
+                    start = smoothing.quantile([(mixture, normal)], p, start)
+                view[rows] = smoothing.quantile(terms, p, start)
         return out
 
     def cumulative(self, log_value: np.ndarray) -> np.ndarray:
@@ -145,6 +151,12 @@ class QuadratureAnswer:
                 mean[straddling, output] += first
                 variance[straddling, output] += second + 2.0 * covariance
         return mean, np.sqrt(variance)
+
+
+def _variance(problem: Problem, output: int) -> np.ndarray:
+    """Variance of the measured part of ln Y, (star,)."""
+    weights = np.broadcast_to(problem.input_weights[:, output], (len(problem), len(problem.inputs)))
+    return np.einsum("sj,sjk,sk->s", weights, problem.log_covariance, weights)
 
 
 def _rows(score: MassScore, rows: np.ndarray) -> MassScore:

@@ -8,7 +8,7 @@ window in which F_X is neither 0 nor 1: exact for X much narrower and much wider
 import numpy as np
 from scipy.special import log_ndtr, ndtr, ndtri
 
-from stellerg.engines.parts import GaussianPart, Part, SharpPart
+from stellerg.engines.parts import GaussianPart, GridPart, Part, SharpPart
 from stellerg.structure.distributions import Uniform
 from stellerg.structure.model import Component, Coordinate, Mixture
 
@@ -76,6 +76,8 @@ def _component(component: Component, part: Part, t: np.ndarray) -> tuple[np.ndar
         return component.cumulative(q), np.exp(component.log_density(q))
     if isinstance(part, GaussianPart) and isinstance(family, Uniform) and component.coordinate is Coordinate.INDEX:
         return uniform_index(t - part.mean[:, None], part.sd[:, None], family.lower, family.upper)
+    if isinstance(part, GridPart) and isinstance(family, Uniform) and component.coordinate is Coordinate.INDEX:
+        return _uniform_index_on_grid(t, part, family)
     # below q = t - upper all of X lies below t - q; above q = t - lower none of it
     low, high = t - part.upper[:, None], t - part.lower[:, None]
     cumulative = mass * component.cumulative(low)
@@ -90,6 +92,16 @@ def _component(component: Component, part: Part, t: np.ndarray) -> tuple[np.ndar
         cumulative = cumulative + (weight * below).sum(axis=-1)
         density = density + (weight * at).sum(axis=-1)
     return cumulative, density + _sharp_density(component, part, t)
+
+
+def _uniform_index_on_grid(t: np.ndarray, part: GridPart, family: Uniform) -> tuple[np.ndarray, np.ndarray]:
+    """The closed form of `uniform_index` for any X: Phi and its tilted companion are read off the grid."""
+    a, b = (float(Coordinate.INDEX.to_log_coefficient(n)) for n in family.support)
+    at_a, tilted_a = part.evaluate_tilted(t - a)
+    at_b, tilted_b = part.evaluate_tilted(t - b)
+    scale = 3.0 / (family.upper - family.lower)
+    tail = np.exp(part.mean[:, None] - t) * (tilted_a - tilted_b)
+    return scale * (np.exp(-a) * at_a - np.exp(-b) * at_b - tail), np.maximum(scale * tail, 0.0)
 
 
 def _sharp_density(component: Component, part: Part, t: np.ndarray) -> np.ndarray:

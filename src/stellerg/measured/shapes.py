@@ -18,7 +18,7 @@ __all__ = [
     "Shape",
     "base_score",
     "base_value",
-    "log_base_slope",
+    "log_base_density",
     "probability_below_zero",
     "restrict",
     "unrestrict",
@@ -53,6 +53,7 @@ SHAPE_WORDS: dict[str, Shape] = {
 }
 
 Array = np.ndarray
+_HALF_LOG_2PI = 0.5 * float(np.log(2.0 * np.pi))
 
 
 def _asymmetry(upper: Array, lower: Array) -> tuple[Array, Array]:
@@ -101,16 +102,18 @@ def base_score(shape: Shape, quoted: Array, value: Array, upper: Array, lower: A
     return (quoted - value) / upper
 
 
-def log_base_slope(shape: Shape, score: Array, quoted: Array, value: Array, upper: Array, lower: Array) -> Array:
-    """Logarithm of d(base score)/d(quoted value), at a base score and the quoted value that belongs to it."""
-    if shape is Shape.THREE_QUANTILE:
-        g, c = _asymmetry(upper, lower)
-        return -np.log(c) - g * score
+def log_base_density(shape: Shape, quoted: Array, value: Array, upper: Array, lower: Array) -> Array:
+    """Logarithm of the density over the quoted value, before the restriction; -inf beyond a hard end."""
     if shape is Shape.SPLIT_NORMAL:
         side = np.where(quoted < value, lower, upper)
-        residual = (quoted - value) / side
-        return np.log(2.0 / (upper + lower)) - 0.5 * residual**2 + 0.5 * score**2
-    return -np.log(upper) + 0.0 * score
+        return np.log(2.0 / (upper + lower)) - 0.5 * ((quoted - value) / side) ** 2 - _HALF_LOG_2PI
+    score = base_score(shape, quoted, value, upper, lower)
+    if shape is not Shape.THREE_QUANTILE:
+        return -np.log(upper) - 0.5 * score**2 - _HALF_LOG_2PI
+    g, c = _asymmetry(upper, lower)
+    inside = np.isfinite(score)
+    finite = np.where(inside, score, 0.0)
+    return np.where(inside, -np.log(c) - g * finite - 0.5 * finite**2 - _HALF_LOG_2PI, -np.inf)
 
 
 def probability_below_zero(shape: Shape, value: Array, upper: Array, lower: Array) -> Array:
@@ -121,22 +124,30 @@ def probability_below_zero(shape: Shape, value: Array, upper: Array, lower: Arra
 
 
 def unrestrict(score: Array, below_zero: Array) -> Array:
-    """Base score of a normal score of the distribution restricted to positive values."""
-    kept = 1.0 - below_zero
-    low = ndtri(below_zero + kept * ndtr(np.minimum(score, 0.0)))
-    high = -ndtri(kept * ndtr(-np.maximum(score, 0.0)))
-    return np.where(below_zero > 0.0, np.where(score <= 0.0, low, high), score)
+    """Base score of a normal score of the distribution restricted to positive values.
+
+    Parameters
+    ----------
+    score : ndarray, (star, k) or (1, k)
+    below_zero : ndarray, (star, 1)
+    """
+    base = np.array(np.broadcast_to(score, np.broadcast_shapes(score.shape, below_zero.shape)))
+    rows = np.flatnonzero(below_zero[:, 0] > 0.0)
+    if rows.size:
+        here, cut = base[rows], below_zero[rows]
+        low = ndtri(cut + (1.0 - cut) * ndtr(np.minimum(here, 0.0)))
+        high = -ndtri((1.0 - cut) * ndtr(-np.maximum(here, 0.0)))
+        base[rows] = np.where(here <= 0.0, low, high)
+    return base
 
 
-def restrict(score: Array, below_zero: Array) -> tuple[Array, Array]:
-    """Normal score of a base score, and the logarithm of its slope d(normal score)/d(base score)."""
-    kept = 1.0 - below_zero
-    upper_tail = ndtr(-score) / kept
-    lower_tail = np.maximum((ndtr(score) - below_zero) / kept, 0.0)
-    restricted = np.where(upper_tail < 0.5, -ndtri(np.minimum(upper_tail, 1.0)), ndtri(np.minimum(lower_tail, 1.0)))
-    normal = np.where(below_zero > 0.0, restricted, score)
-    # phi(base)/(kept phi(normal)), in logarithms; both scores are infinite together only beyond an end
-    finite = np.isfinite(normal) & np.isfinite(score)
-    slope = np.where(finite, 0.5 * (np.where(finite, normal, 0.0) ** 2 - np.where(finite, score, 0.0) ** 2), -np.inf)
-    return normal, slope - np.log(kept)
-
+def restrict(score: Array, below_zero: Array) -> Array:
+    """Normal score of a base score, (star, k); the inverse of `unrestrict`."""
+    normal = np.array(score)
+    rows = np.flatnonzero(below_zero[:, 0] > 0.0)
+    if rows.size:
+        here, cut = score[rows], below_zero[rows]
+        upper_tail = np.minimum(ndtr(-here) / (1.0 - cut), 1.0)
+        lower_tail = np.clip((ndtr(here) - cut) / (1.0 - cut), 0.0, 1.0)
+        normal[rows] = np.where(upper_tail < 0.5, -ndtri(upper_tail), ndtri(lower_tail))
+    return normal

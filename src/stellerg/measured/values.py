@@ -13,8 +13,11 @@ from stellerg.status import Status
 __all__ = ["Measured", "assign"]
 
 LN10 = float(np.log(10.0))
+_HALF_LOG_2PI = 0.5 * float(np.log(2.0 * np.pi))
 # d ln(quantity)/d(quoted value); a magnitude is -2.5 log10 of a flux or luminosity
 LOG_PER_UNIT = {Scale.DEX: LN10, Scale.MAGNITUDE: -0.4 * LN10}
+
+_NO_EFFECT = 1e-25  # a probability below zero that moves no normal score above -10 by more than rounding
 
 # Trapezoid in the normal score: spectrally accurate for smooth integrands, 1e-18 of the probability lies outside.
 _SCORE = np.linspace(-9.0, 9.0, 73)
@@ -79,7 +82,7 @@ class Measured:
         if self.scale is Scale.LINEAR:
             for shape, rows in self._by_shape():
                 removed[rows] = shapes.probability_below_zero(shape, *self._parameters(rows))[:, 0]
-        return removed
+        return np.where(removed < _NO_EFFECT, 0.0, removed)
 
     @cached_property
     def log_median(self) -> np.ndarray:
@@ -164,28 +167,33 @@ class Measured:
             Infinite, and minus infinity, beyond a hard end of the distribution.
         """
         score = np.full(logarithm.shape, np.nan)
-        slope = np.full(logarithm.shape, np.nan)
+        for shape, rows in self._by_shape():
+            here = logarithm[rows]
+            if shape is Shape.LOGNORMAL:
+                score[rows] = (here - self.to_log(self.value[rows])[:, None]) / self._log_slope(rows)[:, None]
+            else:
+                base = shapes.base_score(shape, self._to_quoted(here), *self._parameters(rows))
+                score[rows] = shapes.restrict(base, self.removed[rows][:, None])
+        # the slope is the density over ln(quantity) divided by that of the score
+        inside = np.isfinite(score)
+        squared = np.square(np.where(inside, score, 0.0))
+        log_slope = np.where(inside, self.log_density(logarithm) + 0.5 * squared + _HALF_LOG_2PI, -np.inf)
+        return score, log_slope
+
+    def log_density(self, logarithm: np.ndarray) -> np.ndarray:
+        """Logarithm of the density over ln(quantity), (star, k)."""
+        out = np.full(logarithm.shape, np.nan)
         for shape, rows in self._by_shape():
             here = logarithm[rows]
             if shape is Shape.LOGNORMAL:
                 step = self._log_slope(rows)[:, None]
-                score[rows] = (here - self.to_log(self.value[rows])[:, None]) / step
-                slope[rows] = -np.log(np.abs(step)) + 0.0 * here
+                score = (here - self.to_log(self.value[rows])[:, None]) / step
+                out[rows] = -np.log(np.abs(step)) - 0.5 * score**2 - _HALF_LOG_2PI
                 continue
-            parameters = self._parameters(rows)
-            quoted = np.exp(here) if self.scale is Scale.LINEAR else here / LOG_PER_UNIT[self.scale]
-            base = shapes.base_score(shape, quoted, *parameters)
-            score[rows], restricting = shapes.restrict(base, self.removed[rows][:, None])
-            inside = np.isfinite(score[rows])
-            base_slope = shapes.log_base_slope(shape, np.where(inside, base, 0.0), quoted, *parameters)
-            to_log = here if self.scale is Scale.LINEAR else -np.log(abs(LOG_PER_UNIT[self.scale]))
-            slope[rows] = np.where(inside, base_slope + restricting + to_log, -np.inf)
-        return score, slope
-
-    def log_density(self, logarithm: np.ndarray) -> np.ndarray:
-        """Logarithm of the density over ln(quantity), (star, k)."""
-        score, slope = self.score(logarithm)
-        return slope - 0.5 * score**2 - 0.5 * np.log(2.0 * np.pi)
+            density = shapes.log_base_density(shape, self._to_quoted(here), *self._parameters(rows))
+            to_log = here if self.scale is Scale.LINEAR else np.log(1.0 / abs(LOG_PER_UNIT[self.scale]))
+            out[rows] = density + to_log - np.log1p(-self.removed[rows])[:, None]
+        return out
 
     def _by_shape(self):
         """Yield each shape present with its rows (at most five passes, never one a star)."""
@@ -216,6 +224,10 @@ class Measured:
     def log_derivative(self, quoted):
         """d ln(quantity)/d(quoted value)."""
         return 1.0 / quoted if self.scale is Scale.LINEAR else LOG_PER_UNIT[self.scale] + 0.0 * quoted
+
+    def _to_quoted(self, logarithm):
+        """Value in the quoted scale of ln(quantity)."""
+        return np.exp(logarithm) if self.scale is Scale.LINEAR else logarithm / LOG_PER_UNIT[self.scale]
 
     def _quoted(self, shape, score, rows):
         value, upper, lower = self._parameters(rows)
