@@ -34,6 +34,7 @@ _CLIP = 8.3  # scores beyond this carry a probability of 1e-16
 _TOLERANCE = 1e-12  # accepted error of one panel of an intermediate distribution
 _ORDER = 16  # Chebyshev nodes per stored panel
 _NODES = 16  # Gauss-Legendre nodes per quadrature panel
+_NOISE = 1e-8  # rounding of a nearly vertical distribution accepted below this
 _MOST_PANELS = 1000  # pending at once, before giving up
 _ROWS = 200  # abscissae folded at once (memory only)
 _TINY = 1e-300
@@ -285,10 +286,23 @@ def _base_edges(part, refine):
     return np.unique(np.concatenate([edges, [u for u in inner if abs(u) < _CLIP]]))
 
 
-class _Curve:
-    """A cumulative distribution stored as Chebyshev polynomials on panels; 0 below, 1 above."""
+def _peak_density(parts):
+    """Return an upper bound of the density of the sum of terms: the least of their greatest densities."""
+    u = np.linspace(-_CLIP, _CLIP, 500)
+    masses = 2.0 * np.diff(u) * np.maximum(_density(u[1:]), _density(u[:-1]))  # the 2 is for safety
+    rises = [np.maximum(np.diff(part.at(u)), 1e-200) for part in parts]
+    return min(float(np.max(masses / rise)) for rise in rises)
 
-    def __init__(self, function, seeds, tolerance):
+
+class _Curve:
+    """A cumulative distribution stored as Chebyshev polynomials on panels; 0 below, 1 above.
+
+    `peak` is the greatest density of what is still to be added.  An error e of this distribution on a
+    panel of width h changes the final one by at most e min(1, h peak), which is held to `tolerance`.
+    A panel is also kept when its error is below `_NOISE` and was not reduced by the last bisection.
+    """
+
+    def __init__(self, function, seeds, tolerance, peak):
         k = np.arange(_ORDER)
         theta = np.pi * (k + 0.5) / _ORDER
         nodes = np.cos(theta)
@@ -300,6 +314,7 @@ class _Curve:
 
         seeds = np.unique(seeds)
         left, right = seeds[:-1], seeds[1:]
+        parent = np.full(left.size, np.inf)
         done_left, done_coefficients = [], []
         while left.size:
             half = 0.5 * (right - left)
@@ -307,11 +322,11 @@ class _Curve:
             values = function(s.ravel()).reshape(s.shape)
             coefficients = values[:, :_ORDER] @ to_coefficients.T
             error = np.abs(coefficients @ at_checks.T - values[:, _ORDER:]).max(axis=1)
-            smallest = 4e-15 * np.maximum(np.maximum(np.abs(left), np.abs(right)), 0.01)
-            good = (error < tolerance) | (half < smallest)
+            good = error * np.minimum(1.0, 2.0 * half * peak) < tolerance
+            good |= (error < _NOISE) & (error > 0.6 * parent)
             done_left.append(left[good])
             done_coefficients.append(coefficients[good])
-            left, right = left[~good], right[~good]
+            left, right, parent = left[~good], right[~good], np.tile(error[~good], 2)
             if left.size > _MOST_PANELS:
                 raise RuntimeError("an intermediate distribution could not be resolved")
             middle = 0.5 * (left + right)
@@ -386,8 +401,8 @@ def _prepare(inputs, weights, prior, refine):
     def seeds():
         return np.concatenate([marks, kinks[(kinks > marks[0]) & (kinks < marks[-1])]])
 
-    curve = _Curve(lambda s: widest.tails(s)[0], seeds(), 0.1 * tolerance)
-    for part in parts[1:-1]:
+    curve = _Curve(lambda s: widest.tails(s)[0], seeds(), 0.1 * tolerance, _peak_density(parts[1:]))
+    for number, part in enumerate(parts[1:-1], start=2):
         base = _base_edges(part, refine)
         kinks = np.add.outer(kinks, np.array(part.kinks)).ravel()
         marks = marks + part.at(scores)
@@ -396,7 +411,7 @@ def _prepare(inputs, weights, prior, refine):
             blocks = np.array_split(s, 1 + s.size // _ROWS)
             return np.concatenate([_fold(curve, part, base, refine * _NODES, block) for block in blocks])
 
-        curve = _Curve(function, seeds(), tolerance)
+        curve = _Curve(function, seeds(), tolerance, _peak_density(parts[number:]))
     return shift, parts, curve
 
 

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from astropy import constants, units
 from astropy.constants import iau2015
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from stellerg.energetics import (
@@ -22,6 +22,7 @@ from stellerg.energetics import (
 from stellerg.errors import InputError
 
 PUBLISHED = Path(__file__).parent / "published"
+LAWS = settings(derandomize=True, deadline=None)
 TIGHT = 1e-13  # a product of a dozen rounded factors
 ENERGIES = ("potential_energy", "internal_energy", "binding_energy")
 M, R, L, W = 1.7, 1.3, 2.9, 1.44
@@ -117,6 +118,7 @@ def test_which_times_carry_structure(time, carries):
     assert OUTPUTS["kelvin_helmholtz_time"].carries_structure(Conventions(time=time)) is carries
 
 
+@LAWS
 @given(st.floats(0.1, 10.0), st.sampled_from(sorted(OUTPUTS)), st.sampled_from(range(3)))
 def test_outputs_scale_as_their_definitions(factor, name, which):
     """Doubling a quantity in the definition, read with astropy's units, multiplies by factor^exponent."""
@@ -145,6 +147,7 @@ def test_at_four_thirds_and_below_nothing_binds(g):
     assert binding_factor(g) <= 0.0
 
 
+@LAWS
 @given(st.floats(1.34, 5.0))
 def test_energies_add_up(g):
     """abs(E) + U = abs(Omega), and the virial theorem 3 (g - 1) U = abs(Omega)."""

@@ -15,6 +15,7 @@ from rich.table import Table
 from rich.text import Text
 
 from stellerg import constants
+from stellerg.assembly import Notes, assemble
 from stellerg.catalogue.columns import Columns, recognise
 from stellerg.catalogue.readers import Source, open_table
 from stellerg.catalogue.writers import WRITERS, Rejected, put
@@ -24,7 +25,7 @@ from stellerg.posterior import Posterior
 from stellerg.posterior.columns import summary_columns
 from stellerg.posterior.text import label
 from stellerg.propagate import propagate
-from stellerg.status import FLAG_TEXT, STATUS_TEXT, Flag, Status
+from stellerg.status import FLAG_TEXT, STATUS_TEXT, VALUE, Flag, Status
 from stellerg.structure.files import load_prior
 
 __all__ = ["Run", "explain_columns", "run"]
@@ -179,27 +180,29 @@ def explain_columns(plan: Run) -> RenderableType:
         own = OBSERVABLES[name].unit if not OBSERVABLES[name].unit_required else "none: state it"
         table.add_row(label(name), ", ".join(attached), source.units.get(name, ""), own)
     lines = [f"{pair[0]} and {pair[1]}: column {column}" for pair, column in columns.correlations.items()]
-    posterior = _first_posterior(plan, source, columns)
     texts = [Text("How the columns are read", style="bold"), table]
     texts += [Text(f"Correlation of {line}") for line in lines]
     if columns.unrecognised:
         texts.append(Text(f"Not used: {', '.join(columns.unrecognised)}"))
-    counts = {}
-    for code in posterior.aside:
-        names = posterior.aside_sets[code]
-        counts[names] = counts.get(names, 0) + 1
-    for names, count in counts.items():
-        if names:
-            texts.append(Text(f"Left aside as redundant in {count} of the first {len(posterior)} rows: {', '.join(names)}"))
+    notes = _first_notes(plan, source, columns)
+    for code, count in zip(*np.unique(notes.aside, return_counts=True), strict=True):
+        if notes.aside_sets[code]:
+            names = ", ".join(notes.aside_sets[code])
+            texts.append(Text(f"Left aside as redundant in {count} of the first {len(notes.aside)} rows: {names}"))
+    for code, count in zip(*np.unique(notes.reason, return_counts=True), strict=True):
+        if code:
+            sentence = notes.sentences[code].replace(VALUE, "")
+            texts.append(Text(f"{count} of the first {len(notes.aside)} rows: {sentence}"))
     return Group(*texts)
 
 
-def _first_posterior(plan: Run, source: Source, columns: Columns) -> Posterior:
-    """What is selected for the first rows; quadrature and draws run only when numbers are asked for."""
-    part = next(iter(source.parts()))
-    stars = columns.stars(part, 1, **plan.star_options())
-    _check_use(plan.propagation["use"], columns)
-    return propagate(stars.take(np.arange(min(_BATCH, len(stars)))), **plan.propagation)
+def _first_notes(plan: Run, source: Source, columns: Columns) -> Notes:
+    """What is selected for the first rows."""
+    stars = columns.stars(next(iter(source.parts())), 1, **plan.star_options())
+    options = plan.propagation
+    _check_use(options["use"], columns)
+    some = stars.take(np.arange(min(_BATCH, len(stars))))
+    return assemble(some, options["outputs"], options["conventions"], load_prior(options["prior"]), options["use"]).notes
 
 
 def _check_use(use, columns: Columns) -> None:
