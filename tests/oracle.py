@@ -16,6 +16,9 @@ edges of G_{i-1}; so both factors of the integrand are polynomials on every pane
 the widths, and the non-smooth points (hard ends of a bounded prior, modes of split normals, and their
 sums) lie on panel edges.  `refine` multiplies panels and nodes, so that convergence can be checked.
 
+Limit: when every random term is a 'three-quantile' input whose errors differ by more than a factor of
+about 1000, the distribution is vertical to rounding at several places and RuntimeError is raised.
+
 All logarithms are natural; T, q and everything called x, s, t here are dimensionless (ln of a number).
 """
 
@@ -228,9 +231,7 @@ class _Structure:
                 raise ValueError("the bounds of a uniform prior must increase")
             ends = (first, second)
             self.width = second - first
-            middle = (
-                0.5 * ((5.0 - first) + (5.0 - second)) if self.kind == "uniform" else 0.5 * (first + second)
-            )
+            middle = 0.5 * ((5.0 - first) + (5.0 - second)) if self.kind == "uniform" else 0.5 * (first + second)
             if self.kind == "uniform-log-coefficient":
                 self.width = np.log(second / first)
                 middle = np.sqrt(first * second)

@@ -11,7 +11,7 @@ from astropy.constants import iau2015
 
 from stellerg.measured import Scale
 from stellerg.observables import OBSERVABLES
-from stellerg.propagate import propagate
+from stellerg.propagation import propagate
 from stellerg.stars import Stars
 
 ROUNDING = 1e-12

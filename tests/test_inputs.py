@@ -16,7 +16,7 @@ from reference_star import (
 from stellerg.errors import InputError
 from stellerg.inputs import Exact, measured_from
 from stellerg.observables import OBSERVABLES
-from stellerg.propagate import propagate
+from stellerg.propagation import propagate
 from stellerg.stars import Stars
 from stellerg.status import Status
 
@@ -37,9 +37,7 @@ from stellerg.status import Status
 )
 def test_the_same_measurement_in_every_form(given):
     measured = measured_from(OBSERVABLES["mass"], given)
-    assert (measured.value[0], measured.upper[0], measured.lower[0]) == pytest.approx(
-        (1.02, 0.03, 0.03), rel=1e-14
-    )
+    assert (measured.value[0], measured.upper[0], measured.lower[0]) == pytest.approx((1.02, 0.03, 0.03), rel=1e-14)
     assert measured.fault.tolist() == [Status.OK]
     assert measured_from(OBSERVABLES["mass"], measured) is measured
 
@@ -58,9 +56,7 @@ def test_bare_numbers_lack_an_error_and_empty_cells_are_empty():
 
 
 def test_texts_with_units():
-    measured = measured_from(
-        OBSERVABLES["radius"], ["1.0 ± 0.1", "(695700 ± 69570) km", "1.0 ± 0.1 kg", "<2"]
-    )
+    measured = measured_from(OBSERVABLES["radius"], ["1.0 ± 0.1", "(695700 ± 69570) km", "1.0 ± 0.1 kg", "<2"])
     assert measured.fault.tolist() == [Status.OK, Status.OK, Status.UNIT_MISSING, Status.LIMIT_ONLY]
     assert measured.value[:2] == pytest.approx([1.0, 1.0], rel=ROUNDING)
     assert measured.upper[:2] == pytest.approx([0.1, 0.1], rel=ROUNDING)
@@ -119,9 +115,7 @@ def test_sequences_of_ufloats_carry_their_correlations():
     one = Stars.of(mass=mass[0], radius=radius[0], shape="lognormal")
     two = Stars.of(mass=mass, radius=radius, shape="lognormal")
     found = point(two, outputs=["binding_energy"]).log10_sd("binding_energy")
-    assert found[0] == pytest.approx(
-        point(one, outputs=["binding_energy"]).log10_sd("binding_energy")[0], rel=1e-12
-    )
+    assert found[0] == pytest.approx(point(one, outputs=["binding_energy"]).log10_sd("binding_energy")[0], rel=1e-12)
 
 
 def test_a_correlation_with_a_magnitude_changes_sign():

@@ -153,9 +153,7 @@ def test_moments_of_the_logarithm_of_a_restricted_normal(error):
 
     def mean_of(function):
         return sum(
-            integrate.quad(lambda q: function(q) * np.exp(q) * reference.pdf(np.exp(q)), a, b, epsabs=1e-13)[
-                0
-            ]
+            integrate.quad(lambda q: function(q) * np.exp(q) * reference.pdf(np.exp(q)), a, b, epsabs=1e-13)[0]
             for a, b in itertools.pairwise(np.log(cuts))
         )
 

@@ -122,9 +122,7 @@ def test_cumulative_of_an_input_is_the_integral_of_its_density(source):
         steps = np.array([0.0, 1.0, 4.0, 20.0, 100.0, 1e3, 1e4, 1e5])
         marks = np.unique(np.clip([low, m - 3 * b, m - b, *(m + a * steps), high], low, high))
         ends = pairwise(marks)
-        return sum(
-            quad(lambda v: plain_density(source, v), *pair, epsabs=1e-13, limit=200)[0] for pair in ends
-        )
+        return sum(quad(lambda v: plain_density(source, v), *pair, epsabs=1e-13, limit=200)[0] for pair in ends)
 
     total = mass(1e-12 if source.shape == "lognormal" else 0.0, m + 1e6 * a)
     for v in (m - 2.5 * b, m - b, m - 0.2 * b, m + 0.5 * a, m + 3.0 * a):
@@ -353,13 +351,13 @@ def test_inversion_of_the_characteristic_function_agrees(inputs, weights, prior,
 def test_nested_quadrature_of_kinked_terms_agrees(wide, narrow):
     inputs, weights, bounds = [wide, narrow], (2, -3), (1.0, 4.0)
     q1, q2 = (math.log(3.0 / (5.0 - n)) for n in bounds)
-    y, p = pieces(wide, 1500)
+    y, p = pieces(wide, 200)
     outer = 2.0 * (y + math.log(wide.value))
-    y, r = pieces(narrow, 8)
+    y, r = pieces(narrow, 6)
     inner = -3.0 * (y + math.log(narrow.value))
-    for t in (0.6, 2.4, 3.0, 4.1):
+    for t in (0.6, 2.4, 3.6):
         expected = 0.0
-        for rows, masses in zip(np.array_split(outer, 60), np.array_split(p, 60), strict=True):
+        for rows, masses in zip(np.array_split(outer, 40), np.array_split(p, 40), strict=True):
             q = np.clip(t - rows[:, None] - inner, q1, q2)
             expected += masses @ (((5.0 - 3.0 * np.exp(-q) - bounds[0]) / (bounds[1] - bounds[0])) @ r)
         # the kinks inside the panels of this plain rule limit it, not the reference

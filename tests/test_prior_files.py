@@ -212,9 +212,7 @@ def test_every_kind_of_density_is_read():
             model = parse_prior(HEAD + f"[{coordinate}]\n" + density)
             (part,) = model.intervals[0].mixture.components
             assert part.coordinate is Coordinate(coordinate)
-            assert part.cumulative(part.quantile(np.array([0.5]))) == pytest.approx(
-                1.0 if part.is_point else 0.5
-            )
+            assert part.cumulative(part.quantile(np.array([0.5]))) == pytest.approx(1.0 if part.is_point else 0.5)
 
 
 def test_weights_that_sum_to_one_but_for_rounding_are_normalised():

@@ -2,11 +2,11 @@
 
 import mpmath
 import numpy as np
-import oracle
 import pytest
-from cases import PROBABILITIES, SHAPES, VALUES, WEIGHTS, oracle_terms, quoted, random_star
 from scipy.special import ndtri
 
+import oracle
+from cases import PROBABILITIES, SHAPES, VALUES, WEIGHTS, oracle_terms, quoted, random_star
 from stellerg import Conventions, Stars, load_prior, propagate
 from stellerg.assembly import assemble
 from stellerg.engines.quadrature import Quadrature
@@ -69,9 +69,7 @@ def test_every_index_and_coefficient_prior_against_the_oracle(prior, for_oracle,
 
 def test_forty_random_stars_of_mixed_shapes_against_the_oracle():
     rng = np.random.default_rng(40)
-    worst = [
-        worst_against_oracle(propagate(random_star(rng, number)), ("uniform", 1.5, 3.0)) for number in range(40)
-    ]
+    worst = [worst_against_oracle(propagate(random_star(rng, number)), ("uniform", 1.5, 3.0)) for number in range(40)]
     assert max(worst) < 1e-4, worst
 
 
@@ -106,7 +104,8 @@ def test_closed_form_is_the_integral_it_claims_to_be():
     mpmath.mp.dps = 30
     for sigma, t in ((0.05, 0.1), (0.5, -0.3)):
         direct = mpmath.quad(
-            lambda n, sigma=sigma, t=t: mpmath.ncdf((t - mpmath.log(3 / (5 - n))) / sigma) / 1.5, [1.5, 2, 2.5, 3]
+            lambda n, sigma=sigma, t=t: mpmath.ncdf((t - mpmath.log(3 / (5 - n))) / sigma) / 1.5,
+            [1.5, 2, 2.5, 3],
         )
         found, _ = uniform_index(np.array([[t]]), np.array([[sigma]]), 1.5, 3.0)
         assert abs(float(direct) - found[0, 0]) < 1e-9
@@ -124,9 +123,7 @@ def test_point_prior_and_log_normal_inputs_give_an_exactly_normal_logarithm(rela
 
 
 def test_exact_inputs_and_a_point_prior_give_zero_width():
-    posterior = propagate(
-        Stars.of(mass="1 exact", radius="2 exact", luminosity="3 exact"), prior="polytrope-1.5"
-    )
+    posterior = propagate(Stars.of(mass="1 exact", radius="2 exact", luminosity="3 exact"), prior="polytrope-1.5")
     values = posterior.quantile((1e-6, 0.5, 1 - 1e-6), OUTPUT)[0]
     assert values[0] == values[1] == values[2]
     assert posterior.log10_sd(OUTPUT)[0] == 0.0
@@ -163,9 +160,9 @@ def test_over_determined_log_normal_rows_equal_generalised_least_squares():
     spread = np.linalg.inv(design.T @ precision @ design)
     estimate = spread @ design.T @ precision @ (truth - reference)
     weights = np.array([2.0, -1.0, -1.0])
-    unit = propagate(
-        Stars.of(mass="1 exact", radius="1 exact", luminosity="1 exact"), prior="polytrope-3"
-    ).median(OUTPUT)[0]
+    unit = propagate(Stars.of(mass="1 exact", radius="1 exact", luminosity="1 exact"), prior="polytrope-3").median(
+        OUTPUT
+    )[0]
     assert np.log(posterior.median(OUTPUT)[0] / unit) == pytest.approx(weights @ estimate, abs=1e-10)
     assert posterior.log10_sd(OUTPUT)[0] * np.log(10) == pytest.approx(np.sqrt(weights @ spread @ weights), abs=1e-10)
     residual = truth - reference - design @ estimate
@@ -177,9 +174,7 @@ def test_a_useless_extra_measurement_changes_nothing():
     given = {"mass": (1.2, 0.05), "radius": (1.3, 0.04), "luminosity": (1.5, 0.1)}
     alone = propagate(Stars.of(shape="lognormal", **given))
     joined = propagate(Stars.of(shape="lognormal", log_mass=(0.9, 1e6), **given), use=(*given, "log_mass"))
-    np.testing.assert_allclose(
-        joined.quantile(PROBABILITIES, OUTPUT), alone.quantile(PROBABILITIES, OUTPUT), rtol=1e-9
-    )
+    np.testing.assert_allclose(joined.quantile(PROBABILITIES, OUTPUT), alone.quantile(PROBABILITIES, OUTPUT), rtol=1e-9)
 
 
 def test_correlated_log_normal_inputs_have_the_variance_of_their_covariance_matrix():
@@ -200,9 +195,15 @@ def test_correlated_log_normal_inputs_have_the_variance_of_their_covariance_matr
 BEYOND = {  # case: inputs, and the mass as (median, relative error) of a log-normal, or an input of its own
     "log-normal": ({"mass": (0.36, 0.03), "radius": (0.35, 0.02), "luminosity": (0.012, 0.001)}, "lognormal"),
     "normal": ({"mass": (0.36, 0.03), "radius": (0.35, 0.02), "luminosity": (0.012, 0.001)}, None),
-    "only the mass uncertain": ({"mass": (0.36, 0.03), "radius": "0.35 exact", "luminosity": "0.012 exact"}, None),
+    "only the mass uncertain": (
+        {"mass": (0.36, 0.03), "radius": "0.35 exact", "luminosity": "0.012 exact"},
+        None,
+    ),
     "asymmetric": ({"mass": (0.34, 0.02, 0.03), "radius": (0.35, 0.02), "luminosity": (0.012, 0.001)}, None),
-    "falls with the mass": ({"mass": (0.33, 0.1), "radius": (0.35, 0.002), "luminosity": (0.012, 1e-5)}, "lognormal"),
+    "falls with the mass": (
+        {"mass": (0.33, 0.1), "radius": (0.35, 0.002), "luminosity": (0.012, 1e-5)},
+        "lognormal",
+    ),
 }
 
 
@@ -241,7 +242,8 @@ def test_a_mass_that_straddles_a_boundary_is_integrated_interval_by_interval(cas
 def test_straddling_moments_agree_with_the_quantiles():
     """Mean and variance of ln Y are integrals of its quantile function over probability."""
     posterior = propagate(
-        Stars.of(mass=(0.36, 0.03), radius=(0.35, 0.02), luminosity=(0.012, 0.001), shape="lognormal"), prior="by-mass"
+        Stars.of(mass=(0.36, 0.03), radius=(0.35, 0.02), luminosity=(0.012, 0.001), shape="lognormal"),
+        prior="by-mass",
     )
     node, weight = np.polynomial.legendre.leggauss(120)
     z = 8.0 * node
@@ -276,7 +278,9 @@ def test_refusals_name_the_engine_to_use():
         Stars.of(mass=(1, 0.1), log_mass=(0, 0.04), radius=(1, 0.1), luminosity=(1, 0.1)),
         use=("mass", "log_mass", "radius", "luminosity"),
     )
-    sums = problem_of(Stars.of(log_surface_gravity=(4.9, 0.03), radius=(0.35, 0.02), luminosity=(0.01, 0.001)), "by-mass")
+    sums = problem_of(
+        Stars.of(log_surface_gravity=(4.9, 0.03), radius=(0.35, 0.02), luminosity=(0.01, 0.001)), "by-mass"
+    )
     reasons = [engine.reasons[engine.accepts(p)[0]] for p in (correlated, twice, sums)]
     assert len(set(reasons)) == 3
     assert all("montecarlo" in reason for reason in reasons)

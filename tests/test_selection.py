@@ -89,9 +89,7 @@ def test_use_names_what_is_independent():
 def test_use_of_more_than_is_needed_is_a_least_squares_fit():
     """Two equal independent masses halve the variance; one sigma and a half apart, chi-squared is 1.5^2/2."""
     shift = 1.5 * 0.01
-    stars = Stars.of(
-        mass=(1.0, 0.01), log_mass=(shift / LN10, 0.01 / LN10), radius=Exact(1.0), shape="lognormal"
-    )
+    stars = Stars.of(mass=(1.0, 0.01), log_mass=(shift / LN10, 0.01 / LN10), radius=Exact(1.0), shape="lognormal")
     posterior = point(stars, outputs=["binding_energy"], use=["mass", "log_mass", "radius"])
     assert aside(posterior) == ()
     assert posterior.degrees_of_freedom.tolist() == [1]
@@ -153,9 +151,7 @@ def test_an_output_that_does_not_need_what_is_missing_is_given():
     assert posterior.status.tolist() == [Status.PARTIAL]
     assert posterior.median("binding_energy")[0] == pytest.approx(ENERGY, rel=QUANTILE)
     assert np.isnan(posterior.median("kelvin_helmholtz_time")[0])
-    assert posterior.status_text()[0].startswith(
-        "kelvin_helmholtz_time not given: luminosity is not determined"
-    )
+    assert posterior.status_text()[0].startswith("kelvin_helmholtz_time not given: luminosity is not determined")
 
 
 def test_the_mean_density_determines_what_it_can():

@@ -7,7 +7,7 @@ import pytest
 
 from stellerg.energetics import Conventions
 from stellerg.inputs import Exact
-from stellerg.propagate import propagate
+from stellerg.propagation import propagate
 from stellerg.stars import Stars
 from stellerg.status import STATUS_TEXT, Status, carries_results, flag_words, status_word
 
@@ -194,6 +194,14 @@ def test_without_a_bound_star_a_missing_quantity_is_named_too():
     assert "luminosity is not determined" in text
 
 
+def test_a_prior_applies_between_its_limits_of_mass():
+    masses = [0.97, 0.99, 1.01, 1.03]
+    stars = Stars.of(mass=(masses, [0.001] * 4), radius=([1.0] * 4, [0.01] * 4))
+    posterior = propagate(stars, outputs=["binding_energy"], **PRESENT_SUN)
+    inside, outside = "ok", "outside-calibration"
+    assert [status_word(s) for s in posterior.status] == [outside, inside, inside, outside]
+
+
 def test_a_prior_that_does_not_apply_leaves_what_carries_no_structure():
     outputs = ("binding_energy", "free_fall_time")
     posterior = propagate(Stars.of(**{**GOOD, "mass": "2.0 ± 0.1"}), outputs=outputs, **PRESENT_SUN)
@@ -256,7 +264,5 @@ def test_every_status_has_a_word_and_a_sentence():
     words = [text.word for text in STATUS_TEXT.values()]
     assert words == [status.name.lower().replace("_", "-") for status in Status]
     assert all(text.sentence for text in STATUS_TEXT.values())
-    with_results = [
-        word for word, has in zip(words, carries_results(np.array(list(Status))), strict=True) if has
-    ]
+    with_results = [word for word, has in zip(words, carries_results(np.array(list(Status))), strict=True) if has]
     assert with_results == ["ok", "partial", "doubtful"]

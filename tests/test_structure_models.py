@@ -38,17 +38,14 @@ COMPONENTS = {
     "normal on w": Component(Coordinate.COEFFICIENT, Normal(1.6, 0.1, 0.6, 2.5)),
     "uniform on ln w": Component(Coordinate.LOG_COEFFICIENT, Uniform(-0.15, 0.4)),
     "normal on ln w": Component(Coordinate.LOG_COEFFICIENT, Normal(0.4, 0.05, math.log(0.6), 0.85)),
-    "tabulated with a gap": Component(
-        Coordinate.INDEX, Tabulated((1.0, 1.5, 2.0, 2.5, 3.0), (0, 1, 0, 0, 3))
-    ),
+    "tabulated with a gap": Component(Coordinate.INDEX, Tabulated((1.0, 1.5, 2.0, 2.5, 3.0), (0, 1, 0, 0, 3))),
 }
 
 
 def integral(function, panels):
     """Sum of quad over panels."""
     return sum(
-        integrate.quad(function, a, b, epsabs=1e-13, epsrel=1e-12, limit=200)[0]
-        for a, b in itertools.pairwise(panels)
+        integrate.quad(function, a, b, epsabs=1e-13, epsrel=1e-12, limit=200)[0] for a, b in itertools.pairwise(panels)
     )
 
 
@@ -107,8 +104,7 @@ def test_component_is_normalised_and_has_the_moments_of_quad(name):
     component = COMPONENTS[name]
     assert np.all(np.diff(component.panels) > 0.0)
     moments = [
-        integral(lambda q, k=k: q**k * math.exp(component.log_density(np.array(q))), component.panels)
-        for k in range(3)
+        integral(lambda q, k=k: q**k * math.exp(component.log_density(np.array(q))), component.panels) for k in range(3)
     ]
     assert moments[0] == pytest.approx(1.0, abs=1e-10)
     mean, sd = Mixture((1.0,), (component,)).moments
@@ -134,9 +130,7 @@ def test_coordinates(coordinate):
     """w = 3/(5 - n), and the derivative of the coordinate by ln w."""
     n = np.array([0.0, 1.5, 3.0, 4.5])
     log_w = np.log([0.6, 6.0 / 7.0, 1.5, 6.0])
-    value = {Coordinate.INDEX: n, Coordinate.COEFFICIENT: np.exp(log_w), Coordinate.LOG_COEFFICIENT: log_w}[
-        coordinate
-    ]
+    value = {Coordinate.INDEX: n, Coordinate.COEFFICIENT: np.exp(log_w), Coordinate.LOG_COEFFICIENT: log_w}[coordinate]
     assert coordinate.to_log_coefficient(value) == pytest.approx(log_w, abs=1e-15)
     assert coordinate.from_log_coefficient(log_w) == pytest.approx(value, abs=1e-14)
     step = 1e-6
@@ -256,9 +250,7 @@ def test_by_mass_switches_at_its_boundary():
     model, edge = load_prior("by-mass"), math.log(0.35)
     assert model.needs_mass
     assert model.edges == pytest.approx([edge], abs=1e-15)
-    masses = np.array(
-        [-np.inf, math.log(0.08), np.nextafter(edge, -np.inf), edge, np.nextafter(edge, np.inf), 3.0]
-    )
+    masses = np.array([-np.inf, math.log(0.08), np.nextafter(edge, -np.inf), edge, np.nextafter(edge, np.inf), 3.0])
     n = 5.0 - 3.0 * np.exp(-model.quantile(np.full(6, 0.9), masses))
     convective, other = 1.5 + 0.05 * stats.norm.ppf(0.9), 1.5 + 2.5 * 0.9
     assert n == pytest.approx([convective] * 3 + [other] * 3, abs=1e-12)

@@ -25,10 +25,10 @@ _HOME = {
     "available_priors": "stellerg.structure.files",
     "convert_kelvin_helmholtz_time": "stellerg.energetics",
     "load_prior": "stellerg.structure.files",
-    "propagate": "stellerg.propagate",
+    "propagate": "stellerg.propagation",
 }
 
-__all__ = [  # noqa: F822 - each is found through `_HOME`
+__all__ = [
     "ENGINES",
     "OBSERVABLES",
     "OUTPUTS",
@@ -55,7 +55,6 @@ def __getattr__(name: str):
         raise AttributeError(f"module 'stellerg' has no attribute {name!r}")
     module = import_module(_HOME[name])
     value = getattr(module, name)
-    # replaces the submodule of the same name that the import has just set (propagate)
     globals()[name] = value
     return value
 

@@ -64,11 +64,22 @@ class Notes:
         """Give rows a status with its sentence."""
         if not len(rows):
             return
+        self.status[rows] = status
+        self.reason[rows] = self._number(sentence)
+        self.culprit[rows] = list(OBSERVABLES).index(culprit) if culprit else -1
+
+    def add(self, rows: np.ndarray, status: Status, sentence: str) -> None:
+        """Give rows a status, and its sentence after the one they have."""
+        for code in np.unique(self.reason[rows]):
+            some = rows[self.reason[rows] == code]
+            joined = f"{self.sentences[code]}; {sentence}" if code else sentence
+            self.status[some] = status
+            self.reason[some] = self._number(joined)
+
+    def _number(self, sentence: str) -> int:
         if sentence not in self.sentences:
             self.sentences.append(sentence)
-        self.status[rows] = status
-        self.reason[rows] = self.sentences.index(sentence)
-        self.culprit[rows] = list(OBSERVABLES).index(culprit) if culprit else -1
+        return self.sentences.index(sentence)
 
 
 @dataclass(frozen=True)
@@ -111,11 +122,11 @@ def assemble(
             continue
         given = [need for need in given if need.name in bound]
         if not given:
-            notes.set(rows, Status.NOT_BOUND, STATUS_TEXT[Status.NOT_BOUND].sentence)
+            notes.add(rows, Status.NOT_BOUND, STATUS_TEXT[Status.NOT_BOUND].sentence)
             continue
         if len(given) < sum(selection.given):
             lacking = ", ".join(n.name for n, has in zip(needs, selection.given, strict=True) if has and n not in given)
-            notes.set(rows, Status.PARTIAL, f"{lacking} not given: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
+            notes.add(rows, Status.PARTIAL, f"{lacking} not given: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
         problems += _problems_of_pattern(stars, rows, selection, given, conventions, structure, notes)
     return Assembly(tuple(_applicable(problems, stars, structure, notes)), tuple(outputs), notes)
 
@@ -182,12 +193,12 @@ def _problems_of_pattern(
     for number, case in enumerate(cases):
         here = rows[which.ravel() == number]
         problem, conflict = _eliminate(stars, here, selection.chosen, case, given, conventions, structure)
-        notes.set(
-            here[conflict], Status.EXACT_VALUES_CONFLICT, STATUS_TEXT[Status.EXACT_VALUES_CONFLICT].sentence
-        )
+        notes.set(here[conflict], Status.EXACT_VALUES_CONFLICT, STATUS_TEXT[Status.EXACT_VALUES_CONFLICT].sentence)
         invalid = _invalid_correlations(stars, problem)
         notes.set(
-            here[invalid & ~conflict], Status.CORRELATION_INVALID, STATUS_TEXT[Status.CORRELATION_INVALID].sentence
+            here[invalid & ~conflict],
+            Status.CORRELATION_INVALID,
+            STATUS_TEXT[Status.CORRELATION_INVALID].sentence,
         )
         problem = problem.take(np.flatnonzero(~conflict & ~invalid))
         if len(problem):
@@ -221,9 +232,7 @@ def _eliminate(stars, rows, chosen, exact, given, conventions, structure) -> tup
     names = [need.name for need in given]
     wanted = np.array([need.monomials[0] for need in given]).reshape(len(given), len(LATENTS))
     structured = [OUTPUTS[name].carries_structure(conventions) for name in names]
-    constant = [
-        OUTPUTS[name].log_constant(conventions) + np.log(OUTPUTS[name].factor(conventions)) for name in names
-    ]
+    constant = [OUTPUTS[name].log_constant(conventions) + np.log(OUTPUTS[name].factor(conventions)) for name in names]
     known = [n for n, latent in enumerate(LATENTS) if determined(tuple(np.eye(len(LATENTS))[n]), chosen)]
     latent = np.eye(len(LATENTS))[known]
     if LATENTS.index("mass") in known or not structure.needs_mass:
@@ -302,7 +311,7 @@ def _applicable(problems, stars: Stars, structure: StructureModel, notes: Notes)
         if len(plain):  # what carries no structure stays available
             kept.append(problem.take(np.flatnonzero(outside)).only(plain))
             lacking = ", ".join(n for n in problem.outputs if n not in kept[-1].outputs and n != COEFFICIENT)
-            notes.set(problem.rows[outside], Status.PARTIAL, f"{lacking} not given: {sentence}")
+            notes.add(problem.rows[outside], Status.PARTIAL, f"{lacking} not given: {sentence}")
         else:
             notes.set(problem.rows[outside], Status.OUTSIDE_CALIBRATION, sentence)
         kept.append(problem.take(np.flatnonzero(~outside)))

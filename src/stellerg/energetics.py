@@ -11,6 +11,8 @@ import math
 from dataclasses import dataclass
 from typing import Final
 
+import numpy as np
+
 from stellerg import constants as const
 from stellerg.errors import InputError
 
@@ -108,7 +110,9 @@ class Conventions:
     @property
     def energy_text(self) -> str:
         """The energy convention in words, with its factor."""
-        gas = "monatomic ideal gas" if self.adiabatic_index == MONATOMIC else f"adiabatic index {self.adiabatic_index:g}"
+        gas = (
+            "monatomic ideal gas" if self.adiabatic_index == MONATOMIC else f"adiabatic index {self.adiabatic_index:g}"
+        )
         share = "abs(Omega)/2" if self.factor == 0.5 else f"{self.factor:.6g} abs(Omega)"
         return f"abs(E) = {share} ({gas})"
 
@@ -210,14 +214,16 @@ def convert_kelvin_helmholtz_time(
     InputError
         If a convention is unknown, the coefficient is needed and missing, or the star is not bound.
     """
-    conventions = {name: Conventions(time=name, adiabatic_index=adiabatic_index) for name in (source, target)}
     output = OUTPUTS["kelvin_helmholtz_time"]
-    ratio = output.factor(conventions[target]) / output.factor(conventions[source]) if source != target else 1.0
-    if not (math.isfinite(ratio) and ratio > 0.0):
+    factors = [output.factor(Conventions(name, adiabatic_index)) for name in (source, target)]
+    if min(factors) <= 0.0:
         raise InputError(f"adiabatic index: {adiabatic_index} leaves the star unbound; it must exceed 4/3")
+    ratio = factors[1] / factors[0]
     power = int(TIME_CONVENTIONS[target].structure) - int(TIME_CONVENTIONS[source].structure)
     if power and coefficient is None:
         raise InputError(
             f"conversion from {source} to {target} needs the structure coefficient w (3/(5 - n) for a polytrope)"
         )
+    if power and not np.all(np.asarray(coefficient) > 0.0):
+        raise InputError(f"coefficient: {coefficient} must be positive (3/(5 - n) for a polytrope)")
     return value * ratio * (coefficient**power if power else 1.0)

@@ -89,9 +89,7 @@ def measured_from_columns(
     if observable.name == "parallax":
         with np.errstate(invalid="ignore"):
             fault = np.where((fault == Status.OK) & (own <= 0.0), Status.PARALLAX_NOT_USABLE, fault)
-    return assign(
-        own, upper * factor, lower * factor, scale=observable.scale, exact=exact, shape=shape, fault=fault
-    )
+    return assign(own, upper * factor, lower * factor, scale=observable.scale, exact=exact, shape=shape, fault=fault)
 
 
 def _from_texts(observable: Observable, cells: list, shape, unit: str) -> Measured:
@@ -142,13 +140,18 @@ def _error(observable: Observable, error, value_unit: str, unit: str) -> np.ndar
 
 
 def in_unit_of_value(observable: Observable, error: np.ndarray, own: str, value_unit: str) -> np.ndarray:
-    """Convert errors to the unit of their values; NaN where the units are not of one kind.
+    """Convert errors to the unit of their values.
 
     Parameters
     ----------
     observable : Observable
     error : ndarray, (star,)
     own, value_unit : str
+
+    Raises
+    ------
+    InputError
+        If the units are not of one kind.
     """
     if own == value_unit:
         return error
@@ -157,7 +160,10 @@ def in_unit_of_value(observable: Observable, error: np.ndarray, own: str, value_
     if observable.scale is not Scale.LINEAR and own in ("", "dex", "mag"):
         return error
     if target is None or source is None:
-        return np.full(error.shape, np.nan)
+        raise InputError(
+            f"{observable.name}: the error has the unit {own or 'none'!r} and the value {value_unit or 'none'!r}; "
+            f"both must be units like {observable.unit}"
+        )
     return error * (source[0] / target[0])
 
 

@@ -78,7 +78,14 @@ OBSERVABLES: dict[str, Observable] = {
         ("log_mass", (1, 0, 0, 0), 0.0, "solMass", _DEX, "log10 of the mass, dex"),
         ("log_radius", (0, 1, 0, 0), 0.0, "solRad", _DEX, "log10 of the radius, dex"),
         ("log_luminosity", (0, 0, 1, 0), 0.0, "solLum", _DEX, "log10 of the luminosity, dex"),
-        ("log_effective_temperature", (0, -0.5, 0.25, 0), _LN_T, "K", _DEX, "log10 of the temperature in K, dex"),
+        (
+            "log_effective_temperature",
+            (0, -0.5, 0.25, 0),
+            _LN_T,
+            "K",
+            _DEX,
+            "log10 of the temperature in K, dex",
+        ),
         ("effective_temperature", (0, -0.5, 0.25, 0), _LN_T, "K", _LINEAR, "effective temperature, K"),
         (
             "log_surface_gravity",
@@ -88,7 +95,15 @@ OBSERVABLES: dict[str, Observable] = {
             _DEX,
             "log10 of the surface gravity in cm s^-2, dex",
         ),
-        ("mean_density", (1, -3, 0, 0), 0.0, "solar", _LINEAR, "mean density, unit required (solar, g/cm3)", True),
+        (
+            "mean_density",
+            (1, -3, 0, 0),
+            0.0,
+            "solar",
+            _LINEAR,
+            "mean density, unit required (solar, g/cm3)",
+            True,
+        ),
         (
             "large_frequency_separation",
             (0.5, -1.5, 0, 0),
@@ -106,10 +121,25 @@ OBSERVABLES: dict[str, Observable] = {
             _LINEAR,
             "asteroseismic frequency of maximum power, muHz",
         ),
-        ("angular_diameter", (0, 1, 0, -1), math.log(_DIAMETER_AT_1_PC), "mas", _LINEAR, "limb-darkened, mas"),
+        (
+            "angular_diameter",
+            (0, 1, 0, -1),
+            math.log(_DIAMETER_AT_1_PC),
+            "mas",
+            _LINEAR,
+            "limb-darkened, mas",
+        ),
         ("parallax", (0, 0, 0, -1), math.log(1e3), "mas", _LINEAR, "parallax, mas"),
         ("distance", (0, 0, 0, 1), 0.0, "pc", _LINEAR, "distance, pc"),
-        ("bolometric_flux", (0, 0, 1, -2), _LN_FLUX, "W / m2", _LINEAR, "unit required (W/m2, erg/(s cm2))", True),
+        (
+            "bolometric_flux",
+            (0, 0, 1, -2),
+            _LN_FLUX,
+            "W / m2",
+            _LINEAR,
+            "unit required (W/m2, erg/(s cm2))",
+            True,
+        ),
         (
             "absolute_bolometric_magnitude",
             (0, 0, 1, 0),
@@ -162,7 +192,9 @@ def unit_conversion(observable: Observable, unit: str) -> tuple[float, float] | 
     if not text:
         return None if observable.unit_required else (1.0, 0.0)
     if observable.scale is Scale.MAGNITUDE:
-        return (1.0, 0.0) if text in ("mag", "magnitude") else None
+        # astropy's own unit says which of the two bolometric zero points it means
+        own = "mag(Bol)" if observable.name == "absolute_bolometric_magnitude" else "mag(bol)"
+        return (1.0, 0.0) if text in ("mag", "magnitude", own) else None
     if observable.scale is Scale.DEX:
         if text == "dex":
             return 1.0, 0.0

@@ -18,11 +18,9 @@ __all__ = ["Need", "Selection", "determined", "select"]
 _TOLERANCE = 1e-9  # on exponents, which are multiples of 1/8
 
 _SUPPLIED_BY = {
-    "mass": "give mass, or log_surface_gravity or mean_density with radius, or large_frequency_separation with "
-    "radius",
+    "mass": "give mass, or log_surface_gravity or mean_density with radius, or large_frequency_separation with radius",
     "radius": "give radius, or luminosity with effective_temperature, or angular_diameter with parallax or distance",
-    "luminosity": "give luminosity, or effective_temperature with radius, or bolometric_flux with parallax or "
-    "distance",
+    "luminosity": "give luminosity, or effective_temperature with radius, or bolometric_flux with parallax or distance",
 }
 
 

@@ -107,17 +107,15 @@ class Stars:
         shapes = shape if isinstance(shape, Mapping) else dict.fromkeys(observables, shape)
         units = unit or {}
         measured = {
-            name: measured_from(
-                OBSERVABLES[name], given, shape=shapes.get(name), unit=units.get(name, "")
-            )
+            name: measured_from(OBSERVABLES[name], given, shape=shapes.get(name), unit=units.get(name, ""))
             for name, given in observables.items()
             if given is not None
         }
         count = _common_length(measured, star)
         if star is None:
             star = np.arange(1, count + 1).astype(str)
-        correlations = _correlations_of_ufloats(observables)
-        correlations.update(correlation or {})
+        given = {pair: _correlation(pair, value, measured, count) for pair, value in (correlation or {}).items()}
+        correlations = {**_correlations_of_ufloats(observables), **_symmetric(given)}
         return cls(
             identifier=np.atleast_1d(np.asarray(star)).astype(str),
             measured=measured,
@@ -152,7 +150,8 @@ def state_codes(states, count: int, first_row: int = 1) -> np.ndarray:
     if unknown.any():
         row = int(np.flatnonzero(unknown)[0])
         raise InputError(
-            f"evolutionary_state: {words[row]!r} at row {row + first_row} is unknown; choose from {', '.join(STATE_WORDS)}"
+            f"evolutionary_state: {str(words[row])!r} at row {row + first_row} is unknown; "
+            f"choose from {', '.join(STATE_WORDS)}"
         )
     for word, state in STATE_WORDS.items():
         codes[words == word] = state
@@ -179,17 +178,39 @@ def _correlation(pair, value, measured: Mapping[str, Measured], count: int) -> n
     return np.array(np.broadcast_to(np.asarray(value, float), (count,)))
 
 
+def _symmetric(given: Mapping) -> dict:
+    """One entry a pair, in the order of the table; what is given both ways and differs is no correlation."""
+    found: dict[tuple[str, str], np.ndarray] = {}
+    order = list(OBSERVABLES)
+    for pair, values in given.items():
+        key = tuple(sorted(pair, key=order.index))
+        found[key] = np.where(found[key] == values, values, np.inf) if key in found else values
+    return found
+
+
 def _correlations_of_ufloats(observables: Mapping) -> dict:
-    """Correlations that single ufloats carry between each other."""
+    """Correlations that ufloats carry between each other, by pair of observables.
+
+    Ufloats are objects: this is the one place that looks at stars one by one, and only at those.
+    """
     from itertools import combinations
 
-    found = {}
-    single = {name: x for name, x in observables.items() if hasattr(x, "nominal_value") and hasattr(x, "derivatives")}
-    if len(single) > 1:
-        import uncertainties
+    order = [name for name in OBSERVABLES if name in observables]
+    lists = {}
+    for name in order:
+        given = observables[name]
+        items = [given] if hasattr(given, "derivatives") else given
+        many = isinstance(items, (list, tuple, np.ndarray)) and len(items) > 0
+        if many and all(hasattr(item, "derivatives") for item in items):
+            lists[name] = items
+    if len(lists) < 2:
+        return {}
+    import uncertainties
 
-        for (a, x), (b, y) in combinations(single.items(), 2):
-            rho = float(uncertainties.correlation_matrix([x, y])[0, 1]) if x.std_dev and y.std_dev else 0.0
-            if rho != 0.0:
-                found[a, b] = rho
+    found = {}
+    for (first, left), (second, right) in combinations(lists.items(), 2):
+        pairs = zip(left, right, strict=False)
+        rho = np.array([uncertainties.correlation_matrix(p)[0, 1] if p[0].s and p[1].s else 0.0 for p in pairs])
+        if rho.any():
+            found[first, second] = rho
     return found

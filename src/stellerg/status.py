@@ -8,7 +8,16 @@ from enum import IntEnum, IntFlag
 
 import numpy as np
 
-__all__ = ["FLAG_TEXT", "STATUS_TEXT", "VALUE", "Flag", "Status", "carries_results", "flag_words", "status_word"]
+__all__ = [
+    "FLAG_TEXT",
+    "STATUS_TEXT",
+    "VALUE",
+    "Flag",
+    "Status",
+    "carries_results",
+    "flag_words",
+    "status_word",
+]
 
 
 VALUE = "{value}"  # in a sentence, stands for the value of the cell at fault

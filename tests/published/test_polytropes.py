@@ -225,8 +225,7 @@ def test_solar_model_gives_its_published_coefficient():
     assert len(radius) == 18
     enclosed = PchipInterpolator(radius, mass)
     integral = sum(
-        quad(lambda r: (enclosed(r) / r) ** 2, low, high, epsrel=1e-10)[0]
-        for low, high in itertools.pairwise(radius)
+        quad(lambda r: (enclosed(r) / r) ** 2, low, high, epsrel=1e-10)[0] for low, high in itertools.pairwise(radius)
     )
     coefficient = 0.5 + 0.5 * integral
     assert coefficient == pytest.approx(1.61, rel=0.01)

@@ -186,9 +186,7 @@ def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
         words = np.char.strip(part[name + "_shape"].as_texts())
         fallback = np.where(upper == lower, shape, "") if shape in ("", "normal", "lognormal") else ""
         chosen = np.where(words == "", fallback, words)
-    return measured_from_columns(
-        observable, value, upper, lower, unit=units, exact=exact, shape=chosen, fault=fault
-    )
+    return measured_from_columns(observable, value, upper, lower, unit=units, exact=exact, shape=chosen, fault=fault)
 
 
 def _errors(observable, column: RawColumn, value_unit: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

@@ -140,7 +140,9 @@ def _open_ecsv(path: Path) -> Source:
         table = Table.read(path, format="ascii.ecsv")
     except Exception as problem:
         reason = str(problem).strip().splitlines()
-        raise InputError(f"{path}: not a readable ECSV table: {reason[0] if reason else type(problem).__name__}") from None
+        raise InputError(
+            f"{path}: not a readable ECSV table: {reason[0] if reason else type(problem).__name__}"
+        ) from None
     if len(table) == 0:
         raise InputError(f"{path}: the table has a header but no rows")
     names = [str(name) for name in table.colnames]

@@ -24,7 +24,7 @@ from stellerg.observables import OBSERVABLES, SolarReferences
 from stellerg.posterior import Posterior
 from stellerg.posterior.columns import summary_columns
 from stellerg.posterior.text import label
-from stellerg.propagate import propagate
+from stellerg.propagation import propagate
 from stellerg.status import FLAG_TEXT, STATUS_TEXT, VALUE, Flag, Status
 from stellerg.structure.files import load_prior
 
@@ -202,7 +202,9 @@ def _first_notes(plan: Run, source: Source, columns: Columns) -> Notes:
     options = plan.propagation
     _check_use(options["use"], columns)
     some = stars.take(np.arange(min(_BATCH, len(stars))))
-    return assemble(some, options["outputs"], options["conventions"], load_prior(options["prior"]), options["use"]).notes
+    return assemble(
+        some, options["outputs"], options["conventions"], load_prior(options["prior"]), options["use"]
+    ).notes
 
 
 def _check_use(use, columns: Columns) -> None:
@@ -294,7 +296,9 @@ def _closing(plan: Run, folder: Path, tally: Tally) -> RenderableType:
     lines = []
     for output, (total, count) in tally.structure.items():
         if count:
-            lines.append(f"Structure carries {100 * total / count:.0f} % of the variance of ln({label(output)}) on average.")
+            lines.append(
+                f"Structure carries {100 * total / count:.0f} % of the variance of ln({label(output)}) on average."
+            )
     for names, count in sorted(tally.aside.items()):
         lines.append(f"Left aside as redundant in {count:,} stars: {', '.join(names)}.")
     for flag, count in tally.flags.items():
@@ -307,5 +311,8 @@ def _closing(plan: Run, folder: Path, tally: Tally) -> RenderableType:
             "name the independent ones with --use."
         )
     rejected = sum(count for code, count in tally.status.items() if code > Status.DOUBTFUL)
-    lines.append(f"Results in {folder}" + (f"; the {rejected:,} stars not done in rejected.csv, with reasons." if rejected else "."))
+    lines.append(
+        f"Results in {folder}"
+        + (f"; the {rejected:,} stars not done in rejected.csv, with reasons." if rejected else ".")
+    )
     return Group(table, Text(), *(Text(line) for line in lines))

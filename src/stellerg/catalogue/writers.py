@@ -163,4 +163,7 @@ class Rejected:
         from pyarrow import csv
 
         table = pa.concat_tables(self.parts)
-        put(self.folder / "rejected.csv", lambda path: csv.write_csv(table, path, csv.WriteOptions(quoting_style="needed")))
+        put(
+            self.folder / "rejected.csv",
+            lambda path: csv.write_csv(table, path, csv.WriteOptions(quoting_style="needed")),
+        )

@@ -40,8 +40,16 @@ _STARS = "Stars"
 _MEASURED = "Measured quantities, as '1.02 ± 0.03', '1.05(2)', '1.10 +0.12 -0.10' or '1 exact'"
 
 _SHARED: list[tuple[str, object, object]] = [
-    ("prior", str, typer.Option("uniform-index", help="Structure model: a name or a .toml file.", rich_help_panel=_MODEL)),
-    ("engine", str, typer.Option("auto", help="auto, quadrature, montecarlo or linear.", rich_help_panel=_MODEL)),
+    (
+        "prior",
+        str,
+        typer.Option("uniform-index", help="Structure model: a name or a .toml file.", rich_help_panel=_MODEL),
+    ),
+    (
+        "engine",
+        str,
+        typer.Option("auto", help="auto, quadrature, montecarlo or linear.", rich_help_panel=_MODEL),
+    ),
     ("seed", int, typer.Option(0, help="Seed of engines that draw.", rich_help_panel=_MODEL)),
     (
         "outputs",
@@ -62,7 +70,11 @@ _SHARED: list[tuple[str, object, object]] = [
             rich_help_panel=_MODEL,
         ),
     ),
-    ("adiabatic_index", str, typer.Option("5/3", help="Adiabatic index of the gas, above 4/3.", rich_help_panel=_MODEL)),
+    (
+        "adiabatic_index",
+        str,
+        typer.Option("5/3", help="Adiabatic index of the gas, above 4/3.", rich_help_panel=_MODEL),
+    ),
     ("energy_unit", str, typer.Option("erg", help="erg or J.", rich_help_panel=_MODEL)),
     (
         "nuclear_mass_fraction",
@@ -101,9 +113,7 @@ _SHARED: list[tuple[str, object, object]] = [
     (
         "evolutionary_state",
         str,
-        typer.Option(
-            "", help="main-sequence, pre-main-sequence, evolved or unknown.", rich_help_panel=_STARS
-        ),
+        typer.Option("", help="main-sequence, pre-main-sequence, evolved or unknown.", rich_help_panel=_STARS),
     ),
     (
         "solar_large_frequency_separation",
@@ -205,7 +215,12 @@ def with_options(command: Callable, *, observables: bool) -> Callable:
         ]
     extra += _SHARED
     parameters = [
-        inspect.Parameter(name, inspect.Parameter.KEYWORD_ONLY, annotation=Annotated[kind, _bare(option)], default=option.default)
+        inspect.Parameter(
+            name,
+            inspect.Parameter.KEYWORD_ONLY,
+            annotation=Annotated[kind, _bare(option)],
+            default=option.default,
+        )
         for name, kind, option in extra
     ]
 

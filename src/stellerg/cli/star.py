@@ -28,7 +28,7 @@ def star(
     from rich.console import Console
 
     from stellerg.posterior.document import star_document
-    from stellerg.propagate import propagate
+    from stellerg.propagation import propagate
     from stellerg.stars import Stars
 
     stars = Stars.of(

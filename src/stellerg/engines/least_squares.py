@@ -72,14 +72,8 @@ def whitened_scores(problem: Problem, parameters: np.ndarray) -> tuple[np.ndarra
 def fit(problem: Problem) -> Fit:
     """Find the least-squares point of an over-determined problem."""
     root = root_of_precision(problem)
-    theta = np.einsum("srj,sj->sr", problem.solution, problem.log_median - problem.base)
+    theta = _start(problem, root)
     residual, jacobian = _residual(problem, root, theta)
-    # where the start lies outside a support, the nearest supported start is that of the single inputs' means
-    outside = ~np.isfinite(residual).all(axis=1)
-    if outside.any():
-        other = np.einsum("srj,sj->sr", problem.solution, problem.log_mean - problem.base)
-        theta = np.where(outside[:, None], other, theta)
-        residual, jacobian = _residual(problem, root, theta)
     chi2 = _square(residual)
     damping = np.full(len(problem), 1e-3)
     unit = np.eye(problem.design.shape[1])
@@ -106,6 +100,29 @@ def fit(problem: Problem) -> Fit:
     freedom = problem.design.shape[0] - problem.design.shape[1]
     converged = np.isfinite(chi2) & (relative < _CONVERGED * (1.0 + np.sqrt(chi2)))
     return Fit(theta, jacobian, chi2, chdtrc(freedom, chi2), freedom, converged)
+
+
+def _start(problem: Problem, root) -> np.ndarray:
+    """Where to begin: generalised least squares in ln obs at the medians, (star, parameter).
+
+    Where that lies beyond a hard end of a distribution, the best of the points at which one measurement after
+    the other is believed a hundred times more than the rest.
+    """
+    offset = problem.log_median - problem.base
+    theta = np.einsum("srj,sj->sr", problem.solution, offset)
+    best = _square(_residual(problem, root, theta)[0])
+    if np.isfinite(best).all():
+        return theta
+    for j in range(len(problem.inputs)):
+        trust = np.where(np.arange(len(problem.inputs)) == j, 100.0, 1.0) / np.abs(problem.log_sd)
+        weighted = trust[:, :, None] * problem.design
+        normal = np.einsum("sjr,sjq->srq", weighted, weighted)
+        right = np.einsum("sjr,sj->sr", weighted, trust * offset)
+        trial = np.linalg.solve(normal, right[:, :, None])[:, :, 0]
+        chi2 = _square(_residual(problem, root, trial)[0])
+        better = chi2 < best
+        theta, best = np.where(better[:, None], trial, theta), np.where(better, chi2, best)
+    return theta
 
 
 def _residual(problem: Problem, root, theta):

@@ -183,8 +183,10 @@ class LinearAnswer:
 
         problem = self.problem
         pairs = [(float(m.expectation[star]), float(m.standard_deviation[star])) for m in problem.measured]
-        correlation = np.eye(len(pairs)) if problem.correlation is None else problem.correlation[star]
-        values = uncertainties.correlated_values_norm(pairs, correlation) if pairs else ()
+        if problem.correlation is None:
+            values = [uncertainties.ufloat(*pair, tag=name) for name, pair in zip(problem.inputs, pairs, strict=True)]
+        else:
+            values = uncertainties.correlated_values_norm(pairs, problem.correlation[star])
         found = dict(zip(problem.inputs, values, strict=True))
         logs = [m.to_log_of_variable(v, umath.log) for m, v in zip(problem.measured, values, strict=True)]
         shift: object = 0.0

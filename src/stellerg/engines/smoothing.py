@@ -5,6 +5,8 @@ Gauss-Legendre of 32 nodes (1e-12 for normal X) in each panel on which the densi
 window in which F_X is neither 0 nor 1: exact for X much narrower and much wider than the structure term.
 """
 
+import itertools
+
 import numpy as np
 from scipy.special import log_ndtr, ndtr, ndtri
 
@@ -83,7 +85,7 @@ def _component(component: Component, part: Part, t: np.ndarray) -> tuple[np.ndar
     cumulative = mass * component.cumulative(low)
     density = np.zeros(t.shape)
     panels = component.panels
-    for start, end in zip(panels[:-1], panels[1:], strict=True):
+    for start, end in itertools.pairwise(panels):
         a, b = np.clip(low, start, end)[:, :, None], np.clip(high, start, end)[:, :, None]
         q = 0.5 * (a + b) + 0.5 * (b - a) * _NODE
         weight = 0.5 * (b - a) * _WEIGHT * np.exp(component.log_density(q))

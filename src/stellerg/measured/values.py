@@ -242,6 +242,8 @@ class Measured:
 
 def _mean_and_sd(values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Mean and standard deviation of values at `_SCORE`, (star, node) to (star,)."""
+    # a sum has the same bits in any company only along contiguous rows
+    values = np.ascontiguousarray(values)
     mean = (values * _WEIGHT).sum(axis=-1)
     return mean, np.sqrt((np.square(values - mean[:, None]) * _WEIGHT).sum(axis=-1))
 

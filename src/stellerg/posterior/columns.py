@@ -10,7 +10,13 @@ from stellerg.status import STATUS_TEXT, Status, flag_words
 __all__ = ["Column", "summary_columns"]
 
 _ENDS = ("", "_lower68", "_upper68", "_lower95", "_upper95")
-_MEANING = ("median", "lower end of 68.27 %", "upper end of 68.27 %", "lower end of 95.45 %", "upper end of 95.45 %")
+_MEANING = (
+    "median",
+    "lower end of 68.27 %",
+    "upper end of 68.27 %",
+    "lower end of 95.45 %",
+    "upper end of 95.45 %",
+)
 
 
 @dataclass(frozen=True)
@@ -43,9 +49,19 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
     engines = (*posterior.engines, "")
     columns = [
         Column("star", posterior.star.astype(object), "", "identifier"),
-        Column("status", _words(posterior.status, lambda c: STATUS_TEXT[Status(c)].word), "", "what became of the row"),
+        Column(
+            "status",
+            _words(posterior.status, lambda c: STATUS_TEXT[Status(c)].word),
+            "",
+            "what became of the row",
+        ),
         Column("status_text", np.array(posterior.status_text(), dtype=object), "", "why, and the way out"),
-        Column("flags", _words(posterior.flags, lambda c: " ".join(flag_words(c))), "", "what to know of the result"),
+        Column(
+            "flags",
+            _words(posterior.flags, lambda c: " ".join(flag_words(c))),
+            "",
+            "what to know of the result",
+        ),
         Column("engine", _words(posterior.engine, lambda c: engines[c]), "", "method that gave the result"),
     ]
     for output in posterior.outputs:
@@ -60,9 +76,7 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
         )
         value, uncertainty = posterior.linear_value(output), posterior.linear_uncertainty(output)
         columns.append(Column(f"{output}_linear", value, unit, f"{meaning}: first-order value"))
-        columns.append(
-            Column(f"{output}_linear_u", uncertainty, unit, f"{meaning}: first-order standard uncertainty")
-        )
+        columns.append(Column(f"{output}_linear_u", uncertainty, unit, f"{meaning}: first-order standard uncertainty"))
         shares = posterior.budget(output)
         for name in shares if budget_names is None else budget_names:
             share = shares.get(name, nothing)

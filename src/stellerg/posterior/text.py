@@ -142,9 +142,7 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int) -> lis
         )
     aside = posterior.aside_sets[posterior.aside[row]]
     if aside:
-        lines.append(
-            f"Left aside as redundant: {', '.join(map(label, aside))} (--use names independent measurements)."
-        )
+        lines.append(f"Left aside as redundant: {', '.join(map(label, aside))} (--use names independent measurements).")
     texts = [Text(line) for line in lines]
     sentences = {text.word: text.sentence for text in FLAG_TEXT.values()}
     texts += [Text(f"{word}: {sentences[word]}", style="yellow") for word in answer["flags"]]

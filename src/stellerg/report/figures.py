@@ -85,7 +85,9 @@ def _density(axis, posterior: Posterior, output: dict, name: str, row: int) -> N
     axis.set_ylim(bottom=0.0)
     axis.set_xlim(values[0] / scale, values[-1] / scale)
     handles, labels = axis.get_legend_handles_labels()
-    order = sorted(range(len(labels)), key=lambda k: ("posterior", "68.27 %", "95.45 %", "first order").index(labels[k]))
+    order = sorted(
+        range(len(labels)), key=lambda k: ("posterior", "68.27 %", "95.45 %", "first order").index(labels[k])
+    )
     axis.legend([handles[k] for k in order], [labels[k] for k in order], frameon=False, fontsize=8.0)
 
 
@@ -104,11 +106,25 @@ def _budget(axis, budgets: dict[str, dict[str, float]]) -> None:
         for quantity in shown:
             share = 100.0 * (shares.get(quantity) or 0.0)
             start = right if share >= 0.0 else left
-            axis.barh(place, share, left=start, color=colours[quantity], label=label(quantity) if place == 0 else None)
+            axis.barh(
+                place,
+                share,
+                left=start,
+                color=colours[quantity],
+                label=label(quantity) if place == 0 else None,
+            )
             if abs(share) >= 6.0:
                 dark = colours[quantity] in _SHADES[:2]
                 ink = "white" if dark else _INK
-                axis.text(start + share / 2, place, f"{share:.0f} %", ha="center", va="center", fontsize=8.0, color=ink)
+                axis.text(
+                    start + share / 2,
+                    place,
+                    f"{share:.0f} %",
+                    ha="center",
+                    va="center",
+                    fontsize=8.0,
+                    color=ink,
+                )
             right, left = (right + share, left) if share >= 0.0 else (right, left + share)
     axis.set_yticks(range(len(budgets)), [label(name) for name in budgets])
     axis.invert_yaxis()

@@ -187,7 +187,9 @@ class Beta:
     @cached_property
     def panels(self) -> np.ndarray:
         """Points between which the density is smooth; graded towards the ends, where it has power laws."""
-        graded = self.quantile(np.array([1e-12, 1e-9, 1e-6, 1e-4, 1e-2, 0.1, 0.5, 0.9, 0.99, 1 - 1e-4, 1 - 1e-6, 1 - 1e-9]))
+        graded = self.quantile(
+            np.array([1e-12, 1e-9, 1e-6, 1e-4, 1e-2, 0.1, 0.5, 0.9, 0.99, 1 - 1e-4, 1 - 1e-6, 1 - 1e-9])
+        )
         return np.unique(np.concatenate([[self.lower], graded, [self.upper]]))
 
     def quantile(self, p: np.ndarray) -> np.ndarray:

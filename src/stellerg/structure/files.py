@@ -5,6 +5,7 @@ either one density (`[index]`, `[coefficient]` or `[log_coefficient]`) or severa
 `mass = [lower, upper]` in nominal solar masses and a density. Plain data: nothing in a file is executed.
 """
 
+import itertools
 import math
 import tomllib
 from importlib import resources
@@ -222,10 +223,10 @@ def _tabulated(table: dict, where: str) -> Tabulated:
             f"{where}: 'points' and 'density' must have the same length, at least 2, "
             f"got {len(points)} and {len(heights)}"
         )
-    if any(b <= a for a, b in zip(points, points[1:], strict=False)):
-        raise PriorError(f"{where}: 'points' must increase")
+    if any(b <= a for a, b in itertools.pairwise(points)):
+        raise PriorError(f"{where}: 'points' must increase, got {list(points)}")
     if min(heights) < 0.0 or max(heights) <= 0.0:
-        raise PriorError(f"{where}: 'density' must not be negative and not be zero everywhere")
+        raise PriorError(f"{where}: 'density' must not be negative and not be zero everywhere, got {list(heights)}")
     return Tabulated(points, heights)
 
 
@@ -241,9 +242,7 @@ def _intervals(tables: object, where: str) -> tuple[MassInterval, ...]:
             raise PriorError(f"{inside}: 'mass' must be [lower, upper] in solar masses, got {bounds!r}")
         lower, upper = (math.inf if b == math.inf else _number({"mass": b}, "mass", inside) for b in bounds)
         if lower != previous or upper <= lower:
-            raise PriorError(
-                f"{inside}: intervals must follow each other from 0 to inf without gaps, got {bounds}"
-            )
+            raise PriorError(f"{inside}: intervals must follow each other from 0 to inf without gaps, got {bounds}")
         found.append(
             MassInterval(math.log(lower) if lower > 0.0 else -math.inf, math.log(upper), _mixture(table, inside))
         )

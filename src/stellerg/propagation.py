@@ -162,14 +162,19 @@ def _assign(problem: Problem, choices: list[Engine], auto: bool, notes: Notes):
 
 
 def _note_failures(notes: Notes, problem: Problem, answer, failed: np.ndarray) -> None:
-    if failed.any():
-        least = float(np.min(answer.diagnostics["effective_draws"][failed]))
-        notes.set(
-            problem.rows[failed],
-            Status.NOT_CONVERGED,
-            f"too few effective draws are left ({least:.3g} or more, 100 are needed): the measurements hardly agree; "
-            "check them, name the independent ones with use, or draw more",
-        )
+    effective = answer.diagnostics.get("effective_draws", np.zeros(len(failed)))
+    notes.set(
+        problem.rows[failed & (effective > 0.0)],
+        Status.NOT_CONVERGED,
+        "fewer than 100 effective draws are left: the measurements hardly agree; check them, name the independent "
+        "ones with use, or draw more",
+    )
+    notes.set(
+        problem.rows[failed & (effective == 0.0)],
+        Status.NOT_CONVERGED,
+        "no value satisfies all measurements within the ends of their distributions; check them, or name the "
+        "independent ones with use",
+    )
 
 
 def _quoted(stars: Stars, notes: Notes) -> np.ndarray:

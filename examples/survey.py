@@ -1,0 +1,54 @@
+"""The invented Quayside survey through the API: what `stellerg catalogue examples/survey.csv` does."""
+
+import csv
+from pathlib import Path
+
+from astropy import constants
+from uncertainties import ufloat
+
+from stellerg import OBSERVABLES, Stars, propagate
+
+
+def cell(row: dict[str, str], name: str) -> str:
+    """Return one measurement as text; its error may stand in a column of its own."""
+    if error := row.get(f"{name}_error"):
+        return f"{row[name]} ± {error}"
+    if upper := row.get(f"{name}_error_upper"):
+        return f"{row[name]} +{upper} -{row[f'{name}_error_lower']}"
+    return row[name]
+
+
+with Path(__file__).with_name("survey.csv").open(encoding="utf-8", newline="") as file:
+    rows = list(csv.DictReader(file))
+measured = {name: [cell(row, name) for row in rows] for name in OBSERVABLES if name in rows[0]}
+stars = Stars.of(
+    [row["star"] for row in rows],
+    **measured,
+    shape={name: [row[f"{name}_shape"] for row in rows] for name in measured if f"{name}_shape" in rows[0]},
+    correlation={("mass", "radius"): [float(row["correlation_mass_radius"] or 0) for row in rows]},
+    evolutionary_state=[row["evolutionary_state"] for row in rows],
+)
+posterior = propagate(stars)
+
+energy, time = posterior.median("binding_energy") / 1e48, posterior.median("kelvin_helmholtz_time")
+energy_ends, time_ends = posterior.interval("binding_energy") / 1e48, posterior.interval("kelvin_helmholtz_time")
+share = 100 * posterior.budget("binding_energy")["structure"]
+print(f"Medians, 68.27 % intervals, share of structure in the variance of ln|E| (prior {posterior.prior})")
+print(f"{'star':13}  {'|E| (1e48 erg)':>24}  {'t_KH (Myr)':>24}  structure")
+for i in posterior.has_results.nonzero()[0]:
+    columns = [f"{x[i]:8.4g} [{y[i, 0]:6.3g},{y[i, 1]:6.3g}]" for x, y in ((energy, energy_ends), (time, time_ends))]
+    print(f"{stars.identifier[i]:13}  {columns[0]:>24}  {columns[1]:>24}  {share[i]:7.1f} %")
+
+print("\nIn part or not done")
+for name, sentence in zip(stars.identifier, posterior.status_text(), strict=True):
+    if sentence:
+        print(f"{name}: {sentence}")
+
+# Mean temperature inside one star by the virial theorem: |E| = (3/2) k T M/(mu m_u), mu invented like the rest.
+# |E| and the mass keep their correlation: the mass enters the energy squared and the temperature once.
+number = list(stars.identifier).index("Lagoon 4")
+star = posterior.linear(number)
+mass = star["mass"] * constants.M_sun.cgs.value
+particle = ufloat(0.61, 0.01) * constants.u.cgs.value
+temperature = 2 * star["binding_energy"] * particle / (3 * constants.k_B.cgs.value * mass)
+print(f"\nLagoon 4, first order: mean temperature inside ({temperature / 1e6:.2f}) million K")
