@@ -30,14 +30,16 @@ stars = Stars.of(
 )
 posterior = propagate(stars)
 
-energy, time = posterior.median("binding_energy") / 1e48, posterior.median("kelvin_helmholtz_time")
-energy_ends, time_ends = posterior.interval("binding_energy") / 1e48, posterior.interval("kelvin_helmholtz_time")
 share = 100 * posterior.budget("binding_energy")["structure"]
 print(f"Medians, 68.27 % intervals, share of structure in the variance of ln|E| (prior {posterior.prior})")
-print(f"{'star':13}  {'|E| (1e48 erg)':>24}  {'t_KH (Myr)':>24}  structure")
+print(f"{'star':14}{'|E| (1e48 erg)':^30}{'t_KH (Myr)':^30}structure")
 for i in posterior.has_results.nonzero()[0]:
-    columns = [f"{x[i]:8.4g} [{y[i, 0]:6.3g},{y[i, 1]:6.3g}]" for x, y in ((energy, energy_ends), (time, time_ends))]
-    print(f"{stars.identifier[i]:13}  {columns[0]:>24}  {columns[1]:>24}  {share[i]:7.1f} %")
+    line = f"{stars.identifier[i]:14}"
+    for output, unit in (("binding_energy", 1e48), ("kelvin_helmholtz_time", 1)):
+        lower, upper = posterior.interval(output)[i] / unit
+        median = posterior.median(output)[i] / unit
+        line += f"{median:<9.4g} {f'{lower:.3g} to {upper:.3g}':20}" if median > 0 else f"{'not given':30}"
+    print(f"{line}{share[i]:7.1f} %")
 
 print("\nIn part or not done")
 for name, sentence in zip(stars.identifier, posterior.status_text(), strict=True):

@@ -5,6 +5,8 @@ multiplied: normal terms in closed form, wide terms by the discrete Fourier tran
 densities (spectrally accurate for smooth densities), narrow ones by Gauss-Hermite nodes in the normal score.
 """
 
+from collections.abc import Iterator
+
 import numpy as np
 from scipy import fft
 
@@ -26,8 +28,8 @@ _BATCH = 512  # stars transformed together, for the sake of the cache; no result
 
 def convolve(
     terms: list[tuple[Measured, np.ndarray, np.ndarray]], mean: np.ndarray, normal_sd: np.ndarray
-) -> tuple[GridPart, np.ndarray]:
-    """Distribution of a sum of independent terms.
+) -> Iterator[tuple[np.ndarray, GridPart, np.ndarray]]:
+    """Distributions of sums of independent terms, in groups of stars that share a grid size.
 
     Parameters
     ----------
@@ -38,10 +40,12 @@ def convolve(
     normal_sd : ndarray, (star,)
         Standard deviation of the normal term of the sum, 0 where there is none.
 
-    Returns
-    -------
+    Yields
+    ------
+    rows : ndarray of int, (m,)
     part : GridPart
-    error : ndarray, (star,)
+        Of these stars.
+    error : ndarray, (m,)
         Estimate of the error in the cumulative: what lies outside the grid, beyond its frequencies and between
         its points.
     """
@@ -55,39 +59,34 @@ def convolve(
     size = np.searchsorted(_SIZES, _CELLS * (high - low) / np.sqrt(variance))
     size = _SIZES[np.minimum(size, len(_SIZES) - 1)]
     step = (high - low) / size
-    largest = int(size.max(initial=0))
-    table = np.ones((len(mean), largest))
-    slope = np.zeros((len(mean), largest))
-    tilted, tilted_slope = np.zeros((2, len(mean), largest))
-    error = np.zeros(len(mean))
     for number in np.unique(size):
         rows = np.flatnonzero(size == number)
         for start in range(0, len(rows), _BATCH):
             some = rows[start : start + _BATCH]
             chosen = [(m.take(some), w[some], i[some]) for m, w, i in terms if i[some].any()]
-            cumulative, density, error[some] = _transform(chosen, low[some], step[some], normal_sd[some], int(number))
-            table[some, :number], slope[some, :number] = cumulative, density
-            residual = low[some, None] + step[some, None] * np.arange(number)
-            tilt = np.exp(np.minimum(residual, _LARGEST))
-            integrand = tilt * density
-            tilted_slope[some, :number] = integrand
-            running = _running_integral(integrand, step[some])
-            tilted[some, :number], tilted[some, number:] = running, running[:, -1:]
-            error[some] += _interpolation_error(density, step[some])
-            error[some] += _interpolation_error(integrand, step[some], tilt)
-    first = np.argmax(table > _WINDOW, axis=1)
-    last = np.argmax(table >= 1.0 - _WINDOW, axis=1)
-    begin = low + mean
+            part, error = _on_grid(chosen, mean[some], low[some], step[some], normal_sd[some], int(number))
+            yield some, part, error
+
+
+def _on_grid(terms, mean, low, step, normal_sd, size) -> tuple[GridPart, np.ndarray]:
+    """Distribution on one grid size, and the error estimate."""
+    cumulative, density, error = _transform(terms, low, step, normal_sd, size)
+    tilt = np.exp(np.minimum(low[:, None] + step[:, None] * np.arange(size), _LARGEST))
+    integrand = tilt * density
+    error += _interpolation_error(density, step) + _interpolation_error(integrand, step, tilt)
+    first = np.argmax(cumulative > _WINDOW, axis=1)
+    last = np.argmax(cumulative >= 1.0 - _WINDOW, axis=1)
+    last = np.where(cumulative[:, -1] > 1.0 - _WINDOW, last, size - 1)
     part = GridPart(
-        start=begin,
+        start=low + mean,
         step=step,
-        lower=begin + np.maximum(first - 1, 0) * step,
-        upper=begin + np.where(table[:, -1] > 1.0 - _WINDOW, last, size - 1) * step,
+        lower=low + mean + np.maximum(first - 1, 0) * step,
+        upper=low + mean + last * step,
         mean=mean,
-        table=table,
-        slope=slope,
-        tilted=tilted,
-        tilted_slope=tilted_slope,
+        table=cumulative,
+        slope=density,
+        tilted=_running_integral(integrand, step),
+        tilted_slope=integrand,
     )
     return part, error
 

@@ -105,7 +105,7 @@ class QuadratureAnswer:
                 if len(terms) == 1 and isinstance(terms[0][1], GridPart):
                     # the quantiles for a normal measured part of the same mean and width lie close by
                     mixture, part = terms[0]
-                    normal = GaussianPart(part.mean, np.sqrt(_variance(piece, output)[rows]))
+                    normal = GaussianPart(part.mean, np.sqrt(_variance(piece, _weights(piece, output))[rows]))
                     start = smoothing.quantile([(mixture, normal)], p, start)
                 view[rows] = smoothing.quantile(terms, p, start)
         return out
@@ -145,18 +145,27 @@ class QuadratureAnswer:
                 rows = score.interval == number
                 mean[rows, output] += piece.mixture.moments[0]
                 variance[rows, output] += piece.mixture.moments[1] ** 2
-            if straddling.size:
-                shift, _ = _mass_shift(problem.take(straddling), int(output), _rows(score, straddling))
-                first, second, covariance = moments_of_structure(problem, score, shift, straddling)
-                mean[straddling, output] += first
-                variance[straddling, output] += second + 2.0 * covariance
+            for rows in _by_input(score, straddling):
+                shift, _ = _mass_shift(problem.take(rows), int(output), _rows(score, rows))
+                first, second, covariance = moments_of_structure(problem, score, shift, rows)
+                mean[rows, output] += first
+                variance[rows, output] += second + 2.0 * covariance
         return mean, np.sqrt(variance)
 
 
-def _variance(problem: Problem, output: int) -> np.ndarray:
-    """Variance of the measured part of ln Y, (star,)."""
-    weights = np.broadcast_to(problem.input_weights[:, output], (len(problem), len(problem.inputs)))
+def _weights(problem: Problem, output: int) -> np.ndarray:
+    """Weights of the inputs in ln Y, (star, input)."""
+    return np.broadcast_to(problem.input_weights[:, output], (len(problem), len(problem.inputs)))
+
+
+def _variance(problem: Problem, weights: np.ndarray) -> np.ndarray:
+    """Variance of a sum of inputs, (star,)."""
     return np.einsum("sj,sjk,sk->s", weights, problem.log_covariance, weights)
+
+
+def _by_input(score: MassScore, rows: np.ndarray) -> list[np.ndarray]:
+    """Split stars that straddle a boundary by the input through which their mass is uncertain."""
+    return [rows[score.through[rows] == through] for through in np.unique(score.through[rows])]
 
 
 def _rows(score: MassScore, rows: np.ndarray) -> MassScore:
@@ -165,11 +174,10 @@ def _rows(score: MassScore, rows: np.ndarray) -> MassScore:
 
 def _terms(problem: Problem, output: int):
     """Yield (rows, terms, error estimate) for groups of stars that are treated alike."""
-    weights = np.broadcast_to(problem.input_weights[:, output], (len(problem), len(problem.inputs)))
+    weights = _weights(problem, output)
     mean = problem.log_outputs(problem.log_mean)[:, output]
     other = (weights != 0.0) & ~problem.log_normal
-    gaussian = np.where(problem.log_normal, weights, 0.0)
-    variance = np.einsum("sj,sjk,sk->s", gaussian, problem.log_covariance, gaussian)
+    variance = _variance(problem, np.where(problem.log_normal, weights, 0.0))
     sharp = not (weights != 0.0).any()
     intervals = problem.structure.intervals
     score = mass_score(problem)
@@ -186,16 +194,11 @@ def _terms(problem: Problem, output: int):
             elif not gridded:
                 yield rows, [(mixture, GaussianPart(mean[rows], np.sqrt(variance[rows])))], 0.0
             else:
-                part, error = _grid(problem.take(rows), weights[rows], mean[rows], variance[rows], other[rows])
-                yield rows, [(mixture, part)], error
-    straddling = score.interval < 0
-    if structured and straddling.any():
-        yield from _straddling(problem, output, np.flatnonzero(straddling), _rows(score, np.flatnonzero(straddling)))
-
-
-def _grid(problem: Problem, weights, mean, variance, included):
-    terms = [(m, weights[:, j], included[:, j]) for j, m in enumerate(problem.measured)]
-    return convolve(terms, mean, np.sqrt(variance))
+                terms = [(m.take(rows), weights[rows, j], other[rows, j]) for j, m in enumerate(problem.measured)]
+                for some, part, error in convolve(terms, mean[rows], np.sqrt(variance[rows])):
+                    yield rows[some], [(mixture, part)], error
+    for rows in _by_input(score, np.flatnonzero(score.interval < 0)) if structured else ():
+        yield from _straddling(problem.take(rows), output, rows, _rows(score, rows))
 
 
 def _mass_shift(problem: Problem, output: int, score: MassScore) -> tuple[MassShift, np.ndarray]:
@@ -203,12 +206,12 @@ def _mass_shift(problem: Problem, output: int, score: MassScore) -> tuple[MassSh
 
     All stars straddle a boundary and have the mass through the same input, or jointly normal.
     """
-    weights = np.broadcast_to(problem.input_weights[:, output], (len(problem), len(problem.inputs)))
+    weights = _weights(problem, output)
     gaussian = np.where(problem.log_normal, weights, 0.0)
-    variance = np.einsum("sj,sjk,sk->s", gaussian, problem.log_covariance, gaussian)
+    variance = _variance(problem, gaussian)
     position = problem.latent("mass")
     on_mass = np.broadcast_to(problem.latent_input_weights[:, position], weights.shape)
-    sd = np.sqrt(np.einsum("sj,sjk,sk->s", on_mass, problem.log_covariance, on_mass))
+    sd = np.sqrt(_variance(problem, on_mass))
     slope = np.einsum("sj,sjk,sk->s", gaussian, problem.log_covariance, on_mass) / np.where(sd > 0.0, sd, 1.0)
     slope = np.where(np.abs(slope) < 1e-12, 0.0, slope)
     through = int(score.through[0]) if len(problem) else -1
@@ -219,36 +222,35 @@ def _mass_shift(problem: Problem, output: int, score: MassScore) -> tuple[MassSh
 
 
 def _straddling(problem: Problem, output: int, rows: np.ndarray, score: MassScore):
-    """Terms of stars whose mass may lie in several intervals."""
+    """Terms of stars (at `rows`) whose mass may lie in several intervals, uncertain through the same input."""
     intervals = problem.structure.intervals
-    for through in np.unique(score.through):
-        some = np.flatnonzero(score.through == through)
-        piece, place = problem.take(rows[some]), _rows(score, some)
-        shift, variance = _mass_shift(piece, output, place)
-        weights = np.broadcast_to(piece.input_weights[:, output], (len(piece), len(piece.inputs)))
-        mean = piece.log_outputs(piece.log_mean)[:, output]
-        other = (weights != 0.0) & ~piece.log_normal
-        if through >= 0:
-            other[:, through] = False
-        spread = np.sqrt(variance) > 1e-9 * np.maximum(np.abs(shift.slope), 1.0) * 1e-3
-        for kind, here in (
-            ("sharp", ~other.any(axis=1) & ~spread),
-            ("normal", ~other.any(axis=1) & spread),
-            ("grid", other.any(axis=1)),
-        ):
-            group = np.flatnonzero(here)
-            if not group.size:
-                continue
-            error: np.ndarray | float = 0.0
-            if kind == "sharp":
-                rest = SharpPart(mean[group])
-            elif kind == "normal":
-                rest = GaussianPart(mean[group], np.sqrt(variance[group]))
-            else:
-                rest, error = _grid(piece.take(group), weights[group], mean[group], variance[group], other[group])
-            terms = []
-            for number, interval in enumerate(intervals):
-                low, high = place.bounds(number, len(intervals))
-                part = RestrictedPart(rest, shift.take(group), low[group], high[group])
-                terms.append((interval.mixture, part))
-            yield rows[some][group], terms, error
+    shift, variance = _mass_shift(problem, output, score)
+    weights = _weights(problem, output)
+    mean = problem.log_outputs(problem.log_mean)[:, output]
+    other = (weights != 0.0) & ~problem.log_normal
+    if score.through[0] >= 0:
+        other[:, score.through[0]] = False
+    # what is left beside the mass is taken for nothing where it is rounding
+    spread = np.sqrt(variance) > 1e-12 * np.maximum(np.abs(shift.slope), 1.0)
+    for rest, group, error in _rests(problem, weights, mean, variance, other, spread):
+        terms = []
+        for number, interval in enumerate(intervals):
+            low, high = score.bounds(number, len(intervals))
+            terms.append((interval.mixture, RestrictedPart(rest, shift.take(group), low[group], high[group])))
+        yield rows[group], terms, error
+
+
+def _rests(problem: Problem, weights, mean, variance, other, spread):
+    """Yield (part, rows, error) for what is left of the measured part once the score of the mass is given."""
+    gridded = other.any(axis=1)
+    rows = np.flatnonzero(~gridded & ~spread)
+    if rows.size:
+        yield SharpPart(mean[rows]), rows, 0.0
+    rows = np.flatnonzero(~gridded & spread)
+    if rows.size:
+        yield GaussianPart(mean[rows], np.sqrt(variance[rows])), rows, 0.0
+    rows = np.flatnonzero(gridded)
+    if rows.size:
+        terms = [(m.take(rows), weights[rows, j], other[rows, j]) for j, m in enumerate(problem.measured)]
+        for some, part, error in convolve(terms, mean[rows], np.sqrt(variance[rows])):
+            yield part, rows[some], error
