@@ -1,0 +1,727 @@
+"""`stellerg star`: what is printed, every option, exit codes, every status, and one message for a wrong call."""
+
+import json
+import math
+import os
+import re
+import subprocess
+import sys
+from pathlib import Path
+
+import matplotlib.image
+import numpy as np
+import pytest
+
+from command_line import assert_one_message, stellerg
+from stellerg import Stars, propagate
+from stellerg.cli.options import OBSERVABLE_OPTIONS
+from stellerg.energetics import DEFAULT_OUTPUTS, OUTPUTS, TIME_CONVENTIONS, Conventions
+from stellerg.engines import ENGINES
+from stellerg.observables import OBSERVABLES
+from stellerg.status import STATUS_TEXT, Status
+
+GIVEN = {"mass": "1.02 ± 0.03", "radius": "1.05(2)", "luminosity": "1.10 +0.12 -0.10"}
+BOTH = ("binding_energy", "kelvin_helmholtz_time")
+ROUNDING = 1e-12
+CLOSED_FORM = 1e-8  # moments of log-normal inputs under a point prior: exact formulas
+LN10 = math.log(10.0)
+INTERVALS = {"interval68": 0.6826894921370859, "interval95": 0.9544997361036416}
+
+
+def options(given):
+    return [word for name, text in given.items() for word in (f"--{name.replace('_', '-')}", text)]
+
+
+STAR = options(GIVEN)
+LOGNORMAL = [*options({"mass": "1.2(1)", "radius": "1.3(2)", "luminosity": "1.5(3)"}), "--shape", "lognormal"]
+EXACT = options({"mass": "1 exact", "radius": "1 exact", "luminosity": "1 exact"})
+POINT = ["--prior", "polytrope-3"]
+
+
+def answer(*arguments, code=0):
+    result = stellerg("star", *arguments, "--json")
+    assert result.code == code, result
+    assert result.err == ""
+    return result.json
+
+
+def median(document, name):
+    return document["outputs"][name]["median"]
+
+
+# --- the JSON object ---
+NUMBER = (int, float)
+OUTPUT_TYPES = {
+    "unit": str,
+    "median": NUMBER,
+    "interval68": list,
+    "interval95": list,
+    "log10_mean": NUMBER,
+    "log10_standard_deviation": NUMBER,
+    "linear": dict,
+    "budget": dict,
+}
+TYPES = {
+    "star": str,
+    "status": str,
+    "status_text": str,
+    "flags": list,
+    "engine": str,
+    "engine_reason": str,
+    "prior": str,
+    "convention": dict,
+    "outputs": dict,
+    "structure": dict,
+    "consistency": (dict, type(None)),
+}
+
+
+def assert_types(table, types):
+    assert list(table) == list(types)
+    for key, kind in types.items():
+        assert isinstance(table[key], kind), (key, table[key])
+
+
+def assert_interval(pair):
+    assert len(pair) == 2
+    assert all(isinstance(end, float) for end in pair)
+
+
+def test_json_has_the_documented_keys_and_types():
+    document = answer(*STAR)
+    assert_types(document, TYPES)
+    assert_types(document["convention"], {"energy": str, "time": str})
+    assert list(document["outputs"]) == list(BOTH)
+    for output in document["outputs"].values():
+        assert_types(output, OUTPUT_TYPES)
+        assert_types(output["linear"], {"value": NUMBER, "standard_uncertainty": NUMBER})
+        assert set(output["budget"]) == {*GIVEN, "correlations", "structure"}
+        assert_interval(output["interval68"])
+        assert_interval(output["interval95"])
+    assert list(document["structure"]) == ["coefficient", "n_effective"]
+    for values in document["structure"].values():
+        assert_types(values, {"median": NUMBER, "interval68": list, "interval95": list})
+        assert_interval(values["interval68"])
+    assert document["consistency"] is None
+    assert [document["outputs"][name]["unit"] for name in BOTH] == ["erg", "Myr"]
+
+
+def test_consistency_of_an_over_determined_star():
+    more = ["--effective-temperature", "5800 ± 60", "--use", "mass,radius,luminosity,effective_temperature"]
+    document = answer(*STAR, *more)
+    types = {"chi2": NUMBER, "degrees_of_freedom": int, "probability": NUMBER}
+    assert_types(document["consistency"], types)
+    posterior = propagate(
+        Stars.of("star", **GIVEN, effective_temperature="5800 ± 60"),
+        use=("mass", "radius", "luminosity", "effective_temperature"),
+    )
+    assert document["consistency"]["degrees_of_freedom"] == 1
+    assert document["consistency"]["chi2"] == posterior.chi2[0]
+    assert document["consistency"]["probability"] == posterior.probability[0]
+    assert "Consistency of the redundant measurements" in stellerg("star", *STAR, *more).words
+
+
+def assert_agrees(document, posterior):
+    """The same bits as the API gives: JSON keeps all digits of a number."""
+    for name in posterior.outputs:
+        output = document["outputs"][name]
+        assert output["median"] == posterior.median(name)[0]
+        for key, probability in INTERVALS.items():
+            expected = posterior.interval(name, probability)[0]
+            np.testing.assert_allclose(output[key], expected, rtol=ROUNDING)
+        assert output["log10_mean"] == posterior.log10_mean(name)[0]
+        assert output["log10_standard_deviation"] == posterior.log10_sd(name)[0]
+        assert output["linear"]["value"] == posterior.linear_value(name)[0]
+        assert output["linear"]["standard_uncertainty"] == posterior.linear_uncertainty(name)[0]
+        assert output["budget"] == {key: share[0] for key, share in posterior.budget(name).items()}
+    for key, name in (("coefficient", "structure_coefficient"), ("n_effective", "n_effective")):
+        assert document["structure"][key]["median"] == posterior.median(name)[0]
+
+
+def test_json_agrees_with_the_api():
+    assert_agrees(answer(*STAR), propagate(Stars.of("star", **GIVEN)))
+
+
+def test_budget_shares_sum_to_one():
+    for output in answer(*STAR)["outputs"].values():
+        assert math.isclose(sum(output["budget"].values()), 1.0, rel_tol=1e-9)
+
+
+# --- the readable answer ---
+def significant(value, digits=4):
+    """A number as a reader sees it: four significant digits, the power of ten taken out of long ones."""
+    exponent = math.floor(math.log10(abs(value)))
+    return f"{value / 10.0**exponent:.{digits - 1}f}" if exponent >= 5 else f"{value:.{digits - 1 - exponent}f}"
+
+
+def test_readable_answer():
+    result = stellerg("star", *STAR)
+    document = answer(*STAR)
+    assert result.code == 0
+    assert result.err == ""
+    for name, label in zip(BOTH, ("binding energy", "Kelvin-Helmholtz time"), strict=True):
+        line = next(line for line in result.out.splitlines() if line.startswith(label))
+        output = document["outputs"][name]
+        for value in (output["median"], *output["interval68"], *output["interval95"]):
+            assert significant(value) in line
+    assert "10^48 erg" in result.out
+    assert "Myr" in result.out
+    assert "68.27 % interval" in result.out
+    assert "95.45 % interval" in result.out
+    for quantity, share in document["outputs"]["binding_energy"]["budget"].items():
+        if quantity != "correlations":
+            line = [line for line in result.out.splitlines() if line.startswith(quantity)][-1]
+            assert f"{100 * share:.1f} %" in line
+    assert "Convention: abs(E) = abs(Omega)/2 (monatomic ideal gas); t_KH = abs(E)/L." in result.words
+    assert "prior uniform-index" in result.words
+    assert "radiative one (3): the default" in result.words  # the prior in words
+    assert "Engine: quadrature (the cheapest engine that is exact for these measurements)" in result.words
+
+
+@pytest.mark.parametrize("outputs", [",".join(DEFAULT_OUTPUTS), ",".join(OUTPUTS)], ids=["default", "all"])
+def test_no_number_is_cut_in_a_terminal_of_80_columns(outputs):
+    result = stellerg("star", *STAR, "--outputs", outputs, columns=80)
+    assert result.code == 0
+    assert "…" not in result.out
+    for quantity in (*GIVEN, "structure"):  # the budget names what its shares belong to
+        assert re.search(rf"^ *{quantity} ", result.out, re.MULTILINE), quantity
+
+
+def test_the_name_of_the_star_is_printed():
+    assert stellerg("star", *STAR, "--name", "K-7").out.startswith("K-7: ok")
+    assert answer(*STAR, "--name", "K-7")["star"] == "K-7"
+
+
+# --- options ---
+def test_every_observable_is_an_option_in_the_order_of_the_table():
+    assert list(OBSERVABLE_OPTIONS) == list(OBSERVABLES)
+    help_text = stellerg("star", "--help", columns=200).out
+    places = [re.search(rf"--{name.replace('_', '-')}\s", help_text) for name in OBSERVABLES]
+    assert all(places)
+    assert [place.start() for place in places] == sorted(place.start() for place in places)
+
+
+QUOTED = {
+    "log_mass": "0.01 ± 0.01",
+    "log_radius": "0.02 ± 0.01",
+    "log_luminosity": "0.04 ± 0.04",
+    "log_effective_temperature": "3.762 ± 0.004",
+    "effective_temperature": "5800 ± 60",
+    "log_surface_gravity": "4.41 ± 0.03",
+    "mean_density": "1.25 ± 0.05 g/cm3",
+    "large_frequency_separation": "128.0(9)",
+    "frequency_of_maximum_power": "2850(40)",
+    "angular_diameter": "0.98(2)",
+    "parallax": "100.0(5)",
+    "distance": "10.0(1)",
+    "bolometric_flux": "3.5e-10 ± 1e-11 W/m2",
+    "absolute_bolometric_magnitude": "4.63 ± 0.05",
+    "apparent_bolometric_magnitude": "4.63 ± 0.05",
+    **GIVEN,
+}
+
+
+@pytest.mark.parametrize("name", OBSERVABLES)
+def test_an_observable_given_as_an_option_reaches_the_star(name):
+    """As over-determining member of a star of mass, radius, luminosity and distance: same bits as the API."""
+    given = {**GIVEN, "distance": "10.0(1)", name: QUOTED[name]}
+    document = answer(*options(given), "--use", ",".join(given), "--engine", "linear")
+    posterior = propagate(Stars.of("star", **given), use=tuple(given), engine="linear")
+    assert_agrees(document, posterior)
+    freedom = len(given) - 4
+    assert (document["consistency"] or {"degrees_of_freedom": 0})["degrees_of_freedom"] == freedom
+
+
+def test_correlation():
+    """ln E = 2 ln M - ln R: variance 4 a^2 + b^2 - 4 rho a b for log-normal inputs and a point prior."""
+    a, b = 0.1 / 1.2, 0.2 / 1.3
+    for rho in (0.6, -0.3):
+        document = answer(*LOGNORMAL, *POINT, "--correlation", f"mass,radius={rho}")
+        expected = math.sqrt(4 * a * a + b * b - 4 * rho * a * b) / LN10
+        got = document["outputs"]["binding_energy"]["log10_standard_deviation"]
+        assert math.isclose(got, expected, rel_tol=CLOSED_FORM)
+
+
+def test_correlation_is_repeatable():
+    """ln t = 2 ln M - ln R - ln L."""
+    a, b, c = 0.1 / 1.2, 0.2 / 1.3, 0.3 / 1.5
+    document = answer(*LOGNORMAL, *POINT, "--correlation", "mass,radius=0.6", "--correlation", "luminosity,radius=0.2")
+    expected = math.sqrt(4 * a * a + b * b + c * c - 4 * 0.6 * a * b + 2 * 0.2 * b * c) / LN10
+    got = document["outputs"]["kelvin_helmholtz_time"]["log10_standard_deviation"]
+    assert math.isclose(got, expected, rel_tol=CLOSED_FORM)
+
+
+def test_use_and_what_is_left_aside():
+    more = ["--effective-temperature", "5800 ± 60"]
+    aside = stellerg("star", *STAR, *more)
+    assert "Left aside as redundant: luminosity" in aside.words
+    used = stellerg("star", *STAR, *more, "--use", "mass,radius,luminosity")
+    assert "Left aside as redundant: effective temperature" in used.words
+    assert answer(*STAR, *more, "--use", "mass,radius,luminosity")["outputs"] == answer(*STAR)["outputs"]
+
+
+@pytest.mark.parametrize("shape", ["normal", "lognormal", "three-quantile", "split-normal"])
+def test_shape(shape):
+    document = answer(*STAR, "--shape", shape)
+    assert_agrees(document, propagate(Stars.of("star", **GIVEN, shape=shape)))
+    assert ("lognormal" in stellerg("star", *STAR, "--shape", shape, "--explain").words) == (shape == "lognormal")
+
+
+def test_shapes_differ():
+    sds = {
+        shape: answer(*STAR, "--shape", shape)["outputs"]["kelvin_helmholtz_time"]["log10_standard_deviation"]
+        for shape in ("normal", "lognormal", "split-normal")
+    }
+    assert len(set(sds.values())) == 3  # three-quantile is the default of asymmetric errors, normal of others
+
+
+@pytest.mark.parametrize(
+    "prior",
+    [
+        "uniform-index", "wide-index", "polytrope-1.5", "polytrope-3", "constant-density", "uniform-coefficient",
+        "uniform-log-coefficient", "by-mass",
+    ],
+)  # fmt: skip
+def test_prior_by_name(prior):
+    document = answer(*STAR, "--prior", prior)
+    assert document["prior"] == prior
+    assert_agrees(document, propagate(Stars.of("star", **GIVEN), prior=prior))
+
+
+def prior_file(folder, value, more=""):
+    path = folder / "mine.toml"
+    text = f'summary = "a point of mine"\nsource = "judgement"\n{more}\n[coefficient]\n'
+    path.write_text(text + f'distribution = "point"\nvalue = {value}\n', encoding="utf-8")
+    return path
+
+
+def test_prior_from_a_file(tmp_path):
+    """A coefficient of 3/2 is the polytrope n = 3."""
+    path = prior_file(tmp_path, 1.5)
+    document = answer(*STAR, "--prior", path)
+    assert document["prior"] == "mine"
+    shipped = answer(*STAR, *POINT)
+    for name in BOTH:
+        assert math.isclose(median(document, name), median(shipped, name), rel_tol=ROUNDING)
+    assert "a point of mine" in stellerg("star", *STAR, "--prior", path).words
+
+
+@pytest.mark.parametrize("engine", ["auto", *ENGINES])
+def test_engine(engine):
+    document = answer(*STAR, "--engine", engine)
+    assert document["engine"] == ("quadrature" if engine == "auto" else engine)
+    assert document["engine_reason"].startswith("the cheapest" if engine == "auto" else "asked for")
+    assert_agrees(document, propagate(Stars.of("star", **GIVEN), engine=engine))
+
+
+def test_engine_of_a_star_that_quadrature_refuses():
+    document = answer(*STAR, "--correlation", "mass,radius=0.5")
+    assert document["engine"] == "montecarlo"
+    assert "quadrature refuses" in document["engine_reason"]
+
+
+def test_seed():
+    runs = [answer(*STAR, "--engine", "montecarlo", "--seed", seed) for seed in (0, 1, 1)]
+    assert runs[1] == runs[2]
+    assert median(runs[0], "binding_energy") != median(runs[1], "binding_energy")
+    assert_agrees(runs[1], propagate(Stars.of("star", **GIVEN), engine="montecarlo", seed=1))
+    assert answer(*STAR, "--seed", 1) == answer(*STAR)  # quadrature draws nothing
+
+
+# of G M^2/(R L), for a polytrope n = 3 (w = 3/2) of a monatomic ideal gas (f = 1/2)
+PREFACTORS = {
+    "total": (0.75, "t_KH = abs(E)/L"),
+    "potential": (1.5, "t_KH = abs(Omega)/L"),
+    "GM2/RL": (1.0, "t_KH = G M^2/(R L)"),
+    "GM2/2RL": (0.5, "t_KH = G M^2/(2 R L)"),
+}
+
+
+@pytest.mark.parametrize("convention", PREFACTORS)
+def test_time_convention(convention):
+    assert set(PREFACTORS) == set(TIME_CONVENTIONS)
+    factor, text = PREFACTORS[convention]
+    document = answer(*STAR, *POINT, "--time-convention", convention)
+    unit = median(answer(*STAR, *POINT, "--time-convention", "GM2/RL"), "kelvin_helmholtz_time")
+    assert math.isclose(median(document, "kelvin_helmholtz_time") / unit, factor, rel_tol=1e-10)
+    assert document["convention"]["time"] == text
+    assert text in stellerg("star", *STAR, "--time-convention", convention).words
+
+
+@pytest.mark.parametrize("text", ["3/2", "1.5"])
+def test_adiabatic_index(text):
+    """f = (3 g - 4)/(3 (g - 1)) = 1/3 for g = 3/2, where 1/2 is that of 5/3."""
+    document = answer(*STAR, "--adiabatic-index", text)
+    for name in BOTH:
+        assert math.isclose(median(document, name) / median(answer(*STAR), name), 2 / 3, rel_tol=1e-10)
+    assert document["convention"]["energy"] == "abs(E) = 0.333333 abs(Omega) (adiabatic index 1.5)"
+    assert "0.333333 abs(Omega) (adiabatic index 1.5)" in stellerg("star", *STAR, "--adiabatic-index", text).words
+
+
+@pytest.mark.parametrize(
+    ("state", "status"),
+    [("main-sequence", "ok"), ("unknown", "ok"), ("evolved", "outside-calibration")],
+)
+def test_evolutionary_state(state, status):
+    arguments = [*STAR, "--prior", "present-sun", "--evolutionary-state", state]
+    document = answer(*arguments, code=0 if status == "ok" else 3)
+    assert document["status"] == status
+
+
+def test_explain():
+    result = stellerg("star", *STAR, "--effective-temperature", "5800 ± 60", "--explain")
+    lines = {line.split("  ")[0]: line for line in result.out.split("\n\n")[0].splitlines()}
+    assert "How the measurements were read" in lines
+    assert lines["mass"].split()[1:] == ["1.02", "0.03", "solMass", "normal", "used"]
+    assert lines["luminosity"].split()[1:6] == ["1.1", "+0.12", "-0.1", "solLum", "three-quantile"]
+    assert "left aside as redundant" in lines["luminosity"]
+    assert "left aside" not in lines["effective temperature"]
+    assert result.out.endswith(stellerg("star", *STAR, "--effective-temperature", "5800 ± 60").out)
+
+
+def test_explain_leaves_json_alone():
+    assert answer(*STAR, "--explain") == answer(*STAR)
+
+
+def test_explain_says_why_a_measurement_is_not_usable():
+    result = stellerg("star", *options({**GIVEN, "mass": "<1.2"}), "--explain")
+    assert result.code == 3
+    assert "not usable: a limit is not a measurement" in result.words
+
+
+UNITS = {
+    "potential_energy": "erg",
+    "internal_energy": "erg",
+    "binding_energy": "erg",
+    "kelvin_helmholtz_time": "Myr",
+    "rest_energy_fraction": "",
+    "specific_binding_energy": "erg / g",
+    "free_fall_time": "h",
+    "nuclear_time": "Gyr",
+}
+
+
+def test_all_outputs():
+    assert list(UNITS) == list(OUTPUTS)
+    document = answer(*STAR, "--outputs", ",".join(UNITS))
+    assert {name: output["unit"] for name, output in document["outputs"].items()} == UNITS
+    assert_agrees(document, propagate(Stars.of("star", **GIVEN), outputs=tuple(UNITS)))
+    text = stellerg("star", *STAR, "--outputs", ",".join(UNITS), columns=300).out
+    for label in ("potential energy", "internal energy", "binding energy", "Kelvin-Helmholtz time"):
+        assert label in text
+    for label in ("rest energy fraction", "specific binding energy", "free fall time", "nuclear time"):
+        assert label in text
+
+
+def test_outputs_stand_in_the_order_asked_for():
+    assert list(answer(*STAR, "--outputs", "nuclear_time, binding_energy")["outputs"]) == [
+        "nuclear_time",
+        "binding_energy",
+    ]
+
+
+def test_energy_unit():
+    joule = answer(*STAR, "--energy-unit", "J", "--outputs", "binding_energy,potential_energy,internal_energy")
+    erg = answer(*STAR, "--outputs", "binding_energy,potential_energy,internal_energy")
+    for name, output in joule["outputs"].items():
+        assert output["unit"] == "J"
+        assert math.isclose(output["median"] * 1e7, median(erg, name), rel_tol=ROUNDING)
+    assert "10^41 J" in stellerg("star", *STAR, "--energy-unit", "J").out
+
+
+def test_options_of_the_nuclear_time_and_of_the_scaling_relations():
+    plain = answer(*STAR, "--outputs", "nuclear_time")
+    other = answer(
+        *STAR, "--outputs", "nuclear_time", "--nuclear-mass-fraction", "0.2", "--nuclear-efficiency", "0.0035"
+    )
+    assert math.isclose(median(other, "nuclear_time"), median(plain, "nuclear_time"), rel_tol=ROUNDING)
+    seismic = [*options({"radius": "1 exact", "large_frequency_separation": "100 exact"}), *POINT]
+    energies = [
+        median(answer(*seismic, "--outputs", "binding_energy", "--solar-large-frequency-separation", s), BOTH[0])
+        for s in ("100", "200")
+    ]
+    # separation goes as (M/R^3)^(1/2) and E as M^2: the fourth power of the reference
+    assert math.isclose(energies[0] / energies[1], 16.0, rel_tol=1e-10)
+    seismic = [*options({"radius": "1 exact", "luminosity": "1 exact", "frequency_of_maximum_power": "100 exact"})]
+    energies = [
+        median(answer(*seismic, *POINT, "--solar-frequency-of-maximum-power", s), BOTH[0]) for s in ("100", "200")
+    ]
+    assert math.isclose(energies[0] / energies[1], 4.0, rel_tol=1e-10)
+
+
+# --- figures ---
+def test_plot_png(tmp_path):
+    path = tmp_path / "star.png"
+    assert stellerg("star", *STAR, "--plot", path).code == 0
+    image = matplotlib.image.imread(path)
+    assert min(image.shape[:2]) > 400
+    ink = (image[:, :, :3].min(axis=2) < 0.95).mean()
+    assert 0.01 < ink < 0.9  # neither an empty sheet nor a blot
+    assert len(np.unique(image[:, :, :3].reshape(-1, 3), axis=0)) > 20
+
+
+def test_plot_svg_holds_densities_linear_approximation_and_budget(tmp_path):
+    path = tmp_path / "star.svg"
+    assert stellerg("star", *STAR, "--plot", path, "--json").code == 0
+    text = path.read_text(encoding="utf-8")
+    assert text.startswith("<?xml")
+    for word in ("binding energy", "Kelvin-Helmholtz time", "posterior", "first order", "68.27 %", "95.45 %"):
+        assert f">{word}<" in text
+    assert text.count(">first order<") == 2
+    for word in ("mass", "luminosity", "structure", "share of the variance of the logarithm"):
+        assert f">{word}<" in text
+    assert "prior uniform-index" in text
+    assert "abs(E) = abs(Omega)/2" in text
+
+
+def test_plot_pdf(tmp_path):
+    path = tmp_path / "star.pdf"
+    assert stellerg("star", *STAR, "--plot", path).code == 0
+    data = path.read_bytes()
+    assert data.startswith(b"%PDF-")
+    assert data.rstrip().endswith(b"%%EOF")
+    assert len(data) > 5000
+
+
+def test_plot_of_a_star_without_width(tmp_path):
+    path = tmp_path / "star.svg"
+    assert stellerg("star", *EXACT, *POINT, "--plot", path).code == 0
+    assert path.read_text(encoding="utf-8").count("exact: no width") == 2
+
+
+def test_plot_of_all_outputs_and_of_one(tmp_path):
+    for outputs in (",".join(OUTPUTS), "free_fall_time"):
+        path = tmp_path / "star.svg"
+        assert stellerg("star", *STAR, "--outputs", outputs, "--plot", path).code == 0
+        assert path.read_text(encoding="utf-8").count(">posterior<") == len(outputs.split(","))
+
+
+@pytest.mark.parametrize("name", ["star.docx", "star.txt", "nowhere/star.png"])
+def test_plot_that_cannot_be_written(tmp_path, name):
+    result = stellerg("star", *STAR, "--plot", tmp_path / name)
+    assert result.code == 2
+    assert result.err.count("\n") == 1
+    assert result.err.startswith("stellerg: plot: ")
+    assert name in result.err
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_no_plot_of_a_star_that_cannot_be_done(tmp_path):
+    assert stellerg("star", "--mass", "1(1)", "--plot", tmp_path / "star.png").code == 3
+    assert list(tmp_path.iterdir()) == []
+
+
+# --- exit codes, and a wrong call is one message ---
+WRONG = {
+    # arguments after `star`, words of the message
+    "unknown option": ([*STAR, "--colour", "red"], ["No such option", "--colour"]),
+    "a word too many": ([*STAR, "1.02"], ["1.02"]),
+    "no value": ([*STAR, "--distance"], ["--distance"]),
+    "unknown prior": ([*STAR, "--prior", "nobody"], ["'nobody'", "shipped: by-mass", ".toml"]),
+    "prior file missing": ([*STAR, "--prior", "none.toml"], ["'none.toml'"]),
+    "correlation of a quantity not given": ([*STAR, "--correlation", "mass,distance=0.2"], ["'distance'", "not given"]),
+    "correlation of no quantity": ([*STAR, "--correlation", "mass,colour=0.2"], ["'colour'"]),
+    "correlation with itself": ([*STAR, "--correlation", "mass,mass=0.2"], ["two different observables"]),
+    "correlation without a number": ([*STAR, "--correlation", "mass,radius"], ["'mass,radius'", "mass,radius=0.6"]),
+    "correlation of one": ([*STAR, "--correlation", "mass=0.2"], ["'mass=0.2'", "mass,radius=0.6"]),
+    "correlation of three": ([*STAR, "--correlation", "mass,radius,luminosity=0.2"], ["mass,radius=0.6"]),
+    "correlation no number": ([*STAR, "--correlation", "mass,radius=much"], ["'much'", "not a number"]),
+    "unknown engine": ([*STAR, "--engine", "steam"], ["'steam'", "auto, quadrature, montecarlo, linear"]),
+    "unknown output": ([*STAR, "--outputs", "mass"], ["'mass'", "potential_energy", "nuclear_time"]),
+    "an output twice": ([*STAR, "--outputs", "nuclear_time,nuclear_time"], ["twice"]),
+    "no output": ([*STAR, "--outputs", ","], ["output: none was named"]),
+    "unknown shape": ([*STAR, "--shape", "round"], ["'round'", "lognormal, three-quantile"]),
+    "unknown state": ([*STAR, "--evolutionary-state", "dead"], ["'dead'", "main-sequence, pre-main-sequence"]),
+    "unknown convention": ([*STAR, "--time-convention", "mean"], ["'mean'", "total, potential, GM2/RL, GM2/2RL"]),
+    "unknown energy unit": ([*STAR, "--energy-unit", "eV"], ["'eV'", "erg, J"]),
+    "adiabatic index no number": ([*STAR, "--adiabatic-index", "air"], ["--adiabatic-index", "'air'", "5/3"]),
+    "adiabatic index of 1": ([*STAR, "--adiabatic-index", "1"], ["must exceed 1"]),
+    "adiabatic index over zero": ([*STAR, "--adiabatic-index", "5/0"], ["--adiabatic-index", "'5/0'"]),
+    "seed no number": ([*STAR, "--seed", "luck"], ["--seed", "integer"]),
+    "negative seed": ([*STAR, "--engine", "montecarlo", "--seed", "-1"], ["seed", "-1"]),
+    "use of a quantity not given": ([*STAR, "--use", "mass,distance"], ["distance was not given"]),
+    "use of no quantity": ([*STAR, "--use", "colour"], ["'colour'"]),
+    "nuclear efficiency": ([*STAR, "--nuclear-efficiency", "2"], ["nuclear_efficiency", "2"]),
+    "solar reference": ([*STAR, "--solar-large-frequency-separation", "0"], ["must be positive", "0"]),
+    "no measurement": (["--json"], ["no measurement", "mass"]),
+    "only empty measurements": (["--name", "K-7"], ["no measurement", "mass"]),
+}
+
+
+@pytest.mark.parametrize("case", WRONG)
+def test_a_wrong_call_is_one_message_and_exit_code_2(case):
+    arguments, wanted = WRONG[case]
+    assert_one_message(stellerg("star", *arguments), *wanted)
+
+
+def test_a_prior_file_with_an_unknown_key(tmp_path):
+    path = prior_file(tmp_path, 1.5, 'colour = "red"')
+    assert_one_message(stellerg("star", *STAR, "--prior", path), "mine", "unknown key 'colour'", "summary, source")
+
+
+def test_a_prior_file_with_an_improper_density(tmp_path):
+    assert_one_message(stellerg("star", *STAR, "--prior", prior_file(tmp_path, "inf")), "'value'", "inf")
+
+
+# --- every status ---
+def with_(**cells):
+    return options({**GIVEN, **cells})
+
+
+SEISMIC = {**GIVEN, "effective_temperature": "5800 ± 60"}
+STATUSES = {
+    # status: list of (arguments, exit code, words of the sentence)
+    "ok": [(STAR, 0, [])],
+    "partial": [
+        (options({"mass": "1.0(1)", "radius": "1.0(1)"}), 0, ["kelvin_helmholtz_time not given", "luminosity"]),
+        (
+            [*STAR, "--adiabatic-index", "1.3", "--outputs", "potential_energy,binding_energy"],
+            0,
+            ["binding_energy not given", "4/3"],
+        ),
+    ],
+    "underdetermined": [
+        (options({"mass": "1.0(1)"}), 3, ["radius is not determined: give radius, or luminosity with"]),
+        (options({"radius": "1.0(1)", "luminosity": "1.0(1)"}), 3, ["mass is not determined: give mass"]),
+    ],
+    "error-missing": [(with_(mass="1.02"), 3, ["mass = 1.02", "quote the error"])],
+    "error-zero": [(with_(mass="1.02 ± 0"), 3, ["mass = 1.02", "an error of zero"])],
+    "not-positive": [
+        (with_(radius="-1.05(2)"), 3, ["radius = -1.05", "must be positive"]),
+        (with_(mass="0.0 ± 0.1"), 3, ["mass = 0", "must be positive"]),
+    ],
+    "not-a-number": [
+        (with_(mass="abc"), 3, ["mass: the cell cannot be read"]),
+        (with_(mass="1,02 ± 0.03"), 3, ["mass: the cell cannot be read"]),
+        (with_(mass="1e999 ± 1"), 3, ["mass: the cell cannot be read"]),
+    ],
+    "limit-only": [(with_(mass="<1.2"), 3, ["mass = 1.2", "a limit is not a measurement"])],
+    "unit-missing": [
+        (with_(mass="1.0 ± 0.1 km"), 3, ["mass = 1", "state the unit"]),
+        (
+            options({"radius": "1.0(1)", "mean_density": "1.4(1)", "luminosity": "1(1)"}),
+            3,
+            ["mean_density = 1.4", "no customary unit"],
+        ),
+    ],
+    "correlation-invalid": [
+        ([*STAR, "--correlation", "mass,radius=1.2"], 3, ["[-1, 1]"]),
+        ([*STAR, "--correlation", "mass,radius=nan"], 3, ["[-1, 1]"]),
+        (
+            [
+                *STAR,
+                *("--correlation", "mass,radius=0.9", "--correlation", "mass,luminosity=0.9"),
+                *("--correlation", "radius,luminosity=-0.9"),
+            ],
+            3,
+            ["positive semidefinite"],
+        ),
+    ],
+    "exact-values-conflict": [
+        (
+            [
+                *options({"mass": "1 exact", "radius": "1 exact", "log_surface_gravity": "4 exact"}),
+                *("--luminosity", "1 exact", "--use", "mass,radius,luminosity,log_surface_gravity"),
+            ],
+            3,
+            ["contradict each other"],
+        )
+    ],
+    "parallax-not-usable": [
+        (
+            [
+                *options({"mass": "1(1)", "radius": "1(1)", "parallax": "-2.0 ± 0.5"}),
+                *("--bolometric-flux", "3e-11 ± 1e-12 W/m2", "--outputs", "kelvin_helmholtz_time"),
+            ],
+            3,
+            ["parallax = -2", "give a distance instead"],
+        )
+    ],
+    "outside-calibration": [
+        ([*with_(mass="2.0(1)"), "--prior", "present-sun"], 3, ["0.98 to 1.02 solar masses", "another prior"])
+    ],
+    "not-bound": [([*STAR, "--adiabatic-index", "4/3"], 3, ["4/3", "ask for potential_energy"])],
+    "engine-refused": [([*STAR, "--correlation", "mass,radius=0.5", "--engine", "quadrature"], 3, ["use montecarlo"])],
+}
+# shape-invalid needs a shape for one quantity: a column of a catalogue. doubtful and evolved-or-contracting
+# belong to the calibrated model of main-sequence stars; not-converged is a matter of the engines' own tests.
+ELSEWHERE = {Status.SHAPE_INVALID, Status.DOUBTFUL, Status.EVOLVED_OR_CONTRACTING, Status.NOT_CONVERGED}
+
+
+def test_every_status_has_a_call():
+    assert set(STATUSES) == {STATUS_TEXT[s].word for s in Status if s not in ELSEWHERE}
+
+
+@pytest.mark.parametrize(("word", "case"), [(w, k) for w in STATUSES for k in range(len(STATUSES[w]))])
+def test_status_and_exit_code(word, case):
+    arguments, code, wanted = STATUSES[word][case]
+    document = answer(*arguments, code=code)
+    assert document["status"] == word
+    assert list(document) == list(TYPES)
+    given = [output for output in document["outputs"].values() if output is not None]
+    assert bool(given) == (code == 0)
+    assert (len(given) < len(document["outputs"])) == (word != "ok")
+    text = stellerg("star", *arguments)
+    assert text.code == code
+    assert text.out.startswith(f"star: {word}")
+    for part in wanted:
+        assert part in document["status_text"]
+        assert part in text.words
+
+
+def test_a_star_that_cannot_be_done_has_nulls():
+    document = answer("--mass", "1.0(1)", code=3)
+    assert document["outputs"] == dict.fromkeys(BOTH)
+    assert document["structure"] == {"coefficient": None, "n_effective": None}
+    assert document["engine"] is None
+    assert document["engine_reason"] is None
+    assert document["convention"]["energy"].startswith("abs(E) = abs(Omega)/2")
+
+
+@pytest.mark.parametrize("mass", ["abc", "<1.2"])
+def test_a_lone_measurement_that_cannot_be_used(mass):
+    assert answer("--mass", mass, code=3)["status"] in ("underdetermined", "not-a-number", "limit-only")
+
+
+# --- as a process ---
+def process(*arguments):
+    environment = {**os.environ, "COLUMNS": "120", "PYTHONIOENCODING": "utf-8"}
+    script = Path(sys.executable).with_name("stellerg")
+    done = subprocess.run(
+        [script, *arguments], capture_output=True, text=True, encoding="utf-8", env=environment, check=False
+    )
+    return done.returncode, done.stdout, done.stderr
+
+
+def test_process_with_an_answer():
+    code, out, err = process("star", *STAR, "--json")
+    assert (code, err) == (0, "")
+    assert json.loads(out) == answer(*STAR)
+
+
+def test_process_of_a_star_that_cannot_be_done():
+    code, out, err = process("star", "--mass", "1.02", "--json")
+    assert (code, err) == (3, "")
+    assert json.loads(out)["status"] in ("underdetermined", "error-missing")
+
+
+def test_process_of_a_wrong_call():
+    code, out, err = process("star", *STAR, "--engine", "steam")
+    assert (code, out) == (2, "")
+    assert err.startswith("stellerg: engine: 'steam' is unknown")
+    assert "Traceback" not in err
+
+
+def test_process_without_a_measurement_shows_no_traceback():
+    code, out, err = process("star", "--json")
+    assert (code, out) == (2, "")
+    assert "Traceback" not in err
+
+
+def test_conventions_of_the_api_are_the_options():
+    """Every field of the conventions has an option that reaches it."""
+    arguments = ["--time-convention", "potential", "--adiabatic-index", "1.6", "--energy-unit", "J"]
+    arguments += ["--nuclear-mass-fraction", "0.2", "--nuclear-efficiency", "0.006"]
+    conventions = Conventions("potential", 1.6, "J", 0.2, 0.006)
+    document = answer(*STAR, *arguments, "--outputs", ",".join(OUTPUTS))
+    assert_agrees(document, propagate(Stars.of("star", **GIVEN), outputs=tuple(OUTPUTS), conventions=conventions))
