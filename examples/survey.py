@@ -1,33 +1,13 @@
 """The invented Quayside survey through the API: what `stellerg catalogue examples/survey.csv` does."""
 
-import csv
 from pathlib import Path
 
 from astropy import constants
 from uncertainties import ufloat
 
-from stellerg import OBSERVABLES, Stars, propagate
+from stellerg import propagate, read_stars
 
-
-def cell(row: dict[str, str], name: str) -> str:
-    """Return one measurement as text; its error may stand in a column of its own."""
-    if error := row.get(f"{name}_error"):
-        return f"{row[name]} ± {error}"
-    if upper := row.get(f"{name}_error_upper"):
-        return f"{row[name]} +{upper} -{row[f'{name}_error_lower']}"
-    return row[name]
-
-
-with Path(__file__).with_name("survey.csv").open(encoding="utf-8", newline="") as file:
-    rows = list(csv.DictReader(file))
-measured = {name: [cell(row, name) for row in rows] for name in OBSERVABLES if name in rows[0]}
-stars = Stars.of(
-    [row["star"] for row in rows],
-    **measured,
-    shape={name: [row[f"{name}_shape"] for row in rows] for name in measured if f"{name}_shape" in rows[0]},
-    correlation={("mass", "radius"): [float(row["correlation_mass_radius"] or 0) for row in rows]},
-    evolutionary_state=[row["evolutionary_state"] for row in rows],
-)
+stars = read_stars(Path(__file__).with_name("survey.csv"))
 posterior = propagate(stars)
 
 share = 100 * posterior.budget("binding_energy")["structure"]

@@ -151,7 +151,7 @@ def test_an_output_that_does_not_need_what_is_missing_is_given():
     assert posterior.status.tolist() == [Status.PARTIAL]
     assert posterior.median("binding_energy")[0] == pytest.approx(ENERGY, rel=QUANTILE)
     assert np.isnan(posterior.median("kelvin_helmholtz_time")[0])
-    assert posterior.status_text()[0].startswith("kelvin_helmholtz_time not given: luminosity is not determined")
+    assert posterior.status_text()[0].startswith("no Kelvin-Helmholtz time: luminosity is not determined")
 
 
 def test_the_mean_density_determines_what_it_can():

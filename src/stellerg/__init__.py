@@ -26,6 +26,7 @@ _HOME = {
     "convert_kelvin_helmholtz_time": "stellerg.energetics",
     "load_prior": "stellerg.structure.files",
     "propagate": "stellerg.propagation",
+    "read_stars": "stellerg.catalogue.read",
 }
 
 __all__ = [
@@ -44,6 +45,7 @@ __all__ = [
     "convert_kelvin_helmholtz_time",
     "load_prior",
     "propagate",
+    "read_stars",
 ]
 
 __version__ = "0.1.0"

@@ -17,6 +17,7 @@ from stellerg.selection import Need, Selection, determined, select
 from stellerg.stars import EvolutionaryState, Stars
 from stellerg.status import STATUS_TEXT, Flag, Status
 from stellerg.structure.model import StructureModel
+from stellerg.wording import label
 
 __all__ = ["Assembly", "Notes", "assemble"]
 
@@ -126,7 +127,7 @@ def assemble(
             continue
         if len(given) < sum(selection.given):
             lacking = ", ".join(n.name for n, has in zip(needs, selection.given, strict=True) if has and n not in given)
-            notes.add(rows, Status.PARTIAL, f"{lacking} not given: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
+            notes.add(rows, Status.PARTIAL, f"no {lacking}: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
         problems += _problems_of_pattern(stars, rows, selection, given, conventions, structure, notes)
     return Assembly(tuple(_applicable(problems, stars, structure, notes)), tuple(outputs), notes)
 
@@ -178,8 +179,8 @@ def _patterns(stars: Stars, needs, use, notes: Notes):
         if selection.aside not in notes.aside_sets:
             notes.aside_sets.append(selection.aside)
         notes.aside[rows] = notes.aside_sets.index(selection.aside)
-        if faults and any(selection.given):
-            notes.flags[rows] |= Flag.MEASUREMENT_UNUSABLE
+        if faults and selection.status == Status.OK:
+            notes.flags[rows] |= int(Flag.MEASUREMENT_UNUSABLE)
         yield rows, selection
 
 
@@ -287,32 +288,61 @@ def _invalid_correlations(stars: Stars, problem: Problem) -> np.ndarray:
 
 
 def _applicable(problems, stars: Stars, structure: StructureModel, notes: Notes) -> list[Problem]:
-    """Take out the stars to which the structure model does not apply, decided on the medians."""
-    limits = structure.applies_to
-    if limits.mass is None and not limits.evolutionary_state:
-        return list(problems)
+    """Take out the stars that the structure model does not describe, decided on the medians.
+
+    A star stated evolved is described only by a model that says so: its core holds the energy.
+    """
     kept = []
-    states = [EvolutionaryState[word.replace("-", "_").upper()] for word in limits.evolutionary_state]
     for problem in problems:
+        state = stars.evolutionary_state[problem.rows]
+        notes.flags[problem.rows[state == EvolutionaryState.NOT_UNDERSTOOD]] |= int(Flag.STATE_NOT_UNDERSTOOD)
         if not problem.structured.any():
             kept.append(problem)
             continue
-        outside = np.zeros(len(problem), bool)
-        if states:
-            state = stars.evolutionary_state[problem.rows]
-            outside |= (state != EvolutionaryState.UNKNOWN) & ~np.isin(state, states)
-        if limits.mass is not None:
-            mass = np.exp(problem.log_latents(problem.log_median)[:, problem.latent("mass")])
-            outside |= (mass < limits.mass[0]) | (mass > limits.mass[1])
-        where = [f"{limits.mass[0]:g} to {limits.mass[1]:g} solar masses"] if limits.mass else []
-        where += ["stars stated " + " or ".join(limits.evolutionary_state)] if states else []
-        sentence = f"prior {structure.name} applies only to {', '.join(where)}; choose another prior"
-        plain = np.flatnonzero(~problem.structured)
-        if len(plain):  # what carries no structure stays available
-            kept.append(problem.take(np.flatnonzero(outside)).only(plain))
-            lacking = ", ".join(n for n in problem.outputs if n not in kept[-1].outputs and n != COEFFICIENT)
-            notes.add(problem.rows[outside], Status.PARTIAL, f"{lacking} not given: {sentence}")
-        else:
-            notes.set(problem.rows[outside], Status.OUTSIDE_CALIBRATION, sentence)
-        kept.append(problem.take(np.flatnonzero(~outside)))
+        evolved = state == EvolutionaryState.EVOLVED
+        if "evolved" in structure.applies_to.evolutionary_state:
+            evolved = np.zeros(len(problem), bool)
+        outside = _outside(problem, state, structure) & ~evolved
+        sentence = f"prior {structure.name} applies only to {_domain(structure)}; choose another prior"
+        kept += _without_structure(problem, outside, Status.OUTSIDE_CALIBRATION, sentence, notes)
+        sentence = STATUS_TEXT[Status.EVOLVED_OR_CONTRACTING].sentence
+        kept += _without_structure(problem, evolved, Status.EVOLVED_OR_CONTRACTING, sentence, notes)
+        kept.append(problem.take(np.flatnonzero(~outside & ~evolved)))
     return [problem for problem in kept if len(problem)]
+
+
+def _outside(problem: Problem, state: np.ndarray, structure: StructureModel) -> np.ndarray:
+    """Where a star's stated evolution or median mass lies outside what a model applies to, (star,)."""
+    limits = structure.applies_to
+    outside = np.zeros(len(problem), bool)
+    if limits.evolutionary_state:
+        allowed = [EvolutionaryState[word.replace("-", "_").upper()] for word in limits.evolutionary_state]
+        allowed += [EvolutionaryState.UNKNOWN, EvolutionaryState.NOT_UNDERSTOOD]
+        outside |= ~np.isin(state, allowed)
+    if limits.mass is not None:
+        mass = np.exp(problem.log_latents(problem.log_median)[:, problem.latent("mass")])
+        outside |= (mass < limits.mass[0]) | (mass > limits.mass[1])
+    return outside
+
+
+def _domain(structure: StructureModel) -> str:
+    limits = structure.applies_to
+    words = [f"{limits.mass[0]:g} to {limits.mass[1]:g} solar masses"] if limits.mass else []
+    if limits.evolutionary_state:
+        words.append("stars stated " + " or ".join(limits.evolutionary_state))
+    return ", ".join(words)
+
+
+def _without_structure(problem: Problem, rows: np.ndarray, status: Status, sentence: str, notes: Notes) -> list:
+    """Give rows a status; what carries no structure stays available to them (`partial`)."""
+    rows = np.flatnonzero(rows)
+    plain = np.flatnonzero(~problem.structured)
+    if not len(rows):
+        return []
+    if not len(plain):
+        notes.set(problem.rows[rows], status, sentence)
+        return []
+    part = problem.take(rows).only(plain)
+    lacking = ", ".join(label(n) for n in problem.outputs if n not in part.outputs and n != COEFFICIENT)
+    notes.add(problem.rows[rows], Status.PARTIAL, f"no {lacking}: {sentence}")
+    return [part]

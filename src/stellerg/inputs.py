@@ -46,6 +46,10 @@ def measured_from(observable: Observable, given, *, shape=None, unit: str = "") 
         return measured_from_columns(observable, value, unit=own, exact=True, shape=shape)
     if isinstance(given, str) or _is_text(given):
         return _from_texts(observable, [given] if isinstance(given, str) else list(given), shape, unit)
+    if isinstance(given, list) and given and all(isinstance(item, tuple) for item in given):
+        raise InputError(
+            f"{observable.name}: a list of pairs was given; give a pair of lists: (values, errors), or texts"
+        )
     if isinstance(given, tuple) and 2 <= len(given) <= 3:
         value, own = _number(given[0], unit)
         errors = [_error(observable, e, own, unit) for e in given[1:]]
@@ -58,7 +62,7 @@ def measured_from(observable: Observable, given, *, shape=None, unit: str = "") 
 
 
 def measured_from_columns(
-    observable: Observable, value, upper=None, lower=None, *, unit="", exact=None, shape=None, fault=None
+    observable: Observable, value, upper=None, lower=None, *, unit="", exact=None, shape=None, fault=None, cells=None
 ) -> Measured:
     """Convert units and assign distributions to columns of numbers.
 
@@ -68,7 +72,7 @@ def measured_from_columns(
     value, upper, lower : array_like, (star,)
         NaN where nothing was given.
     unit : str or array_like of str, (star,)
-    exact, shape, fault
+    exact, shape, fault, cells
         As `stellerg.measured.assign`.
     """
     value = np.atleast_1d(np.asarray(value, float))
@@ -89,7 +93,16 @@ def measured_from_columns(
     if observable.name == "parallax":
         with np.errstate(invalid="ignore"):
             fault = np.where((fault == Status.OK) & (own <= 0.0), Status.PARALLAX_NOT_USABLE, fault)
-    return assign(own, upper * factor, lower * factor, scale=observable.scale, exact=exact, shape=shape, fault=fault)
+    return assign(
+        own,
+        upper * factor,
+        lower * factor,
+        scale=observable.scale,
+        exact=exact,
+        shape=shape,
+        fault=fault,
+        cells=cells,
+    )
 
 
 def _from_texts(observable: Observable, cells: list, shape, unit: str) -> Measured:
@@ -109,6 +122,7 @@ def _from_texts(observable: Observable, cells: list, shape, unit: str) -> Measur
         exact=text.kind == TextKind.EXACT,
         shape=shape,
         fault=fault,
+        cells=np.array(cells, dtype=object),
     )
 
 
@@ -122,7 +136,11 @@ def _number(value, unit: str) -> tuple[np.ndarray, str]:
     """Return plain numbers and the text of their unit."""
     own = getattr(value, "unit", None)
     if own is not None and hasattr(value, "value"):
-        return np.atleast_1d(np.asarray(value.value, float)), own.to_string()
+        # a Masked quantity and a MaskedColumn carry their mask beside their values
+        mask = np.atleast_1d(getattr(value, "mask", False))
+        plain = getattr(value, "unmasked", value)
+        number = np.atleast_1d(np.ma.filled(np.ma.asarray(getattr(plain, "value", plain)).astype(float), np.nan))
+        return np.where(mask, np.nan, number), own.to_string()
     if np.ma.isMaskedArray(value):
         value = np.ma.filled(value.astype(float), np.nan)
     try:

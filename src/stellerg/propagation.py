@@ -70,6 +70,7 @@ def propagate(
     """
     conventions = conventions or Conventions()
     structure = prior if isinstance(prior, StructureModel) else load_prior(prior)
+    outputs, use = _listed(outputs), None if use is None else _listed(use)
     choices = _choices(engine, seed)
     assembly = assemble(stars, outputs, conventions, structure, use)
     notes = assembly.notes
@@ -113,6 +114,7 @@ def propagate(
         engine_reason=why,
         engines=tuple(choice.name for choice in choices),
         engine_reasons=tuple(reasons),
+        use=tuple(use or ()),
         prior=structure.name,
         prior_summary=structure.summary,
         energy_convention=conventions.energy_text,
@@ -123,6 +125,13 @@ def propagate(
         pieces=tuple(pieces),
         sampler=_sampler,
     )
+
+
+def _listed(names: str | Sequence[str]) -> tuple[str, ...]:
+    """Names as a tuple; one text may hold several, separated by commas."""
+    if isinstance(names, str):
+        return tuple(name.strip() for name in names.split(",") if name.strip())
+    return tuple(names)
 
 
 def _choices(engine: str | Engine, seed: int) -> list[Engine]:
@@ -177,13 +186,15 @@ def _note_failures(notes: Notes, problem: Problem, answer, failed: np.ndarray) -
     )
 
 
-def _quoted(stars: Stars, notes: Notes) -> np.ndarray:
-    """The value at fault of each row whose status is about a value, (star,); NaN elsewhere."""
-    quoted = np.full(len(stars), np.nan)
+def _quoted(stars: Stars, notes: Notes) -> dict[int, str]:
+    """What stands in the cell at fault, for each row whose status is about one."""
+    quoted = {}
     names = list(OBSERVABLES)
     for code in np.unique(notes.culprit[notes.culprit >= 0]):
-        rows = notes.culprit == code
-        quoted[rows] = stars.measured[names[code]].value[rows]
+        measured = stars.measured[names[code]]
+        rows = np.flatnonzero(notes.culprit == code)
+        cells = measured.cells[rows] if measured.cells is not None else np.char.mod("%g", measured.value[rows])
+        quoted.update(zip(rows.tolist(), map(str, cells), strict=True))
     return quoted
 
 

@@ -12,6 +12,7 @@ import numpy as np
 
 from stellerg.observables import LATENTS, OBSERVABLES, SELECTION_ORDER
 from stellerg.status import STATUS_TEXT, VALUE, Status
+from stellerg.wording import label
 
 __all__ = ["Need", "Selection", "determined", "select"]
 
@@ -121,10 +122,12 @@ def select(
     aside = tuple(name for name in OBSERVABLES if name in usable and name not in chosen)
     if all(given):
         return Selection(tuple(chosen), aside, given, Status.OK, "", "")
+    excluded = f" ({', '.join(aside)} given but not named in use)" if use is not None and aside else ""
     status, reason, culprit = _why_not(chosen, [n for n in order if n in faults], faults, needs, given)
+    reason += excluded if status == Status.UNDERDETERMINED else ""
     if any(given):
-        lacking = ", ".join(need.name for need, has in zip(needs, given, strict=True) if not has)
-        status, reason = Status.PARTIAL, f"{lacking} not given: {reason}"
+        lacking = ", ".join(label(need.name) for need, has in zip(needs, given, strict=True) if not has)
+        status, reason = Status.PARTIAL, f"no {lacking}: {reason}"
     return Selection(tuple(chosen), aside, given, status, reason, culprit)
 
 
@@ -137,12 +140,13 @@ def _why_not(chosen, faulty, faults, needs, given) -> tuple[Status, str, str]:
         for name in faulty:
             others = [other for other in extended if other != name]
             if name in extended and not need.met_by(others):
-                return faults[name], f"{name}{VALUE}: {STATUS_TEXT[faults[name]].sentence}", name
+                sentence = STATUS_TEXT[faults[name]].about(name, OBSERVABLES[name].unit)
+                return faults[name], f"{name}{VALUE}: {sentence}", name
     missing = [
         latent
         for latent in ("mass", "radius", "luminosity")
         if any(need.involves(latent) and not has for need, has in zip(needs, given, strict=True))
         and not determined(tuple(float(latent == other) for other in LATENTS), chosen)
     ]
-    sentences = [f"{latent} is not determined: {_SUPPLIED_BY[latent]}" for latent in missing]
+    sentences = [f"{latent} is not determined; {_SUPPLIED_BY[latent]}" for latent in missing]
     return Status.UNDERDETERMINED, "; ".join(sentences), ""

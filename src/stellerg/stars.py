@@ -22,9 +22,14 @@ class EvolutionaryState(IntEnum):
     MAIN_SEQUENCE = 1
     PRE_MAIN_SEQUENCE = 2
     EVOLVED = 3
+    NOT_UNDERSTOOD = 4  # a cell of a table that is none of the words; treated as unknown, and flagged
 
 
-STATE_WORDS = {state.name.lower().replace("_", "-"): state for state in EvolutionaryState}
+STATE_WORDS = {
+    state.name.lower().replace("_", "-"): state
+    for state in EvolutionaryState
+    if state is not EvolutionaryState.NOT_UNDERSTOOD
+}
 
 
 @dataclass(frozen=True)
@@ -101,7 +106,7 @@ class Stars:
         --------
         >>> Stars.of("K-7", mass="1.02 ± 0.03", radius="1.05(2)", luminosity="1.10 +0.12 -0.10")  # doctest: +SKIP
         """
-        for name in observables:
+        for name in (*observables, *(unit or ()), *(shape if isinstance(shape, Mapping) else ())):
             if name not in OBSERVABLES:
                 raise InputError(f"{name!r} is not an observable; choose from {', '.join(OBSERVABLES)}")
         shapes = shape if isinstance(shape, Mapping) else dict.fromkeys(observables, shape)
@@ -124,6 +129,19 @@ class Stars:
             solar=solar or SolarReferences(),
         )
 
+    @classmethod
+    def joined(cls, parts: "list[Stars]") -> "Stars":
+        """Join stars that hold the same observables, in order."""
+        first = parts[0]
+        return replace(
+            first,
+            identifier=np.concatenate([p.identifier for p in parts]),
+            measured={name: Measured.joined([p.measured[name] for p in parts]) for name in first.measured},
+            correlation={pair: np.concatenate([p.correlation[pair] for p in parts]) for pair in first.correlation},
+            evolutionary_state=np.concatenate([p.evolutionary_state for p in parts]),
+            key=np.concatenate([p.key for p in parts]),
+        )
+
     def take(self, rows: np.ndarray) -> "Stars":
         """Return the rows asked for."""
         return replace(
@@ -136,25 +154,39 @@ class Stars:
         )
 
 
-def state_codes(states, count: int, first_row: int = 1) -> np.ndarray:
+def state_codes(states, count: int, *, forgiving: bool = False) -> np.ndarray:
     """Codes of evolutionary states given by name, (star,).
+
+    Parameters
+    ----------
+    states : str or array_like of str, (star,)
+        '' , None and masked cells: unknown. Case, blanks and underscores do not matter.
+    count : int
+    forgiving : bool
+        Whether an unknown name gives `NOT_UNDERSTOOD` (a cell of a table) instead of an error.
 
     Raises
     ------
     InputError
-        If a name is unknown.
+        If a name is unknown, or there are not as many as stars.
     """
-    words = np.broadcast_to(np.atleast_1d(np.array("" if states is None else states, dtype=str)), (count,))
+    given = np.ma.filled(np.ma.asarray("" if states is None else states).astype(object), "")
+    words = np.atleast_1d(np.where(np.equal(given, None), "", given)).astype(str)
+    if len(words) not in (1, count):
+        raise InputError(f"evolutionary_state: {len(words)} names for {count} stars; give one name, or one a star")
+    plain = np.char.replace(np.char.replace(np.char.lower(np.char.strip(words)), "_", "-"), " ", "-")
+    plain = np.broadcast_to(plain, (count,))
     codes = np.zeros(count, np.uint8)
-    unknown = ~np.isin(words, ("", *STATE_WORDS))
-    if unknown.any():
+    unknown = ~np.isin(plain, ("", *STATE_WORDS))
+    if unknown.any() and not forgiving:
         row = int(np.flatnonzero(unknown)[0])
         raise InputError(
-            f"evolutionary_state: {str(words[row])!r} at row {row + first_row} is unknown; "
+            f"evolutionary_state: {str(words[row if len(words) > 1 else 0])!r} is unknown; "
             f"choose from {', '.join(STATE_WORDS)}"
         )
+    codes[unknown] = EvolutionaryState.NOT_UNDERSTOOD
     for word, state in STATE_WORDS.items():
-        codes[words == word] = state
+        codes[plain == word] = state
     return codes
 
 
@@ -175,7 +207,12 @@ def _correlation(pair, value, measured: Mapping[str, Measured], count: int) -> n
     for name in pair:
         if name not in measured:
             raise InputError(f"correlation: {name!r} was not given as an observable; give it, or drop the correlation")
-    return np.array(np.broadcast_to(np.asarray(value, float), (count,)))
+    try:
+        return np.array(np.broadcast_to(np.asarray(value, float), (count,)))
+    except (TypeError, ValueError):
+        raise InputError(
+            f"correlation of {pair[0]} and {pair[1]}: {value!r} must be one number, or one for each of {count} stars"
+        ) from None
 
 
 def _symmetric(given: Mapping) -> dict:

@@ -59,14 +59,22 @@ class Flag(IntFlag):
     ABOVE_EDDINGTON_LIMIT = 32
     MASS_OUT_OF_RANGE = 64
     FEW_EFFECTIVE_DRAWS = 128
+    STATE_NOT_UNDERSTOOD = 256
 
 
 @dataclass(frozen=True)
 class Text:
-    """A word for a column, and the sentence (with the way out) for a reader."""
+    """A word for a column, and the sentence (with the way out) for a reader.
+
+    A sentence may hold ``{name}`` and ``{unit}``, of the quantity at fault (`about`).
+    """
 
     word: str
     sentence: str
+
+    def about(self, name: str, unit: str) -> str:
+        """Return the sentence about one quantity."""
+        return self.sentence.replace("{name}", name).replace("{unit}", unit)
 
 
 STATUS_TEXT: dict[Status, Text] = {
@@ -76,7 +84,8 @@ STATUS_TEXT: dict[Status, Text] = {
     Status.UNDERDETERMINED: Text("underdetermined", "The measurements do not determine the requested outputs."),
     Status.ERROR_MISSING: Text(
         "error-missing",
-        "a value without an error; quote the error, or write 'exact' after a value that has none",
+        "a value without an error; quote it (1.0 ± 0.1, or a column {name}_error), or write 'exact' after a value that "
+        "has none",
     ),
     Status.ERROR_ZERO: Text(
         "error-zero",
@@ -87,18 +96,20 @@ STATUS_TEXT: dict[Status, Text] = {
         "the value must be positive and its errors must not be negative; leave the cell empty if unknown",
     ),
     Status.NOT_A_NUMBER: Text(
-        "not-a-number", "the cell cannot be read as a finite number; leave the cell empty if unknown"
+        "not-a-number",
+        "this cannot be read as a finite number with its error; correct it (a decimal point, no comma), or leave "
+        "the cell empty if unknown",
     ),
     Status.LIMIT_ONLY: Text(
         "limit-only", "a limit is not a measurement; give a value with its error, or leave the cell empty"
     ),
     Status.UNIT_MISSING: Text(
-        "unit-missing", "this quantity has no customary unit, or the unit does not fit; state the unit"
+        "unit-missing", "the unit is missing or does not fit; state one that {name} can have, such as {unit}"
     ),
     Status.SHAPE_INVALID: Text(
         "shape-invalid",
-        "the shape named does not exist or does not fit the errors; upper and lower errors that differ "
-        "need three-quantile or split-normal",
+        "the shape must be normal, lognormal, three-quantile, split-normal or exact, and the first two need equal "
+        "upper and lower errors",
     ),
     Status.CORRELATION_INVALID: Text(
         "correlation-invalid",
@@ -113,7 +124,9 @@ STATUS_TEXT: dict[Status, Text] = {
     ),
     Status.EVOLVED_OR_CONTRACTING: Text(
         "evolved-or-contracting",
-        "the star is too large for the main sequence; add the column evolutionary_state",
+        "the star is stated evolved, and no prior here describes a giant (its energy sits in the core: an index "
+        "prior is wrong by 10 to 300 times); ask for outputs without structure, or give a prior of your own that "
+        "applies to evolved stars",
     ),
     Status.OUTSIDE_CALIBRATION: Text(
         "outside-calibration", "the structure model does not apply to this star; choose another prior"
@@ -158,6 +171,10 @@ FLAG_TEXT: dict[Flag, Text] = {
     ),
     Flag.MASS_OUT_OF_RANGE: Text(
         "mass-out-of-range", "The mass lies below 0.075 or above 150 solar masses (judgement)."
+    ),
+    Flag.STATE_NOT_UNDERSTOOD: Text(
+        "state-not-understood",
+        "The evolutionary state is not main-sequence, pre-main-sequence, evolved or unknown: taken as unknown.",
     ),
     Flag.FEW_EFFECTIVE_DRAWS: Text(
         "few-effective-draws",

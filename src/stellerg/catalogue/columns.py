@@ -14,7 +14,7 @@ from stellerg.observables import OBSERVABLES, SolarReferences
 from stellerg.stars import Stars, state_codes
 from stellerg.status import Status
 
-__all__ = ["Columns", "recognise"]
+__all__ = ["Columns", "recognise", "suspicious"]
 
 _ERRORS = ("_error", "_error_upper", "_error_lower")
 
@@ -32,6 +32,7 @@ class Columns:
     names : tuple of str
         All columns of the table.
     unrecognised : tuple of str
+        Not used; those that look like ours come first.
     """
 
     observables: tuple[str, ...]
@@ -55,7 +56,7 @@ class Columns:
         ----------
         part : mapping of str to RawColumn
         first_row : int
-            Number (from 1) of its first row in the table, for rows without an identifier and for messages.
+            Number (from 1) of its first row in the table, for rows without an identifier.
         shape, correlation, evolutionary_state, solar
             For rows that do not say themselves.
         """
@@ -69,11 +70,12 @@ class Columns:
                 if name not in measured:
                     raise InputError(f"correlation: the table has no column {name!r}")
         for pair, column in self.correlations.items():
-            value, bad = _numbers(part[column])
+            value, bad, units = _numbers(part[column])
+            bad |= units != ""
             given = correlations.pop(pair[::-1], correlations.get(pair, np.zeros(count)))
             # a cell that is no number is an invalid correlation, not a missing one
             correlations[pair] = np.where(bad, np.inf, np.where(np.isnan(value), given, value))
-        states = self._states(part, count, evolutionary_state, first_row)
+        states = self._states(part, count, evolutionary_state)
         return Stars(
             identifier=self._identifiers(part, count, first_row),
             measured=measured,
@@ -93,11 +95,12 @@ class Columns:
             return numbers
         return np.where(names == "", numbers, names)
 
-    def _states(self, part, count: int, default: str, first_row: int) -> np.ndarray:
+    def _states(self, part, count: int, default: str) -> np.ndarray:
         if "evolutionary_state" not in self.names:
             return state_codes(default, count)
         words = np.char.strip(part["evolutionary_state"].as_texts())
-        return state_codes(np.where(words == "", default, words), count, first_row)
+        state_codes(default, count)  # the option is a call, not a cell: a wrong word is refused
+        return state_codes(np.where(words == "", default, words), count, forgiving=True)
 
 
 def recognise(source: Source) -> Columns:
@@ -134,11 +137,25 @@ def recognise(source: Source) -> Columns:
             raise InputError(f"column {column!r} and {correlations[pair[::-1]]!r} say the same; keep one")
     known.update(correlations.values())
     if not observables:
+        hint = ""
+        if any(name.lower() in OBSERVABLES for name in names):
+            hint = "; names are in lower case: mass, not Mass"
+        elif len(names) == 1 and ";" in names[0]:
+            hint = "; cells are separated by commas"
+        elif names[0].startswith("#"):
+            hint = "; the first line must be the header, without comments before it"
         raise InputError(
             f"{source.path}: no column is an observable; name columns mass, radius, luminosity, ... "
-            f"(found: {', '.join(names)})"
+            f"(found: {', '.join(names)}){hint}"
         )
-    return Columns(observables, correlations, names, tuple(name for name in names if name not in known))
+    unknown = [name for name in names if name not in known]
+    return Columns(observables, correlations, names, tuple(sorted(unknown, key=lambda name: not suspicious(name))))
+
+
+def suspicious(name: str) -> bool:
+    """Whether a column that is not recognised looks as if it were meant to be one of ours."""
+    plain = name.lower()
+    return plain.startswith("correlation") or any(x in plain for x in OBSERVABLES) or plain[:2] in ("e_", "E_")
 
 
 def _length(part: Mapping[str, RawColumn]) -> int:
@@ -146,13 +163,15 @@ def _length(part: Mapping[str, RawColumn]) -> int:
     return len(column.numbers if column.numbers is not None else column.texts)
 
 
-def _numbers(column: RawColumn) -> tuple[np.ndarray, np.ndarray]:
-    """Numbers of a column, NaN where empty; and where a cell holds something else."""
+def _numbers(column: RawColumn) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Numbers of a column, NaN where empty; where a cell holds something else; and the unit of each."""
     if column.numbers is not None:
-        return column.numbers, np.zeros(len(column.numbers), bool)
+        count = len(column.numbers)
+        return column.numbers, np.zeros(count, bool), np.full(count, column.unit)
     text = parse_text(column.texts)
     bad = ~np.isin(text.kind, (TextKind.VALUE_ONLY, TextKind.EMPTY))
-    return text.value, bad
+    units = np.array(text.unit, dtype=str)
+    return text.value, bad, np.where(units == "", column.unit, units)
 
 
 def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
@@ -174,11 +193,14 @@ def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
         fault[text.kind == TextKind.NOT_A_NUMBER] = Status.NOT_A_NUMBER
         written = np.array(text.unit, dtype=str)
         units = np.where(written == "", column.unit, written)
+    cells = column.as_texts().astype(object)
     for ending, sides in zip(_ERRORS, ((upper, lower), (upper,), (lower,)), strict=True):
         if name + ending in part:
-            errors, bad, none = _errors(observable, part[name + ending], column.unit)
+            errors, wrong, none, texts = _errors(observable, part[name + ending], units)
             exact |= alone & none
-            fault[alone & bad & (fault == Status.OK)] = Status.NOT_A_NUMBER
+            at_fault = alone & (wrong != Status.OK) & (fault == Status.OK)
+            fault[at_fault] = wrong[at_fault]
+            cells[at_fault] = cells[at_fault] + f" with {name}{ending} " + texts[at_fault]
             for side in sides:
                 side[:] = np.where(alone & ~np.isnan(errors), errors, side)
     chosen: object = shape
@@ -186,16 +208,24 @@ def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
         words = np.char.strip(part[name + "_shape"].as_texts())
         fallback = np.where(upper == lower, shape, "") if shape in ("", "normal", "lognormal") else ""
         chosen = np.where(words == "", fallback, words)
-    return measured_from_columns(observable, value, upper, lower, unit=units, exact=exact, shape=chosen, fault=fault)
+    return measured_from_columns(
+        observable, value, upper, lower, unit=units, exact=exact, shape=chosen, fault=fault, cells=cells
+    )
 
 
-def _errors(observable, column: RawColumn, value_unit: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Errors in the unit of the values, where they are no numbers, and where they read 'exact'."""
-    numbers, bad = _numbers(column)
-    none = np.zeros(len(numbers), bool)
-    if column.texts is not None:
-        none = np.char.lower(np.char.strip(column.as_texts())) == "exact"
-        bad &= ~none
-    if column.unit:
-        numbers = in_unit_of_value(observable, numbers, column.unit, value_unit)
-    return np.where(none, np.nan, numbers), bad, none
+def _errors(observable, column: RawColumn, value_units: np.ndarray):
+    """Errors in the unit of the values, faults of their cells, where they read 'exact', and the cells."""
+    numbers, bad, units = _numbers(column)
+    texts = column.as_texts().astype(object)
+    none = np.char.lower(np.char.strip(texts.astype(str))) == "exact"
+    wrong = np.where(bad & ~none, Status.NOT_A_NUMBER, Status.OK)
+    # one conversion for each pair of units that occurs, not for each cell
+    pairs, which = np.unique(np.stack([units, value_units]), axis=1, return_inverse=True)
+    for number, (own, value_unit) in enumerate(pairs.T):
+        if own:
+            rows = (which.ravel() == number) & ~np.isnan(numbers)
+            try:
+                numbers[rows] = in_unit_of_value(observable, numbers[rows], str(own), str(value_unit))
+            except InputError:
+                wrong[rows] = Status.UNIT_MISSING
+    return np.where(none, np.nan, numbers), wrong, none, texts

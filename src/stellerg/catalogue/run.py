@@ -16,17 +16,19 @@ from rich.text import Text
 
 from stellerg import constants
 from stellerg.assembly import Notes, assemble
-from stellerg.catalogue.columns import Columns, recognise
+from stellerg.catalogue.columns import Columns, recognise, suspicious
 from stellerg.catalogue.readers import Source, open_table
 from stellerg.catalogue.writers import WRITERS, Rejected, put
+from stellerg.checks.budget import tail_names
 from stellerg.errors import InputError
 from stellerg.observables import OBSERVABLES, SolarReferences
 from stellerg.posterior import Posterior
 from stellerg.posterior.columns import summary_columns
-from stellerg.posterior.text import label
 from stellerg.propagation import propagate
 from stellerg.status import FLAG_TEXT, STATUS_TEXT, VALUE, Flag, Status
 from stellerg.structure.files import load_prior
+from stellerg.structure.model import StructureModel
+from stellerg.wording import counted, label
 
 __all__ = ["Run", "explain_columns", "run"]
 
@@ -135,11 +137,11 @@ def run(plan: Run) -> RenderableType:
     columns = recognise(source)
     propagation = {**plan.propagation, "prior": load_prior(plan.propagation["prior"])}
     _check_use(propagation["use"], columns)
-    folder = _prepare(plan.folder, plan.overwrite)
+    folder = plan.folder
+    earlier = _earlier(folder, plan.overwrite)
     tally, writer, rejected = Tally(), None, Rejected(folder)
-    total = source.rows
     with _progress() as progress:
-        task = progress.add_task("stars", total=total)
+        task = progress.add_task("stars", total=source.rows)
         for part in source.parts():
             first = tally.rows + 1
             stars = columns.stars(part, first, **plan.star_options())
@@ -148,13 +150,15 @@ def run(plan: Run) -> RenderableType:
                 some = stars.take(np.arange(start, min(start + _BATCH, len(stars))))
                 posterior = propagate(some, **propagation)
                 tally.add(posterior)
-                batches.append(summary_columns(posterior, _budget_names(columns)))
+                batches.append(summary_columns(posterior, _budget_names(columns, propagation["prior"])))
                 if writer is None:
                     meta = {
                         "prior": posterior.prior,
                         "energy_convention": posterior.energy_convention,
                         "time_convention": posterior.time_convention,
                     }
+                    # only now, with the input understood and the first stars done, is anything touched
+                    _clear(folder, earlier)
                     writer = WRITERS[plan.output_format](folder, meta)
                 progress.advance(task, len(some))
             summary = _join(batches)
@@ -164,7 +168,7 @@ def run(plan: Run) -> RenderableType:
     writer.finish()
     rejected.finish()
     _write_record(folder, plan, source, columns, propagation, tally)
-    return _closing(plan, folder, tally)
+    return _closing(plan, folder, tally, columns)
 
 
 def explain_columns(plan: Run) -> RenderableType:
@@ -188,11 +192,12 @@ def explain_columns(plan: Run) -> RenderableType:
     for code, count in zip(*np.unique(notes.aside, return_counts=True), strict=True):
         if notes.aside_sets[code]:
             names = ", ".join(notes.aside_sets[code])
-            texts.append(Text(f"Left aside as redundant in {count} of the first {len(notes.aside)} rows: {names}"))
+            texts.append(Text(f"{_aside_words(plan)} in {count} of the first {len(notes.aside)} rows: {names}"))
     for code, count in zip(*np.unique(notes.reason, return_counts=True), strict=True):
         if code:
             sentence = notes.sentences[code].replace(VALUE, "")
-            texts.append(Text(f"{count} of the first {len(notes.aside)} rows: {sentence}"))
+            first = int(np.flatnonzero(notes.reason == code)[0]) + 1
+            texts.append(Text(f"{count} of the first {len(notes.aside)} rows (row {first} first): {sentence}"))
     return Group(*texts)
 
 
@@ -213,26 +218,29 @@ def _check_use(use, columns: Columns) -> None:
             raise InputError(f"use: the table has no column {name!r}")
 
 
-def _budget_names(columns: Columns) -> tuple[str, ...]:
-    return (*columns.observables, "correlations", "structure")
+def _budget_names(columns: Columns, structure: StructureModel) -> tuple[str, ...]:
+    return (*columns.observables, *tail_names(structure))
 
 
-def _prepare(folder: Path, overwrite: bool) -> Path:
-    """Make the folder; an earlier run is replaced only when asked for."""
+def _earlier(folder: Path, overwrite: bool) -> list[Path]:
+    """Results of an earlier run in the folder; refused unless they may be replaced."""
     ours = ("summary", "summary.csv", "summary.ecsv", "rejected.csv", "run.json")
     if folder.exists() and not folder.is_dir():
         raise InputError(f"--out: {folder} is a file; name a folder")
-    earlier = [name for name in ours if (folder / name).exists()]
+    earlier = [folder / name for name in ours if (folder / name).exists()]
     if earlier and not overwrite:
-        raise InputError(f"--out: {folder} holds the results of an earlier run; name another folder or add --overwrite")
+        raise InputError(f"--out: {folder} holds the results of an earlier run; name another or add --overwrite")
+    return earlier
+
+
+def _clear(folder: Path, earlier: list[Path]) -> None:
+    """Make the folder, and take away what an earlier run left in it."""
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        for name in earlier:
-            path = folder / name
+        for path in earlier:
             shutil.rmtree(path) if path.is_dir() else path.unlink()
     except OSError as problem:
         raise InputError(f"--out: {folder} cannot be written: {problem.strerror}") from None
-    return folder
 
 
 def _progress() -> Progress:
@@ -286,7 +294,11 @@ def _write_record(folder: Path, plan: Run, source: Source, columns: Columns, pro
     put(folder / "run.json", lambda path: path.write_text(text, encoding="utf-8"))
 
 
-def _closing(plan: Run, folder: Path, tally: Tally) -> RenderableType:
+def _aside_words(plan: Run) -> str:
+    return "Given but not named in use" if plan.propagation["use"] else "Left aside as redundant"
+
+
+def _closing(plan: Run, folder: Path, tally: Tally, columns: Columns) -> RenderableType:
     table = Table(box=None, pad_edge=False, padding=(0, 3, 0, 0), header_style="dim")
     table.add_column("status")
     table.add_column("stars", justify="right")
@@ -300,19 +312,22 @@ def _closing(plan: Run, folder: Path, tally: Tally) -> RenderableType:
                 f"Structure carries {100 * total / count:.0f} % of the variance of ln({label(output)}) on average."
             )
     for names, count in sorted(tally.aside.items()):
-        lines.append(f"Left aside as redundant in {count:,} stars: {', '.join(names)}.")
+        lines.append(f"{_aside_words(plan)} in {counted(count, 'star')}: {', '.join(names)}.")
     for flag, count in tally.flags.items():
         if count:
             text = FLAG_TEXT[Flag(flag)]
-            lines.append(f"{text.word} ({count:,} stars): {text.sentence}")
+            lines.append(f"{text.word} ({counted(count, 'star')}): {text.sentence}")
     if tally.redundant_columns:
         lines.append(
             "redundant-columns: over-determined stars agree too well for their columns to be independent; "
             "name the independent ones with --use."
         )
+    unused = [name for name in columns.unrecognised if suspicious(name)]
+    if unused:
+        lines.append(f"Columns that are not understood and were not used: {', '.join(unused)} (see --explain).")
     rejected = sum(count for code, count in tally.status.items() if code > Status.DOUBTFUL)
-    lines.append(
-        f"Results in {folder}"
-        + (f"; the {rejected:,} stars not done in rejected.csv, with reasons." if rejected else ".")
-    )
+    text = f"Results in {folder}"
+    if rejected:
+        text += f"; {counted(rejected, 'star')} not done, with reasons, in rejected.csv"
+    lines.append(text + ".")
     return Group(table, Text(), *(Text(line) for line in lines))

@@ -5,10 +5,12 @@ import numpy as np
 from stellerg.engines.answer import Answer
 from stellerg.engines.intervals import mass_score
 from stellerg.problem import COEFFICIENT
+from stellerg.structure.model import StructureModel
 
-__all__ = ["CORRELATIONS", "STRUCTURE", "budget"]
+__all__ = ["CORRELATIONS", "MASS_AND_STRUCTURE", "STRUCTURE", "budget", "tail_names"]
 
 CORRELATIONS = "correlations"
+MASS_AND_STRUCTURE = "mass_and_structure"
 STRUCTURE = "structure"
 
 
@@ -16,8 +18,8 @@ def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     """Shares of the variance of ln Y.
 
     Variances of the measured quantities are those of their assigned distributions in ln; correlations enter
-    to first order in the normal scores (exactly for log-normal inputs). Where the structure model changes
-    within the range of the mass, what mass and structure share is counted under correlations.
+    to first order in the normal scores (exactly for log-normal inputs). A structure model that changes with the
+    mass makes the two share a part of the variance (``mass_and_structure``).
 
     Parameters
     ----------
@@ -26,7 +28,7 @@ def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     Returns
     -------
     names : tuple of str
-        The inputs, ``correlations`` and ``structure``.
+        The inputs, ``correlations``, ``mass_and_structure`` for models that look at the mass, ``structure``.
     shares : ndarray, (star, output, name)
         Sum to one; NaN where nothing is uncertain. With correlations some may be negative.
     """
@@ -34,19 +36,27 @@ def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     count = len(problem.inputs)
     weights = np.broadcast_to(problem.input_weights, (len(problem), len(problem.outputs), count))
     covariance = problem.log_covariance
-    parts = np.zeros((len(problem), len(problem.outputs), count + 2))
+    tail = tail_names(problem.structure)
+    parts = np.zeros((len(problem), len(problem.outputs), count + len(tail)))
     parts[:, :, :count] = np.square(weights) * np.einsum("sjj->sj", covariance)[:, None, :]
     total = np.einsum("soj,sjk,sok->so", weights, covariance, weights)
     if problem.correlation is not None:
         parts[:, :, count] = total - parts[:, :, :count].sum(axis=-1)
     if COEFFICIENT in problem.outputs:
         spread = answer.log_sd[:, problem.outputs.index(COEFFICIENT)] ** 2
-        parts[:, :, count + 1] = np.where(problem.structured, spread[:, None], 0.0)
-        straddling = (mass_score(problem).interval < 0)[:, None] & problem.structured
-        shared = answer.log_sd**2 - parts.sum(axis=-1)
-        shared[:, problem.outputs.index(COEFFICIENT)] = 0.0
-        parts[:, :, count] += np.where(straddling, shared, 0.0)
+        parts[:, :, -1] = np.where(problem.structured, spread[:, None], 0.0)
+        if MASS_AND_STRUCTURE in tail:
+            straddling = (mass_score(problem).interval < 0)[:, None] & problem.structured
+            shared = answer.log_sd**2 - parts.sum(axis=-1)
+            shared[:, problem.outputs.index(COEFFICIENT)] = 0.0
+            parts[:, :, count + 1] = np.where(straddling, shared, 0.0)
     whole = parts.sum(axis=-1, keepdims=True)
     with np.errstate(invalid="ignore"):
         shares = parts / np.where(whole > 0.0, whole, np.nan)
-    return (*problem.inputs, CORRELATIONS, STRUCTURE), shares
+    return (*problem.inputs, *tail), shares
+
+
+def tail_names(structure: StructureModel) -> tuple[str, ...]:
+    """Names in a budget beside the measured quantities."""
+    shared = (MASS_AND_STRUCTURE,) if len(structure.intervals) > 1 else ()
+    return (CORRELATIONS, *shared, STRUCTURE)

@@ -40,6 +40,8 @@ class Measured:
         Linear, dex or magnitude; the same for all stars.
     fault : ndarray of uint8, (star,)
         `Status.OK`, or why the cell cannot be used (its shape is then ABSENT).
+    cells : ndarray of object, (star,), or None
+        The texts that were read, where there were texts: what a message quotes.
     """
 
     value: np.ndarray
@@ -48,6 +50,7 @@ class Measured:
     shape: np.ndarray
     scale: Scale = Scale.LINEAR
     fault: np.ndarray = field(default_factory=lambda: np.zeros(0, np.uint8))
+    cells: np.ndarray | None = None
 
     def __post_init__(self):
         if self.fault.shape != self.shape.shape:
@@ -59,7 +62,16 @@ class Measured:
     def take(self, rows: np.ndarray) -> "Measured":
         """Return the rows asked for."""
         parts = {f.name: getattr(self, f.name) for f in fields(self)}
-        return Measured(**{k: v if k == "scale" else v[rows] for k, v in parts.items()})
+        return Measured(**{k: v[rows] if isinstance(v, np.ndarray) else v for k, v in parts.items()})
+
+    @classmethod
+    def joined(cls, parts: "list[Measured]") -> "Measured":
+        """Join the stars of several, in order."""
+        whole = {}
+        for f in fields(cls):
+            values = [getattr(part, f.name) for part in parts]
+            whole[f.name] = np.concatenate(values) if isinstance(values[0], np.ndarray) else values[0]
+        return cls(**whole)
 
     @property
     def usable(self) -> np.ndarray:
@@ -251,7 +263,7 @@ def _mean_and_sd(values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     return mean, np.sqrt((np.square(values - mean[:, None]) * _WEIGHT).sum(axis=-1))
 
 
-def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, fault=None) -> Measured:
+def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, fault=None, cells=None) -> Measured:
     """Assign distributions to quoted values: the rules of shapes and faults in one place.
 
     Parameters
@@ -266,6 +278,8 @@ def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, f
         `normal` for symmetric errors (`lognormal` in dex and magnitudes), else `three-quantile`.
     fault : array_like of uint8, (star,), optional
         Faults found while reading.
+    cells : ndarray of object, (star,), optional
+        The texts that were read.
 
     Raises
     ------
@@ -302,7 +316,7 @@ def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, f
         ):
             fault = np.where((fault == Status.OK) & given & wrong, status, fault)
     code = np.where(given & (fault == Status.OK), code, Shape.ABSENT).astype(np.uint8)
-    return Measured(value, upper, lower, code, scale, fault.astype(np.uint8))
+    return Measured(value, upper, lower, code, scale, fault.astype(np.uint8), cells)
 
 
 def _shape_codes(shape, asymmetric: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -319,6 +333,8 @@ def _shape_codes(shape, asymmetric: np.ndarray) -> tuple[np.ndarray, np.ndarray]
         fits = asymmetric == (code in (Shape.THREE_QUANTILE, Shape.SPLIT_NORMAL))
         return np.where(fits, code, Shape.ABSENT).astype(np.uint8), np.zeros(len(asymmetric), bool)
     words = np.array(["" if word is None else str(word).strip() for word in shape])
+    if len(words) != len(asymmetric):
+        raise InputError(f"shape: {len(words)} names for {len(asymmetric)} stars; give one name, or one a star")
     code = np.zeros(len(asymmetric), np.uint8)
     unknown = words != ""
     for word, member in SHAPE_WORDS.items():

@@ -86,6 +86,8 @@ class Posterior:
     engine : ndarray of int8, (star,)
         Index into `engines`; -1 where no engine ran.
     engines : tuple of str
+    use : tuple of str
+        Measurements named as independent; empty where none were named.
     prior, prior_summary, energy_convention, time_convention : str
     chi2, probability : ndarray, (star,)
         Of over-determined stars; NaN elsewhere.
@@ -100,7 +102,7 @@ class Posterior:
     status: np.ndarray
     reason: np.ndarray
     sentences: tuple[str, ...]
-    quoted: np.ndarray
+    quoted: Mapping[int, str]
     flags: np.ndarray
     aside: np.ndarray
     aside_sets: tuple[tuple[str, ...], ...]
@@ -108,6 +110,7 @@ class Posterior:
     engine_reason: np.ndarray
     engines: tuple[str, ...]
     engine_reasons: tuple[str, ...]
+    use: tuple[str, ...]
     prior: str
     prior_summary: str
     energy_convention: str
@@ -130,8 +133,8 @@ class Posterior:
     def status_text(self) -> list[str]:
         """A sentence for each row: what is wrong, the value got, the way out; empty for `ok`."""
         texts = np.array([sentence.replace(VALUE, "") for sentence in self.sentences], dtype=object)[self.reason]
-        for row in np.flatnonzero(~np.isnan(self.quoted)):  # only rows with a value at fault
-            texts[row] = self.sentences[self.reason[row]].replace(VALUE, f" = {self.quoted[row]:g}")
+        for row, cell in self.quoted.items():
+            texts[row] = self.sentences[self.reason[row]].replace(VALUE, f" = {cell}")
         return texts.tolist()
 
     def quantile(self, p, output: str) -> np.ndarray:
@@ -210,8 +213,10 @@ class Posterior:
         Raises
         ------
         InputError
-            If the star has no result.
+            If there is no such row, or the star has no result.
         """
+        if not 0 <= row < len(self):
+            raise InputError(f"row: {row} is not one of the {len(self)} rows (0 to {len(self) - 1})")
         for piece in self.pieces:
             position = np.flatnonzero(piece.rows == row)
             if position.size:
@@ -221,7 +226,7 @@ class Posterior:
     def budget_names(self) -> tuple[str, ...]:
         """Every quantity that stands in the budget of some star, in the order of first appearance."""
         names = dict.fromkeys(name for piece in self.pieces for name in piece.budget_names)
-        tail = [name for name in ("correlations", "structure") if name in names]
+        tail = [name for name in ("correlations", "mass_and_structure", "structure") if name in names]
         return (*(name for name in names if name not in tail), *tail)
 
     def budget(self, output: str) -> dict[str, np.ndarray]:
@@ -248,6 +253,8 @@ class Posterior:
         InputError
             If two stars have the same identifier: their draws would be the same.
         """
+        if count < 1 or count & (count - 1):
+            raise InputError(f"count: {count} must be a power of two (512, 1024, 2048, ...)")
         names, repeats = np.unique(self.star, return_counts=True)
         if (repeats > 1).any():
             raise InputError(

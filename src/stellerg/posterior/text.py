@@ -9,16 +9,11 @@ from rich.text import Text
 from stellerg.posterior.document import star_document
 from stellerg.posterior.result import Posterior
 from stellerg.status import FLAG_TEXT
+from stellerg.wording import label
 
-__all__ = ["label", "number", "star_text"]
+__all__ = ["number", "star_text"]
 
 _BAR = 20  # characters of a full bar in the budget
-
-
-def label(name: str) -> str:
-    """Return a name as a reader writes it."""
-    special = {"kelvin_helmholtz_time": "Kelvin-Helmholtz time", "n_effective": "effective index n"}
-    return special.get(name, name.replace("_", " "))
 
 
 def number(value: float, power: int = 0, digits: int = 4) -> str:
@@ -33,7 +28,7 @@ def number(value: float, power: int = 0, digits: int = 4) -> str:
 def _power(value: float) -> int:
     """Power of ten to take out of a number too long to read."""
     exponent = math.floor(math.log10(abs(value))) if value else 0
-    return exponent if not -3 < exponent < 5 else 0
+    return exponent if not -4 < exponent < 5 else 0
 
 
 def _unit(unit: str, power: int) -> str:
@@ -103,7 +98,7 @@ def _budget(given: dict) -> Table:
     quantities = dict.fromkeys(key for output in given.values() for key in output["budget"])
     for quantity in quantities:
         shares = [output["budget"].get(quantity) for output in given.values()]
-        if quantity == "correlations" and not any(shares):
+        if quantity in ("correlations", "mass_and_structure") and not any(shares):
             continue
         table.add_row(label(quantity), *(_share(share) for share in shares))
     return table
@@ -142,7 +137,11 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int) -> lis
         )
     aside = posterior.aside_sets[posterior.aside[row]]
     if aside:
-        lines.append(f"Left aside as redundant: {', '.join(map(label, aside))} (--use names independent measurements).")
+        names = ", ".join(map(label, aside))
+        if posterior.use:
+            lines.append(f"Not named in use, and so not used: {names}.")
+        else:
+            lines.append(f"Left aside as redundant: {names} (--use names independent measurements).")
     texts = [Text(line) for line in lines]
     sentences = {text.word: text.sentence for text in FLAG_TEXT.values()}
     texts += [Text(f"{word}: {sentences[word]}", style="yellow") for word in answer["flags"]]

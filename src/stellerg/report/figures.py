@@ -9,7 +9,7 @@ from matplotlib.figure import Figure
 from stellerg.errors import InputError
 from stellerg.posterior import Posterior
 from stellerg.posterior.document import star_document
-from stellerg.posterior.text import label
+from stellerg.wording import label
 
 __all__ = ["star_figure", "write"]
 

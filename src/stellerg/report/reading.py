@@ -7,9 +7,9 @@ from rich.text import Text
 from stellerg.measured import Scale, Shape
 from stellerg.observables import OBSERVABLES
 from stellerg.posterior import Posterior
-from stellerg.posterior.text import label
 from stellerg.stars import Stars
 from stellerg.status import STATUS_TEXT, Status
+from stellerg.wording import label
 
 __all__ = ["explanation"]
 
@@ -42,9 +42,10 @@ def explanation(stars: Stars, posterior: Posterior, row: int = 0) -> RenderableT
         unit = OBSERVABLES[name].unit
         if measured.scale is not Scale.LINEAR:
             unit = _SCALE_WORDS[measured.scale] + (f" of {unit}" if measured.scale is Scale.DEX else "")
-        role = "left aside as redundant" if name in aside else "used"
+        role = ("not named in use" if posterior.use else "left aside as redundant") if name in aside else "used"
         if not measured.usable[row]:
-            role = f"not usable: {STATUS_TEXT[Status(measured.fault[row])].sentence}"
+            sentence = STATUS_TEXT[Status(measured.fault[row])].about(name, OBSERVABLES[name].unit)
+            role = f"not usable: {sentence}"
         distribution = shape.name.lower().replace("_", "-") if measured.usable[row] else ""
         if measured.scale is not Scale.LINEAR and shape is Shape.LOGNORMAL:
             distribution = "normal in " + _SCALE_WORDS[measured.scale]
