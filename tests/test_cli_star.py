@@ -256,7 +256,7 @@ def test_use_and_what_is_left_aside():
     aside = stellerg("star", *STAR, *more)
     assert "Left aside as redundant: luminosity" in aside.words
     used = stellerg("star", *STAR, *more, "--use", "mass,radius,luminosity")
-    assert "Left aside as redundant: effective temperature" in used.words
+    assert "not used: effective temperature" in used.words
     assert answer(*STAR, *more, "--use", "mass,radius,luminosity")["outputs"] == answer(*STAR)["outputs"]
 
 
@@ -360,7 +360,12 @@ def test_adiabatic_index(text):
 
 @pytest.mark.parametrize(
     ("state", "status"),
-    [("main-sequence", "ok"), ("unknown", "ok"), ("evolved", "outside-calibration")],
+    [
+        ("main-sequence", "ok"),
+        ("unknown", "ok"),
+        ("pre-main-sequence", "outside-calibration"),
+        ("evolved", "evolved-or-contracting"),
+    ],
 )
 def test_evolutionary_state(state, status):
     arguments = [*STAR, "--prior", "present-sun", "--evolutionary-state", state]
@@ -577,31 +582,35 @@ STATUSES = {
         (
             [*STAR, "--adiabatic-index", "1.3", "--outputs", "potential_energy,binding_energy"],
             0,
-            ["no binding energy", "4/3"],
+            ["binding", "4/3"],
         ),
     ],
     "underdetermined": [
-        (options({"mass": "1.0(1)"}), 3, ["radius is not determined: give radius, or luminosity with"]),
-        (options({"radius": "1.0(1)", "luminosity": "1.0(1)"}), 3, ["mass is not determined: give mass"]),
+        (options({"mass": "1.0(1)"}), 3, ["radius is not determined", "give radius, or luminosity with"]),
+        (
+            options({"radius": "1.0(1)", "luminosity": "1.0(1)"}),
+            3,
+            ["mass is not determined", "give mass, or log_surface_gravity"],
+        ),
     ],
-    "error-missing": [(with_(mass="1.02"), 3, ["mass = 1.02", "quote the error"])],
+    "error-missing": [(with_(mass="1.02"), 3, ["mass = 1.02", "a value without an error", "'exact'"])],
     "error-zero": [(with_(mass="1.02 ± 0"), 3, ["mass = 1.02", "an error of zero"])],
     "not-positive": [
         (with_(radius="-1.05(2)"), 3, ["radius = -1.05", "must be positive"]),
         (with_(mass="0.0 ± 0.1"), 3, ["mass = 0", "must be positive"]),
     ],
     "not-a-number": [
-        (with_(mass="abc"), 3, ["mass: the cell cannot be read"]),
-        (with_(mass="1,02 ± 0.03"), 3, ["mass: the cell cannot be read"]),
-        (with_(mass="1e999 ± 1"), 3, ["mass: the cell cannot be read"]),
+        (with_(mass="abc"), 3, ["mass", "cannot be read as a finite number"]),
+        (with_(mass="1,02 ± 0.03"), 3, ["mass", "cannot be read as a finite number"]),
+        (with_(mass="1e999 ± 1"), 3, ["mass", "cannot be read as a finite number"]),
     ],
-    "limit-only": [(with_(mass="<1.2"), 3, ["mass = 1.2", "a limit is not a measurement"])],
+    "limit-only": [(with_(mass="<1.2"), 3, ["mass", "1.2", "a limit is not a measurement"])],
     "unit-missing": [
-        (with_(mass="1.0 ± 0.1 km"), 3, ["mass = 1", "state the unit"]),
+        (with_(mass="1.0 ± 0.1 km"), 3, ["mass = 1", "the unit", "state"]),
         (
             options({"radius": "1.0(1)", "mean_density": "1.4(1)", "luminosity": "1(1)"}),
             3,
-            ["mean_density = 1.4", "no customary unit"],
+            ["mean_density = 1.4", "the unit", "state"],
         ),
     ],
     "correlation-invalid": [
@@ -640,12 +649,13 @@ STATUSES = {
     "outside-calibration": [
         ([*with_(mass="2.0(1)"), "--prior", "present-sun"], 3, ["0.98 to 1.02 solar masses", "another prior"])
     ],
+    "evolved-or-contracting": [([*STAR, "--evolutionary-state", "evolved"], 3, ["evolved"])],
     "not-bound": [([*STAR, "--adiabatic-index", "4/3"], 3, ["4/3", "ask for potential_energy"])],
     "engine-refused": [([*STAR, "--correlation", "mass,radius=0.5", "--engine", "quadrature"], 3, ["use montecarlo"])],
 }
-# shape-invalid needs a shape for one quantity: a column of a catalogue. doubtful and evolved-or-contracting
-# belong to the calibrated model of main-sequence stars; not-converged is a matter of the engines' own tests.
-ELSEWHERE = {Status.SHAPE_INVALID, Status.DOUBTFUL, Status.EVOLVED_OR_CONTRACTING, Status.NOT_CONVERGED}
+# shape-invalid needs a shape for one quantity: a column of a catalogue. doubtful belongs to the calibrated
+# model of main-sequence stars; not-converged is a matter of the engines' own tests.
+ELSEWHERE = {Status.SHAPE_INVALID, Status.DOUBTFUL, Status.NOT_CONVERGED}
 
 
 def test_every_status_has_a_call():

@@ -70,7 +70,7 @@ def test_texts_with_units():
         ({"mass": ([1.0, 2.0], 0.1), "radius": (1.0, 0.1)}, "columns have different lengths: .*'mass': 2"),
         ({"mass": ([1.0, 2.0], [0.1, 0.1, 0.1])}, "mass: value and errors have different lengths"),
         ({"mass": object()}, "cannot read .* as measured values; give texts, numbers with errors"),
-        ({"mass": (1.0, 0.1), "evolutionary_state": "old"}, "evolutionary_state: 'old' at row 1 is unknown"),
+        ({"mass": (1.0, 0.1), "evolutionary_state": "old"}, "evolutionary_state: 'old' is unknown"),
         ({"mass": (1.0, 0.1), "shape": "gamma"}, "shape: 'gamma' cannot be the shape of all errors"),
         ({"mass": (1.0, 0.1), "correlation": {("mass", "mass"): 0.5}}, "must name two different observables"),
         ({"mass": (1.0, 0.1), "correlation": {("mass", "radius"): 0.5}}, "'radius' was not given"),

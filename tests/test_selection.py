@@ -118,19 +118,19 @@ def test_use_of_what_is_not_there(use, message):
 @pytest.mark.parametrize(
     ("names", "outputs", "sentences"),
     [
-        (("radius", "luminosity"), BOTH, ["mass is not determined: give mass, or log_surface_gravity"]),
+        (("radius", "luminosity"), BOTH, ["mass is not determined; give mass, or log_surface_gravity"]),
         (
             ("mass", "luminosity"),
             BOTH,
             [
-                "radius is not determined: give radius, or luminosity with effective_temperature, or "
+                "radius is not determined; give radius, or luminosity with effective_temperature, or "
                 "angular_diameter with parallax or distance"
             ],
         ),
         (
             ("mass",),
             BOTH[1:],
-            ["radius is not determined", "luminosity is not determined: give luminosity, or"],
+            ["radius is not determined", "luminosity is not determined; give luminosity, or"],
         ),
         (("mass", "angular_diameter"), BOTH[:1], ["radius is not determined"]),
         (("parallax",), BOTH, ["mass is not determined", "radius is not determined", "luminosity is not"]),

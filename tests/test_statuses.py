@@ -31,16 +31,16 @@ BAD = {
         ["no Kelvin-Helmholtz time", "luminosity is not determined"],
     ),
     "error-missing": ({"mass": "1.1"}, {}, {}, ["mass = 1.1: a value without an error", "exact"]),
-    "error-zero": ({"mass": "1.1 ± 0.0"}, {}, {}, ["mass = 1.1: an error of zero"]),
+    "error-zero": ({"mass": "1.1 ± 0.0"}, {}, {}, ["mass = 1.1 ± 0.0: an error of zero"]),
     "not-positive": ({"radius": "-1.2 ± 0.1"}, {}, {}, ["radius = -1.2", "must be positive"]),
-    "not-a-number": ({"mass": "heavy"}, {}, {}, ["mass: the cell cannot be read"]),
-    "limit-only": ({"radius": "<1.2"}, {}, {}, ["radius = 1.2: a limit is not a measurement"]),
-    "unit-missing": ({"mass": "1.1 ± 0.1 km"}, {}, {}, ["mass = 1.1", "state the unit"]),
+    "not-a-number": ({"mass": "heavy"}, {}, {}, ["mass = heavy: this cannot be read"]),
+    "limit-only": ({"radius": "<1.2"}, {}, {}, ["radius = <1.2: a limit is not a measurement"]),
+    "unit-missing": ({"mass": "1.1 ± 0.1 km"}, {}, {}, ["mass = 1.1", "state one that mass can have"]),
     "shape-invalid": (
         {"mass": "1.1 +0.1 -0.2"},
         {},
         {"shape": {"mass": ["", "normal", ""]}},
-        ["mass = 1.1", "three-quantile or split-normal"],
+        ["mass = 1.1", "the first two need equal"],
     ),
     "correlation-invalid": (
         {},
@@ -189,8 +189,8 @@ def test_without_a_bound_star_a_missing_quantity_is_named_too():
     posterior = propagate(stars, outputs=outputs, conventions=Conventions(adiabatic_index=1.3))
     (text,) = posterior.status_text()
     assert posterior.status.tolist() == [Status.PARTIAL]
-    assert "binding_energy" in text
-    assert "nuclear_time" in text
+    assert "binding energy" in text
+    assert "nuclear time" in text
     assert "luminosity is not determined" in text
 
 
@@ -216,7 +216,7 @@ def test_a_prior_that_does_not_apply_does_not_hide_what_is_missing():
     stars = Stars.of(mass="2.0 ± 0.1", radius=GOOD["radius"])
     (text,) = propagate(stars, outputs=outputs, **PRESENT_SUN).status_text()
     assert "no binding energy: prior present-sun" in text
-    assert "nuclear_time" in text
+    assert "nuclear time" in text
 
 
 @pytest.mark.parametrize(
@@ -224,7 +224,7 @@ def test_a_prior_that_does_not_apply_does_not_hide_what_is_missing():
     [
         ("main-sequence", "ok"),
         ("unknown", "ok"),
-        ("evolved", "outside-calibration"),
+        ("evolved", "evolved-or-contracting"),
         ("pre-main-sequence", "outside-calibration"),
     ],
 )
@@ -256,7 +256,7 @@ def test_the_first_fault_that_matters_is_reported():
     assert [status_word(s) for s in propagate(fine, outputs=["binding_energy"]).status] == ["ok"]
     partial = propagate(fine)
     assert [status_word(s) for s in partial.status] == ["partial"]
-    assert "no Kelvin-Helmholtz time: luminosity = 2: a limit" in partial.status_text()[0]
+    assert "no Kelvin-Helmholtz time: luminosity = <2: a limit" in partial.status_text()[0]
 
 
 def test_every_status_has_a_word_and_a_sentence():

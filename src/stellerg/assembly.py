@@ -126,7 +126,9 @@ def assemble(
             notes.add(rows, Status.NOT_BOUND, STATUS_TEXT[Status.NOT_BOUND].sentence)
             continue
         if len(given) < sum(selection.given):
-            lacking = ", ".join(n.name for n, has in zip(needs, selection.given, strict=True) if has and n not in given)
+            lacking = ", ".join(
+                label(n.name) for n, has in zip(needs, selection.given, strict=True) if has and n not in given
+            )
             notes.add(rows, Status.PARTIAL, f"no {lacking}: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
         problems += _problems_of_pattern(stars, rows, selection, given, conventions, structure, notes)
     return Assembly(tuple(_applicable(problems, stars, structure, notes)), tuple(outputs), notes)
