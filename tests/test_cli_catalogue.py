@@ -110,7 +110,14 @@ def measurements(row):
 def expected_columns(outputs, observables):
     shares = (*observables, "correlations", "structure")
     tail = [*ENDS, *MOMENTS, *(f"_budget_{share}" for share in shares)]
-    return ["star", "status", "status_text", "flags", "engine", *(name + end for name in outputs for end in tail)]
+    return [
+        "star",
+        "status",
+        "status_text",
+        "flags",
+        "engine",
+        *(name + end for name in outputs for end in tail),
+    ]
 
 
 @pytest.mark.parametrize("outputs", [BOTH, tuple(OUTPUTS)], ids=["default", "all"])
@@ -308,7 +315,11 @@ def one_way(folder, **columns):
 def test_an_error_may_stand_in_the_cell_or_beside_it(tmp_path):
     inside = one_way(tmp_path, star=["a", "b"], mass=["1.02 ± 0.03", "1.02(3)"], radius=["1.05(2)", "1.05(2)"])
     beside = one_way(
-        tmp_path, star=["a", "b"], mass=["1.02", "1.02"], mass_error=["0.03", "3e-2"], radius=["1.05 ± 0.02"] * 2
+        tmp_path,
+        star=["a", "b"],
+        mass=["1.02", "1.02"],
+        mass_error=["0.03", "3e-2"],
+        radius=["1.05 ± 0.02"] * 2,
     )
     assert inside == beside
     assert inside[0][0] == inside[0][1]
@@ -332,7 +343,11 @@ def test_shape_column(tmp_path):
         tmp_path,
         csv_text(
             ("star", "mass", "mass_shape", "radius"),
-            [("a", "1.0(3)", "lognormal", "1.0(1)"), ("b", "1.0(3)", "", "1.0(1)"), ("c", "1.0(3)", "exact", "1.0(1)")],
+            [
+                ("a", "1.0(3)", "lognormal", "1.0(1)"),
+                ("b", "1.0(3)", "", "1.0(1)"),
+                ("c", "1.0(3)", "exact", "1.0(1)"),
+            ],
         ),
     )
     for number, shape in enumerate(("lognormal", "normal")):
@@ -354,7 +369,11 @@ def test_shape_option_where_a_row_does_not_say(tmp_path):
 @pytest.mark.parametrize("column", ["correlation_mass_radius", "correlation_radius_mass"])
 def test_correlation_column(tmp_path, column):
     names = ("star", "mass", "radius", column)
-    rows = [("a", "1.0(1)", "1.0(2)", "0.6"), ("b", "1.0(1)", "1.0(2)", ""), ("c", "1.0(1)", "1.0(2)", "-0.6")]
+    rows = [
+        ("a", "1.0(1)", "1.0(2)", "0.6"),
+        ("b", "1.0(1)", "1.0(2)", ""),
+        ("c", "1.0(1)", "1.0(2)", "-0.6"),
+    ]
     summary = done(tmp_path, csv_text(names, rows), "--shape", "lognormal")
     for number, rho in enumerate((0.6, 0.0, -0.6)):
         stars = Stars.of("x", mass="1.0(1)", radius="1.0(2)", shape="lognormal", correlation={("mass", "radius"): rho})
@@ -362,7 +381,12 @@ def test_correlation_column(tmp_path, column):
     sds = summary["binding_energy_log10_sd"]
     assert sds[0] < sds[1] < sds[2]
     option = done(
-        tmp_path, csv_text(names[:3], [r[:3] for r in rows]), "--shape", "lognormal", "--correlation", "mass,radius=0.6"
+        tmp_path,
+        csv_text(names[:3], [r[:3] for r in rows]),
+        "--shape",
+        "lognormal",
+        "--correlation",
+        "mass,radius=0.6",
     )
     assert option["binding_energy_log10_sd"] == [sds[0]] * 3
     both = done(tmp_path, csv_text(names, rows), "--shape", "lognormal", "--correlation", "mass,radius=0.6")
@@ -397,7 +421,11 @@ def test_rows_without_an_identifier_use_their_number(tmp_path):
 
 def test_system_and_component_make_an_identifier(tmp_path):
     rows = [("V1", "A", "1(1)", "1(1)"), ("V1", "B", "1(1)", "1(1)"), ("V2", "", "1(1)", "1(1)")]
-    assert done(tmp_path, csv_text(("system", "component", "mass", "radius"), rows))["star"] == ["V1 A", "V1 B", "V2"]
+    assert done(tmp_path, csv_text(("system", "component", "mass", "radius"), rows))["star"] == [
+        "V1 A",
+        "V1 B",
+        "V2",
+    ]
 
 
 def test_two_rows_with_the_same_identifier_are_both_kept(tmp_path):
@@ -457,7 +485,11 @@ def test_units_of_ecsv_columns(tmp_path):
 def test_units_of_dex_columns(tmp_path):
     radius, error = np.array([1.1, 0.5]), np.array([0.03, 0.02])
     found = []
-    for unit, offset in ((units.dex(units.cm / units.s**2), 0.0), (units.dex(units.m / units.s**2), -2.0), (1, 0.0)):
+    for unit, offset in (
+        (units.dex(units.cm / units.s**2), 0.0),
+        (units.dex(units.m / units.s**2), -2.0),
+        (1, 0.0),
+    ):
         write_ecsv(
             tmp_path,
             radius=radius,
@@ -509,7 +541,12 @@ def test_long_integer_identifiers_keep_their_digits(tmp_path):
     """Identifiers of large surveys have 19 digits, more than a float64 holds."""
     names = [5853498713190525696, 5853498713190525697, 7]
     write_ecsv(
-        tmp_path, star=np.array(names), mass=[1.0] * 3, mass_error=[0.1] * 3, radius=[1.0] * 3, radius_error=[0.1] * 3
+        tmp_path,
+        star=np.array(names),
+        mass=[1.0] * 3,
+        mass_error=[0.1] * 3,
+        radius=[1.0] * 3,
+        radius_error=[0.1] * 3,
     )
     assert done(tmp_path, None, name="stars.ecsv")["star"] == [str(name) for name in names]
 
@@ -635,8 +672,8 @@ WRONG = {
     "duplicate column": ("mass,radius,mass\n1(1),1(1),2(1)\n", "stars.csv", [], ["'mass'", "2 times"]),
     "duplicate column in ecsv": (ECSV_TWICE, "stars.ecsv", [], ["mass"]),
     "column without a name": ("mass,radius,\n1(1),1(1),\n", "stars.csv", [], ["column 3", "no name"]),
-    "short row": (STARS + "c,1.0(1)\n", "stars.csv", [], ["3 columns", "c,1.0(1)"]),
-    "long row": (STARS + "c,1.0(1),1(1),2\n", "stars.csv", [], ["3 columns", "c,1.0(1),1(1),2"]),
+    "short row": (STARS + "c,1.0(1)\n", "stars.csv", [], ["every row needs 3 cells", "c,1.0(1)"]),
+    "long row": (STARS + "c,1.0(1),1(1),2\n", "stars.csv", [], ["every row needs 3 cells", "c,1.0(1),1(1),2"]),
     "no observable": ("star,colour\na,red\n", "stars.csv", [], ["no column is an observable", "star, colour"]),
     "error without value": ("star,mass,radius_error\na,1(1),1\n", "stars.csv", [], ["'radius_error'", "'radius'"]),
     "shape without value": ("star,mass,radius_shape\na,1(1),\n", "stars.csv", [], ["'radius_shape'", "'radius'"]),
@@ -728,7 +765,7 @@ def test_a_short_row_after_the_first_part_leaves_nothing_half_written(tmp_path, 
     result, out = call(
         tmp_path, text, "--format", output_format, "--outputs", "binding_energy", "--prior", "polytrope-3"
     )
-    assert_one_message(result, "3 columns", "short,1 exact")
+    assert_one_message(result, "every row needs 3 cells", "short,1 exact")
     left = files(out)
     assert not [name for name in left if name.endswith(".tmp")]
     assert not {"summary.csv", "summary.ecsv", "run.json"} & set(left)

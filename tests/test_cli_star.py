@@ -183,8 +183,9 @@ def test_no_number_is_cut_in_a_terminal_of_80_columns(outputs):
     result = stellerg("star", *STAR, "--outputs", outputs, columns=80)
     assert result.code == 0
     assert "…" not in result.out
-    for quantity in (*GIVEN, "structure"):  # the budget names what its shares belong to
-        assert re.search(rf"^ *{quantity} ", result.out, re.MULTILINE), quantity
+    budget = result.out[result.out.index("Share of each quantity") :]
+    for quantity in (*GIVEN, "structure"):  # the budget names what its shares belong to, down or across
+        assert re.search(rf"(^| ){quantity}( |$)", budget, re.MULTILINE), quantity
 
 
 def test_the_name_of_the_star_is_printed():
@@ -524,10 +525,16 @@ WRONG = {
     "no value": ([*STAR, "--distance"], ["--distance"]),
     "unknown prior": ([*STAR, "--prior", "nobody"], ["'nobody'", "shipped: by-mass", ".toml"]),
     "prior file missing": ([*STAR, "--prior", "none.toml"], ["'none.toml'"]),
-    "correlation of a quantity not given": ([*STAR, "--correlation", "mass,distance=0.2"], ["'distance'", "not given"]),
+    "correlation of a quantity not given": (
+        [*STAR, "--correlation", "mass,distance=0.2"],
+        ["'distance'", "not given"],
+    ),
     "correlation of no quantity": ([*STAR, "--correlation", "mass,colour=0.2"], ["'colour'"]),
     "correlation with itself": ([*STAR, "--correlation", "mass,mass=0.2"], ["two different observables"]),
-    "correlation without a number": ([*STAR, "--correlation", "mass,radius"], ["'mass,radius'", "mass,radius=0.6"]),
+    "correlation without a number": (
+        [*STAR, "--correlation", "mass,radius"],
+        ["'mass,radius'", "mass,radius=0.6"],
+    ),
     "correlation of one": ([*STAR, "--correlation", "mass=0.2"], ["'mass=0.2'", "mass,radius=0.6"]),
     "correlation of three": ([*STAR, "--correlation", "mass,radius,luminosity=0.2"], ["mass,radius=0.6"]),
     "correlation no number": ([*STAR, "--correlation", "mass,radius=much"], ["'much'", "not a number"]),
@@ -536,8 +543,14 @@ WRONG = {
     "an output twice": ([*STAR, "--outputs", "nuclear_time,nuclear_time"], ["twice"]),
     "no output": ([*STAR, "--outputs", ","], ["output: none was named"]),
     "unknown shape": ([*STAR, "--shape", "round"], ["'round'", "lognormal, three-quantile"]),
-    "unknown state": ([*STAR, "--evolutionary-state", "dead"], ["'dead'", "main-sequence, pre-main-sequence"]),
-    "unknown convention": ([*STAR, "--time-convention", "mean"], ["'mean'", "total, potential, GM2/RL, GM2/2RL"]),
+    "unknown state": (
+        [*STAR, "--evolutionary-state", "dead"],
+        ["'dead'", "main-sequence, pre-main-sequence"],
+    ),
+    "unknown convention": (
+        [*STAR, "--time-convention", "mean"],
+        ["'mean'", "total, potential, GM2/RL, GM2/2RL"],
+    ),
     "unknown energy unit": ([*STAR, "--energy-unit", "eV"], ["'eV'", "erg, J"]),
     "adiabatic index no number": ([*STAR, "--adiabatic-index", "air"], ["--adiabatic-index", "'air'", "5/3"]),
     "adiabatic index of 1": ([*STAR, "--adiabatic-index", "1"], ["must exceed 1"]),

@@ -27,6 +27,7 @@ PUBLIC = [
     "convert_kelvin_helmholtz_time",
     "load_prior",
     "propagate",
+    "read_stars",
 ]
 
 RUN = """
@@ -46,7 +47,11 @@ print(json.dumps([code, sorted(sys.modules)]), file=sys.stderr)
 def modules_after(program, *arguments):
     """Standard output, and what a fresh interpreter printed last on standard error."""
     done = subprocess.run(
-        [sys.executable, "-c", program, *arguments], capture_output=True, text=True, encoding="utf-8", check=True
+        [sys.executable, "-c", program, *arguments],
+        capture_output=True,
+        text=True,
+        encoding="utf-8",
+        check=True,
     )
     return done.stdout, json.loads(done.stderr.strip().splitlines()[-1])
 

@@ -94,7 +94,7 @@ def low_discrepancy_set(seed: int, dimensions: int, log2_count: int) -> np.ndarr
     """
     from scipy.stats import qmc
 
-    sampler = qmc.Sobol(dimensions, scramble=True, bits=_BITS, rng=np.random.default_rng(seed))
+    sampler = qmc.Sobol(dimensions, scramble=True, bits=_BITS, rng=np.random.default_rng(seed % 2**64))
     points = sampler.random_base2(log2_count).T
     return np.ascontiguousarray((points * 2.0**_BITS).astype(np.uint64))
 

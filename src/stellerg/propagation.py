@@ -68,6 +68,8 @@ def propagate(
     PriorError
         If the structure model does not exist or is not a proper density.
     """
+    if seed < 0:
+        raise InputError(f"seed: must not be negative, got {seed}")
     conventions = conventions or Conventions()
     structure = prior if isinstance(prior, StructureModel) else load_prior(prior)
     outputs, use = _listed(outputs), None if use is None else _listed(use)

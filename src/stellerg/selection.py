@@ -91,6 +91,10 @@ def determined(exponents: Sequence[float], names: Sequence[str]) -> bool:
     return bool(np.abs(rows.T @ weights - wanted).max() < _TOLERANCE)
 
 
+def _unit(name: str) -> str:
+    return OBSERVABLES[name].unit
+
+
 def _first_set(names: Sequence[str], start: Sequence[str] = ()) -> list[str]:
     """The first observables, in the order given, each of which adds to what is determined."""
     found = list(start)
@@ -140,7 +144,7 @@ def _why_not(chosen, faulty, faults, needs, given) -> tuple[Status, str, str]:
         for name in faulty:
             others = [other for other in extended if other != name]
             if name in extended and not need.met_by(others):
-                sentence = STATUS_TEXT[faults[name]].about(name, OBSERVABLES[name].unit)
+                sentence = STATUS_TEXT[faults[name]].about(name, _unit(name))
                 return faults[name], f"{name}{VALUE}: {sentence}", name
     missing = [
         latent
@@ -149,4 +153,5 @@ def _why_not(chosen, faulty, faults, needs, given) -> tuple[Status, str, str]:
         and not determined(tuple(float(latent == other) for other in LATENTS), chosen)
     ]
     sentences = [f"{latent} is not determined; {_SUPPLIED_BY[latent]}" for latent in missing]
+    sentences += [f"{name} is not usable: {STATUS_TEXT[faults[name]].about(name, _unit(name))}" for name in faulty]
     return Status.UNDERDETERMINED, "; ".join(sentences), ""

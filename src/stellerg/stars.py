@@ -194,7 +194,7 @@ def _common_length(measured: Mapping[str, Measured], star) -> int:
     lengths = {name: len(m) for name, m in measured.items()}
     if star is not None:
         lengths["star"] = len(np.atleast_1d(np.asarray(star)))
-    if not lengths:
+    if not measured:
         raise InputError("no measurement was given; give at least one observable, such as mass")
     if len(set(lengths.values())) > 1:
         raise InputError(f"columns have different lengths: {lengths}; give one value per star in each")

@@ -17,14 +17,20 @@ PART_ROWS = 65_536  # rows of one part: a constant, since it shows in the files
 
 @dataclass(frozen=True)
 class RawColumn:
-    """A column as it stands in a file: texts (a pyarrow string array) or numbers (NaN where masked)."""
+    """A column as it stands in a file: texts (a pyarrow string array) or numbers (NaN where masked).
+
+    Integers are kept beside their numbers, since identifiers may have more digits than a double holds.
+    """
 
     texts: object | None
     numbers: np.ndarray | None
     unit: str = ""
+    integers: np.ndarray | None = None
 
     def as_texts(self) -> np.ndarray:
         """Return the cells as texts, (row,); '' where there is none."""
+        if self.integers is not None:
+            return np.where(np.isnan(self.numbers), "", self.integers.astype(str))
         if self.numbers is not None:
             return np.where(np.isnan(self.numbers), "", np.char.mod("%.17g", self.numbers))
         return np.array(self.texts.to_numpy(zero_copy_only=False), dtype=str)
@@ -117,15 +123,24 @@ def _open_csv(path: Path) -> Source:
                     waiting = table.slice(PART_ROWS).to_batches()
             table = pa.Table.from_batches(waiting, schema=reader.schema)
         except pa.ArrowInvalid as problem:
-            if "Empty CSV" in str(problem):
+            if "Empty CSV" in str(problem) or "Could not skip initial" in str(problem):
                 raise InputError(f"{path}: the table has a header but no rows") from None
-            raise InputError(f"{path}: after row {rows}: {problem}; every row needs {len(names)} cells") from None
+            raise InputError(f"{path}: {_ragged_row(path, len(names)) or problem}") from None
         if rows == 0 and table.num_rows == 0:
             raise InputError(f"{path}: the table has a header but no rows")
         if table.num_rows:
             yield _from_arrow(table)
 
     return Source(path, tuple(names), {}, None, parts)
+
+
+def _ragged_row(path: Path, cells: int) -> str:
+    """Say which row does not have as many cells as the header; '' if none is found. Read only after a failure."""
+    with path.open(encoding="utf-8-sig", newline="", errors="replace") as file:
+        for number, row in enumerate(line for line in csv.reader(file) if line):
+            if len(row) != cells:
+                return f"row {number} has {len(row)} cells ({','.join(row)[:80]!r}); every row needs {cells} cells"
+    return ""
 
 
 def _from_arrow(table) -> dict[str, RawColumn]:
@@ -146,16 +161,18 @@ def _open_ecsv(path: Path) -> Source:
     if len(table) == 0:
         raise InputError(f"{path}: the table has a header but no rows")
     names = [str(name) for name in table.colnames]
-    units = {name: str(table[name].unit) for name in names if table[name].unit is not None}
+    _check_names(path, _ecsv_header(path))
+    units = {name: str(unit) for name in names if (unit := getattr(table[name], "unit", None)) is not None}
 
     def column(name: str, rows: slice) -> RawColumn:
         cells = table[name][rows]
-        masked = np.ma.getmaskarray(np.ma.asarray(cells))
-        if cells.dtype.kind in "fiu":
-            numbers = np.ma.filled(np.ma.asarray(cells).astype(float), np.nan)
-            # integers in text columns keep their digits through RawColumn.as_texts
-            return RawColumn(None, np.where(masked, np.nan, numbers), units.get(name, ""))
-        texts = np.ma.filled(np.ma.asarray(cells).astype(object), "")
+        kind = getattr(getattr(cells, "dtype", None), "kind", "O")
+        if kind in "fiu" and np.ndim(cells) == 1:
+            plain = np.ma.asarray(cells)
+            numbers = np.ma.filled(plain.astype(float), np.nan)
+            return RawColumn(None, numbers, units.get(name, ""), plain.data if kind in "iu" else None)
+        # texts; and columns of other kinds (times, coordinates, arrays), which mean nothing here
+        texts = np.ma.filled(np.ma.asarray(cells).astype(object), "") if kind in "US" else [str(c) for c in cells]
         return RawColumn(pa.array([str(cell) for cell in texts], pa.string()), None, units.get(name, ""))
 
     def parts() -> Iterator[dict[str, RawColumn]]:
@@ -163,3 +180,15 @@ def _open_ecsv(path: Path) -> Source:
             yield {name: column(name, slice(start, start + PART_ROWS)) for name in names}
 
     return Source(path, tuple(names), units, len(table), parts)
+
+
+def _ecsv_header(path: Path) -> list[str]:
+    """Names in the header line as they stand: astropy renames the second of two that are equal."""
+    delimiter = " "
+    with path.open(encoding="utf-8-sig", newline="") as file:
+        for line in file:
+            if line.startswith("# delimiter:"):
+                delimiter = "," if "," in line else " "
+            elif not line.startswith("#"):
+                return next(csv.reader([line.strip()], delimiter=delimiter))
+    return []

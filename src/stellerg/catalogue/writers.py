@@ -1,6 +1,7 @@
 """Results to files: each is written under a temporary name, read back and counted, and renamed when whole."""
 
 import os
+import shutil
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -9,7 +10,7 @@ from typing import Protocol
 import numpy as np
 
 from stellerg.errors import InputError
-from stellerg.posterior.columns import Column
+from stellerg.posterior.columns import Column, joined
 
 __all__ = ["WRITERS", "Rejected", "Writer", "put"]
 
@@ -53,6 +54,9 @@ class Writer(Protocol):
     def finish(self) -> None:
         """Complete what is written whole."""
 
+    def abandon(self) -> None:
+        """Take away what was written: the run failed."""
+
 
 @dataclass
 class ParquetWriter:
@@ -88,6 +92,10 @@ class ParquetWriter:
     def finish(self) -> None:
         """Every part is whole already."""
 
+    def abandon(self) -> None:
+        """Take away the parts."""
+        shutil.rmtree(self.folder / "summary", ignore_errors=True)
+
 
 @dataclass
 class CsvWriter:
@@ -110,6 +118,10 @@ class CsvWriter:
         """Give the file its name."""
         os.replace(self._temporary(), self.folder / "summary.csv")
 
+    def abandon(self) -> None:
+        """Take away the unfinished file."""
+        self._temporary().unlink(missing_ok=True)
+
     def _temporary(self) -> Path:
         return self.folder / f".summary.csv.{os.getpid()}.tmp"
 
@@ -130,12 +142,11 @@ class EcsvWriter:
         """Write the file."""
         from stellerg.posterior.table import columns_to_table
 
-        whole = [
-            Column(same[0].name, np.concatenate([c.values for c in same]), same[0].unit, same[0].description)
-            for same in zip(*self.parts, strict=True)
-        ]
-        table = columns_to_table(whole, self.meta)
+        table = columns_to_table(joined(self.parts), self.meta)
         put(self.folder / "summary.ecsv", lambda path: table.write(path, format="ascii.ecsv", overwrite=True))
+
+    def abandon(self) -> None:
+        """Nothing was written yet."""
 
 
 WRITERS = {"parquet": ParquetWriter, "csv": CsvWriter, "ecsv": EcsvWriter}

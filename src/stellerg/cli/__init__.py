@@ -27,15 +27,21 @@ app.command("star", no_args_is_help=True)(with_options(star, observables=True))
 app.command("catalogue", no_args_is_help=True)(with_options(catalogue, observables=False))
 
 
-@app.callback()
-def _version(
-    version: bool = typer.Option(False, "--version", help="Show the version and stop.", is_eager=True),
-) -> None:
-    if version:
+def _show_version(asked: bool) -> None:
+    if asked:
         from stellerg import __version__
 
         print(f"stellerg {__version__}")
         raise typer.Exit
+
+
+@app.callback()
+def _common(
+    version: bool = typer.Option(
+        False, "--version", help="Show the version and stop.", is_eager=True, callback=_show_version
+    ),
+) -> None:
+    """Options before the command."""
 
 
 def main() -> None:

@@ -27,7 +27,8 @@ def catalogue(
     """
     from rich.console import Console
 
-    from stellerg.catalogue.run import Run, explain_columns, run
+    from stellerg.catalogue.explain import explain_columns
+    from stellerg.catalogue.run import Run, run
 
     console = Console(highlight=False)
     plan = Run(

@@ -184,6 +184,8 @@ class Settings:
             names = _names(pair)
             if not equals or len(names) != 2:
                 raise InputError(f"--correlation: {text!r} is not of the form mass,radius=0.6")
+            if names in found or names[::-1] in found:
+                raise InputError(f"--correlation: {pair!r} is given twice; give each pair once")
             try:
                 found[names[0], names[1]] = float(value)
             except ValueError:

@@ -39,6 +39,10 @@ def star(
         solar=settings.solar(),
         **given,
     )
+    if plot is not None:
+        from stellerg.report.figures import check_ending, star_figure, write
+
+        check_ending(plot)
     posterior = propagate(stars, **settings.propagation())
     console = Console(highlight=False)
     if as_json:
@@ -52,8 +56,6 @@ def star(
             console.print(explanation(stars, posterior))
         console.print(star_text(posterior))
     if plot is not None and posterior.has_results[0]:
-        from stellerg.report.figures import star_figure, write
-
         write(star_figure(posterior), plot)
     if not posterior.has_results[0]:
         raise typer.Exit(3)

@@ -7,7 +7,7 @@ import numpy as np
 from stellerg.posterior.result import STANDARD_PROBABILITIES, Posterior
 from stellerg.status import STATUS_TEXT, Status, flag_words
 
-__all__ = ["Column", "summary_columns"]
+__all__ = ["Column", "conventions", "joined", "summary_columns"]
 
 _ENDS = ("", "_lower68", "_upper68", "_lower95", "_upper95")
 _MEANING = (
@@ -84,3 +84,22 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
                 Column(f"{output}_budget_{name}", share, "", f"share of {name} in the variance of ln {output}")
             )
     return columns
+
+
+def joined(parts: list[list[Column]]) -> list[Column]:
+    """Join the columns of parts of one table, in order."""
+    if len(parts) == 1:
+        return parts[0]
+    return [
+        Column(same[0].name, np.concatenate([c.values for c in same]), same[0].unit, same[0].description)
+        for same in zip(*parts, strict=True)
+    ]
+
+
+def conventions(posterior: Posterior) -> dict[str, str]:
+    """What a reader of the numbers must know."""
+    return {
+        "prior": posterior.prior,
+        "energy_convention": posterior.energy_convention,
+        "time_convention": posterior.time_convention,
+    }

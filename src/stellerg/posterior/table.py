@@ -5,24 +5,15 @@ from astropy.table import MaskedColumn, QTable
 from astropy.units import Unit
 from astropy.utils.masked import Masked
 
-from stellerg.posterior.columns import Column, summary_columns
+from stellerg.posterior.columns import Column, conventions, summary_columns
 from stellerg.posterior.result import Posterior
 
-__all__ = ["columns_to_table", "conventions", "to_table"]
+__all__ = ["columns_to_table", "to_table"]
 
 
 def to_table(posterior: Posterior) -> QTable:
     """Return the summary with units, descriptions and the conventions in its metadata."""
     return columns_to_table(summary_columns(posterior), conventions(posterior))
-
-
-def conventions(posterior: Posterior) -> dict[str, str]:
-    """What a reader of the numbers must know."""
-    return {
-        "prior": posterior.prior,
-        "energy_convention": posterior.energy_convention,
-        "time_convention": posterior.time_convention,
-    }
 
 
 def columns_to_table(columns: list[Column], meta: dict[str, str]) -> QTable:

@@ -61,13 +61,13 @@ def _colour(status: str) -> str:
 
 
 def _table() -> Table:
-    return Table(box=None, pad_edge=False, padding=(0, 3, 0, 0), header_style="dim")
+    return Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="dim")
 
 
 def _values(given: dict, structure: dict) -> Table:
     table = _table()
+    table.add_column("")  # names may wrap, numbers may not
     for heading, justify in (
-        ("", "left"),
         ("median", "right"),
         ("68.27 % interval", "right"),
         ("95.45 % interval", "right"),
@@ -91,16 +91,24 @@ def _values(given: dict, structure: dict) -> Table:
 
 
 def _budget(given: dict) -> Table:
+    """Quantities down and outputs across, with bars; the other way round where there are many outputs."""
+    quantities = list(dict.fromkeys(key for output in given.values() for key in output["budget"]))
+    idle = ("correlations", "mass_and_structure")
+    shares = {q: [output["budget"].get(q) for output in given.values()] for q in quantities}
+    shares = {q: values for q, values in shares.items() if q not in idle or any(values)}
     table = _table()
     table.add_column("")
-    for name in given:
-        table.add_column(label(name), no_wrap=True)
-    quantities = dict.fromkeys(key for output in given.values() for key in output["budget"])
-    for quantity in quantities:
-        shares = [output["budget"].get(quantity) for output in given.values()]
-        if quantity in ("correlations", "mass_and_structure") and not any(shares):
-            continue
-        table.add_row(label(quantity), *(_share(share) for share in shares))
+    if len(given) <= 2:
+        for name in given:
+            table.add_column(label(name), no_wrap=True)
+        for quantity, values in shares.items():
+            table.add_row(label(quantity), *(_share(share) for share in values))
+        return table
+    for quantity in shares:
+        table.add_column(label(quantity), justify="right")
+    for place, name in enumerate(given):
+        values = [values[place] for values in shares.values()]
+        table.add_row(label(name), *("" if v is None else f"{100.0 * v:.1f} %" for v in values))
     return table
 
 

@@ -134,6 +134,18 @@ def _budget(axis, budgets: dict[str, dict[str, float]]) -> None:
         axis.legend(frameon=False, fontsize=8.0, loc="center left", bbox_to_anchor=(1.0, 0.5))
 
 
+def check_ending(path: Path) -> None:
+    """Refuse a name that does not say which format is wanted.
+
+    Raises
+    ------
+    InputError
+        If the ending is not .png, .pdf or .svg.
+    """
+    if path.suffix.lower() not in (".png", ".pdf", ".svg"):
+        raise InputError(f"plot: the ending of {str(path)!r} is no figure format; use .png, .pdf or .svg")
+
+
 def write(figure: Figure, path: Path) -> None:
     """Write a figure; the ending of the name says which format.
 
@@ -142,9 +154,11 @@ def write(figure: Figure, path: Path) -> None:
     InputError
         If the ending is unknown or the file cannot be written.
     """
+    check_ending(path)
+    # no date in the file: the same answer has the same bytes
+    undated = {".svg": {"Date": None}, ".pdf": {"CreationDate": None}, ".png": None}[path.suffix.lower()]
     try:
-        figure.savefig(path, dpi=160)
-    except ValueError:
-        raise InputError(f"plot: the ending of {str(path)!r} is no figure format; use .png, .pdf or .svg") from None
+        with matplotlib.rc_context({**_STYLE, "svg.hashsalt": "stellerg"}):
+            figure.savefig(path, dpi=160, metadata=undated)
     except OSError as problem:
         raise InputError(f"plot: cannot write {str(path)!r}: {problem.strerror}") from None
