@@ -7,8 +7,9 @@ from rich.text import Text
 
 from stellerg.assembly import Notes, assemble
 from stellerg.catalogue.columns import Columns, recognise
+from stellerg.catalogue.plan import Run
 from stellerg.catalogue.readers import Source, open_table
-from stellerg.catalogue.run import Run, check_use
+from stellerg.catalogue.run import check_use
 from stellerg.catalogue.tally import aside_words
 from stellerg.observables import OBSERVABLES
 from stellerg.status import VALUE

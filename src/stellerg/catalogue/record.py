@@ -4,22 +4,19 @@ import json
 from dataclasses import asdict
 from importlib.metadata import version
 from pathlib import Path
-from typing import TYPE_CHECKING
 
 from stellerg import constants
 from stellerg.catalogue.columns import Columns
+from stellerg.catalogue.plan import Run
 from stellerg.catalogue.readers import Source
 from stellerg.catalogue.tally import Tally
 from stellerg.catalogue.writers import put
 from stellerg.status import FLAG_TEXT, Flag
 
-if TYPE_CHECKING:
-    from stellerg.catalogue.run import Run
-
 __all__ = ["write_record"]
 
 
-def write_record(folder: Path, plan: "Run", source: Source, columns: Columns, propagation, tally: Tally) -> None:
+def write_record(folder: Path, plan: Run, source: Source, columns: Columns, propagation, tally: Tally) -> None:
     """`run.json`: all that made the numbers, and what became of the rows."""
     prior = propagation["prior"]
     record = {

@@ -2,8 +2,7 @@
 
 import shutil
 import sys
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -11,63 +10,24 @@ from rich.console import Console, RenderableType
 from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
 
 from stellerg.catalogue.columns import Columns, recognise
+from stellerg.catalogue.plan import Run
 from stellerg.catalogue.readers import open_table
 from stellerg.catalogue.record import write_record
 from stellerg.catalogue.tally import Tally, closing_summary
 from stellerg.catalogue.writers import WRITERS, Rejected
 from stellerg.checks.budget import tail_names
 from stellerg.errors import InputError
-from stellerg.observables import OBSERVABLES, SolarReferences
+from stellerg.observables import OBSERVABLES
 from stellerg.posterior.columns import conventions, joined, summary_columns
 from stellerg.propagation import propagate
 from stellerg.stars import Stars
 from stellerg.status import STATUS_TEXT, Status
 from stellerg.structure.files import load_prior
 
-__all__ = ["Run", "check_use", "run"]
+__all__ = ["check_use", "run"]
 
 _BATCH = 4096  # stars propagated together: bounds memory, changes no bit
 _CARRYING = [STATUS_TEXT[status].word for status in (Status.OK, Status.PARTIAL, Status.DOUBTFUL)]
-
-
-@dataclass(frozen=True)
-class Run:
-    """What to do.
-
-    Attributes
-    ----------
-    source : Path
-        CSV or ECSV.
-    folder : Path or None
-        For the results.
-    output_format : str
-        parquet, csv or ecsv.
-    overwrite : bool
-        Replace the results of an earlier run.
-    shape, correlation, evolutionary_state, solar
-        For rows that do not say themselves.
-    propagation : mapping
-        Keyword arguments of `stellerg.propagate`.
-    """
-
-    source: Path
-    folder: Path | None
-    output_format: str
-    overwrite: bool
-    shape: str
-    correlation: Mapping[tuple[str, str], float]
-    evolutionary_state: str
-    solar: SolarReferences
-    propagation: Mapping[str, object]
-
-    def star_options(self) -> dict:
-        """Return what the reader of the columns needs."""
-        return {
-            "shape": self.shape,
-            "correlation": self.correlation,
-            "evolutionary_state": self.evolutionary_state,
-            "solar": self.solar,
-        }
 
 
 def run(plan: Run) -> RenderableType:

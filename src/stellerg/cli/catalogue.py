@@ -28,7 +28,8 @@ def catalogue(
     from rich.console import Console
 
     from stellerg.catalogue.explain import explain_columns
-    from stellerg.catalogue.run import Run, run
+    from stellerg.catalogue.plan import Run
+    from stellerg.catalogue.run import run
 
     console = Console(highlight=False)
     plan = Run(
