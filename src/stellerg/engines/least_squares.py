@@ -9,9 +9,10 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import chdtrc
 
+from stellerg.engines.target import precision_root, scores
 from stellerg.problem import Problem
 
-__all__ = ["Fit", "fit", "whitened_scores"]
+__all__ = ["Fit", "fit"]
 
 _STEPS = 60
 _CONVERGED = 1e-6  # largest whitened gradient at an accepted minimum
@@ -39,45 +40,15 @@ class Fit:
     converged: np.ndarray
 
 
-def root_of_precision(problem: Problem) -> np.ndarray | None:
-    """L with L' L = C^-1, (star, input, input); None for independent inputs."""
-    if problem.correlation is None:
-        return None
-    values, vectors = np.linalg.eigh(problem.correlation)
-    return np.swapaxes(vectors, 1, 2) / np.sqrt(values)[:, :, None]
-
-
-def whitened_scores(problem: Problem, parameters: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Scores of the inputs at parameters, their slopes, and the logarithm of the slopes.
-
-    Parameters
-    ----------
-    parameters : ndarray, (star, draw, parameter)
-
-    Returns
-    -------
-    score, log_slope : ndarray, (star, draw, input)
-        Normal scores z, and ln |dz/d ln obs|.
-    sign : ndarray, (input,)
-        Sign of dz/d ln obs.
-    """
-    log_inputs = problem.base[:, None, :] + np.einsum("jr,sdr->sdj", problem.design, parameters)
-    columns = [m.score(log_inputs[:, :, j]) for j, m in enumerate(problem.measured)]
-    score = np.stack([c[0] for c in columns], axis=2)
-    log_slope = np.stack([c[1] for c in columns], axis=2)
-    sign = np.array([np.sign(problem.log_sd[0, j]) for j in range(len(columns))])
-    return score, log_slope, sign
-
-
 def fit(problem: Problem) -> Fit:
-    """Find the least-squares point of an over-determined problem."""
-    root = root_of_precision(problem)
+    """Find the least-squares point; of exactly determined stars, that of the medians, where chi-squared is 0."""
+    root = precision_root(problem)
     theta = _start(problem, root)
     residual, jacobian = _residual(problem, root, theta)
     chi2 = _square(residual)
     damping = np.full(len(problem), 1e-3)
     unit = np.eye(problem.design.shape[1])
-    for _ in range(_STEPS):
+    for _ in range(_STEPS if problem.over_determined else 0):
         safe = np.where(np.isfinite(jacobian), jacobian, 0.0)
         normal = np.einsum("sjr,sjq->srq", safe, safe)
         gradient = np.einsum("sjr,sj->sr", safe, np.where(np.isfinite(residual), residual, 0.0))
@@ -99,7 +70,8 @@ def fit(problem: Problem) -> Fit:
         relative = np.abs(gradient / size).max(axis=1)
     freedom = problem.design.shape[0] - problem.design.shape[1]
     converged = np.isfinite(chi2) & (relative < _CONVERGED * (1.0 + np.sqrt(chi2)))
-    return Fit(theta, jacobian, chi2, chdtrc(freedom, chi2), freedom, converged)
+    probability = chdtrc(freedom, chi2) if freedom else np.full(len(problem), np.nan)
+    return Fit(theta, jacobian, chi2, probability, freedom, converged)
 
 
 def _start(problem: Problem, root) -> np.ndarray:
@@ -126,7 +98,7 @@ def _start(problem: Problem, root) -> np.ndarray:
 
 
 def _residual(problem: Problem, root, theta):
-    score, log_slope, sign = whitened_scores(problem, theta[:, None, :])
+    score, log_slope, sign = scores(problem, theta[:, None, :])
     jacobian = (sign * np.exp(log_slope[:, 0]))[:, :, None] * problem.design
     residual = score[:, 0]
     if root is not None:

@@ -12,7 +12,8 @@ import numpy as np
 from scipy.special import ndtri
 
 from stellerg import keyed_random
-from stellerg.engines.least_squares import fit, root_of_precision, whitened_scores
+from stellerg.engines.least_squares import fit
+from stellerg.engines.target import log_reference_density, log_target, scores
 from stellerg.errors import EngineError
 from stellerg.problem import Problem
 
@@ -136,8 +137,8 @@ class Draws:
         if theta is None:
             offset = self.log_inputs - p.base[:, :, None]
             theta = np.einsum("srj,sjd->sdr", p.solution, offset)
-        _, log_slope, sign = whitened_scores(p, theta)
-        return _log_reference(p, log_slope, sign)
+        _, log_slope, sign = scores(p, theta)
+        return log_reference_density(p, log_slope, sign)
 
 
 def sample(problem: Problem, plan: Plan) -> Draws:
@@ -198,33 +199,7 @@ def _weighted(problem: Problem, uniforms: list[np.ndarray]):
     spread = -2.0 * (np.log(uniforms[size]) + np.log(uniforms[size + 1]))
     t = ndtri(np.stack(uniforms[:size], axis=2)) * np.sqrt(_FREEDOM / spread)[:, :, None]
     theta = best.parameters[:, None, :] + np.einsum("srq,sdq->sdr", root, t)
-    score, log_slope, sign = whitened_scores(problem, theta)
-    whitening = root_of_precision(problem)
-    if whitening is not None:
-        score = np.einsum("sij,sdj->sdi", whitening, score)
-    with np.errstate(invalid="ignore", over="ignore"):
-        target = -0.5 * np.square(score).sum(axis=-1)
-    target = np.where(np.isfinite(target), target + _log_reference(problem, log_slope, sign), -np.inf)
     proposal = -0.5 * (_FREEDOM + size) * np.log1p(np.square(t).sum(axis=-1) / _FREEDOM)
-    log_weight = np.where(np.isnan(target), -np.inf, target - proposal)
+    log_weight = log_target(problem, theta) - proposal
     usable &= np.isfinite(log_weight).any(axis=1)
     return theta, np.where(usable[:, None], log_weight, 0.0), usable
-
-
-def _log_reference(problem: Problem, log_slope: np.ndarray, sign: np.ndarray) -> np.ndarray:
-    """ln |J' C^-1 J|^(1/2) from the slopes of the scores, (star, draw, input) to (star, draw)."""
-    jacobian = (sign * np.exp(log_slope))[..., None] * problem.design
-    root = root_of_precision(problem) if problem.correlation is not None and problem.over_determined else None
-    if root is not None:
-        jacobian = np.einsum("sij,sdjr->sdir", root, jacobian)
-    gram = np.einsum("sdjr,sdjq->sdrq", jacobian, jacobian)
-    if gram.shape[-1] == 1:
-        with np.errstate(divide="ignore"):
-            half = 0.5 * np.log(gram[..., 0, 0])
-    else:
-        with np.errstate(divide="ignore"):
-            half = 0.5 * np.linalg.slogdet(gram)[1]
-    if root is None and problem.correlation is not None:
-        # exactly determined: |C|^(-1/2) is a constant of the star, left out where C is singular
-        half = half - 0.5 * np.log(np.maximum(np.linalg.det(problem.correlation), 1e-300))[:, None]
-    return half
