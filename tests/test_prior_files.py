@@ -52,12 +52,12 @@ REFUSED = {
         ["[common]", "'n'"],
     ),
     # densities
-    "no distribution": (INDEX + "value = 3\n", ["'distribution'", "None"]),
+    "no distribution": (INDEX + "value = 3\n", ["'distribution'", "missing"]),
     "unknown distribution": (
         INDEX + 'distribution = "cauchy"\n',
         ["'distribution'", "'cauchy'", "point, uniform"],
     ),
-    "missing number": (INDEX + 'distribution = "uniform"\nlower = 1.5\n', ["[index]", "'upper'", "None"]),
+    "missing number": (INDEX + 'distribution = "uniform"\nlower = 1.5\n', ["[index]", "'upper'", "missing"]),
     "text for a number": (GOOD.replace("3.0", '"3"'), ["'upper'", "'3'"]),
     "boolean for a number": (GOOD.replace("3.0", "true"), ["'upper'", "True"]),
     "nan": (GOOD.replace("3.0", "nan"), ["'upper'", "nan"]),
@@ -124,7 +124,7 @@ REFUSED = {
     # mixtures
     "no components": (MIXTURE, ["[[component]]"]),
     "component no table": (MIXTURE + "component = [3]\n", ["component 1", "3"]),
-    "no weight": (MIXTURE + "[[index.component]]\n" + UNIFORM, ["component 1", "'weight'", "None"]),
+    "no weight": (MIXTURE + "[[index.component]]\n" + UNIFORM, ["component 1", "'weight'", "missing"]),
     "zero weight": (MIXTURE + component(0.0) + component(1.0), ["component 1", "'weight'", "0.0"]),
     "negative weight": (MIXTURE + component(1.5) + component(-0.5), ["component 2", "'weight'", "-0.5"]),
     "boolean weight": (MIXTURE + component("true"), ["component 1", "'weight'", "True"]),
@@ -137,7 +137,7 @@ REFUSED = {
     "interval no tables": ("interval = 3\n" + HEAD, ["[[interval]]"]),
     "no intervals": ("interval = []\n" + HEAD, ["[[interval]]"]),
     "interval and density": (GOOD + interval("0.0", "inf"), ["not both"]),
-    "no mass": (HEAD + "[[interval]]\n[interval.index]\n" + UNIFORM, ["interval 1", "'mass'", "None"]),
+    "no mass": (HEAD + "[[interval]]\n[interval.index]\n" + UNIFORM, ["interval 1", "'mass'", "missing"]),
     "one mass": (
         HEAD + "[[interval]]\nmass = [1]\n[interval.index]\n" + UNIFORM,
         ["interval 1", "'mass'", "[1]"],
@@ -170,9 +170,9 @@ REFUSED = {
         ["'evolutionary_state'", "'evolved'"],
     ),
     "common no table": ("common = 3\n" + GOOD, ["[common]", "3"]),
-    "no fraction": (GOOD + '[common]\nwithin = "all"\n', ["[common]", "'fraction'", "None"]),
+    "no fraction": (GOOD + '[common]\nwithin = "all"\n', ["[common]", "'fraction'", "missing"]),
     "fraction above 1": (GOOD + '[common]\nfraction = 1.1\nwithin = "all"\n', ["'fraction'", "1.1"]),
-    "no within": (GOOD + "[common]\nfraction = 0.5\n", ["[common]", "'within'", "None"]),
+    "no within": (GOOD + "[common]\nfraction = 0.5\n", ["[common]", "'within'", "missing"]),
     "within no text": (GOOD + "[common]\nfraction = 0.5\nwithin = 3\n", ["'within'", "3"]),
 }
 
@@ -245,7 +245,7 @@ def test_a_users_file_by_path(tmp_path):
 def test_a_mistake_in_a_users_file_names_the_file(tmp_path):
     path = tmp_path / "mine.toml"
     path.write_text(GOOD + "width = 2\n", encoding="utf-8")
-    with pytest.raises(PriorError, match=r"prior mine, \[index\]: unknown key 'width'"):
+    with pytest.raises(PriorError, match=r"^prior .*mine.toml, line 7, \[index\]: unknown key 'width'"):
         load_prior(path)
 
 

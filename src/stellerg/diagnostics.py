@@ -4,6 +4,7 @@ Arrays are (ensemble, walker, draw). Walkers of one ensemble are not independent
 (Margossian et al. 2022, doi:10.1214/24-BA1453, from memory), with the ensembles as superchains.
 """
 
+import warnings
 from collections.abc import Mapping
 
 import numpy as np
@@ -70,9 +71,8 @@ def to_datatree(
     import arviz_base
 
     dims = {name: ["star"] for group in (posterior, sample_stats, constant_data) for name in group}
-    return arviz_base.from_dict(
-        {"posterior": dict(posterior), "sample_stats": dict(sample_stats), "constant_data": dict(constant_data)},
-        coords={"star": stars},
-        dims=dims,
-        attrs={"/": dict(attributes)},
-    )
+    groups = {"posterior": dict(posterior), "sample_stats": dict(sample_stats), "constant_data": dict(constant_data)}
+    with warnings.catch_warnings():
+        # every walker is a chain here, so that there may be more chains than draws
+        warnings.filterwarnings("ignore", message="Found chain dimension to be longer", category=UserWarning)
+        return arviz_base.from_dict(groups, coords={"star": stars}, dims=dims, attrs={"/": dict(attributes)})

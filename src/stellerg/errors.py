@@ -22,7 +22,17 @@ class InputError(StellergError):
 
 
 class PriorError(StellergError):
-    """A structure file that does not describe a proper density."""
+    """A structure file that does not describe a proper density.
+
+    Attributes
+    ----------
+    line : int or None
+        The line of the fault, counted from 1, which the message names too; None where there is no text.
+    """
+
+    def __init__(self, message: str, line: int | None = None):
+        super().__init__(message)
+        self.line = line
 
 
 class EngineError(StellergError):

@@ -94,10 +94,11 @@ def propagate(
             notes.flags[part.rows] |= flags(part, answer, probability[part.rows])
             used[part.rows], why[part.rows] = number, reasons.index(reason)
             failed = answer.status != Status.OK
-            _note_failures(notes, part, answer, failed)
+            for star in np.flatnonzero(failed):
+                notes.set(part.rows[star : star + 1], Status.NOT_CONVERGED, answer.failure(int(star)))
             if failed.any():
                 part = part.take(np.flatnonzero(~failed))
-                answer = choices[number].solve(part)
+                answer = answer.take(np.flatnonzero(~failed))
             if len(part):
                 pieces.append(Piece(part.rows, answer, Linear().solve(part), *budget(answer)))
     return Posterior(
@@ -170,22 +171,6 @@ def _assign(problem: Problem, choices: list[Engine], auto: bool, notes: Notes):
     for code in np.unique(refusal[left]):
         rows = problem.rows[left[refusal[left] == code]]
         notes.set(rows, Status.ENGINE_REFUSED, f"{choices[-1].name} refuses: {choices[-1].reasons[code]}")
-
-
-def _note_failures(notes: Notes, problem: Problem, answer, failed: np.ndarray) -> None:
-    effective = answer.diagnostics.get("effective_draws", np.zeros(len(failed)))
-    notes.set(
-        problem.rows[failed & (effective > 0.0)],
-        Status.NOT_CONVERGED,
-        "fewer than 100 effective draws are left: the measurements hardly agree; check them, name the independent "
-        "ones with use, or draw more",
-    )
-    notes.set(
-        problem.rows[failed & (effective == 0.0)],
-        Status.NOT_CONVERGED,
-        "no value satisfies all measurements within the ends of their distributions; check them, or name the "
-        "independent ones with use",
-    )
 
 
 def _quoted(stars: Stars, notes: Notes) -> dict[int, str]:

@@ -35,6 +35,14 @@ class Answer(Protocol):
     numerical_error: np.ndarray
     diagnostics: Mapping[str, np.ndarray]
 
+    def take(self, which: np.ndarray) -> "Answer":
+        """Return some of the stars, by position."""
+        ...
+
+    def failure(self, star: int) -> str:
+        """Why a star is NOT_CONVERGED, with its numbers and the way out."""
+        ...
+
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """ln Y at cumulative probabilities p (m,): (star, output, m)."""
         ...

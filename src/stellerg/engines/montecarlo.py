@@ -77,6 +77,23 @@ class MonteCarloAnswer:
         for chunk, piece in self.problem.split(size):
             yield chunk, sample(piece, self.plan)
 
+    def take(self, which: np.ndarray) -> "MonteCarloAnswer":
+        """Return some of the stars."""
+        return MonteCarloAnswer(self.problem.take(which), self.plan)
+
+    def failure(self, star: int) -> str:
+        """Why a star is not converged."""
+        effective = self.diagnostics["effective_draws"][star]
+        if effective == 0.0:
+            return (
+                "no value satisfies all measurements within the ends of their distributions; check them, or name the "
+                "independent ones with use"
+            )
+        return (
+            f"{effective:.0f} effective draws are left, {_LEAST_EFFECTIVE:.0f} are needed: the measurements hardly "
+            "agree; check them, name the independent ones with use, or draw more"
+        )
+
     @property
     def status(self) -> np.ndarray:
         """NOT_CONVERGED where too few effective draws are left, (star,)."""

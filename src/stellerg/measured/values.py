@@ -93,7 +93,7 @@ class Measured:
         """Probability below zero that the restriction to positive values removed, (star,)."""
         removed = np.zeros(len(self))
         if self.scale is Scale.LINEAR:
-            for shape, rows in self._by_shape():
+            for shape, rows in self._groups:
                 removed[rows] = shapes.probability_below_zero(shape, *self._parameters(rows))[:, 0]
         return np.where(removed < _NO_EFFECT, 0.0, removed)
 
@@ -126,7 +126,7 @@ class Measured:
     def _moments(self) -> np.ndarray:
         """Means and standard deviations of ln(quantity) and of the quoted quantity, (4, star)."""
         moments = np.full((4, len(self)), np.nan)
-        for shape, rows in self._by_shape():
+        for shape, rows in self._groups:
             if shape in (Shape.EXACT, Shape.LOGNORMAL):
                 moments[:, rows] = self._closed_moments(shape, rows)
                 continue
@@ -161,7 +161,7 @@ class Measured:
             Decreasing in the score for magnitudes.
         """
         out = np.full((len(self), score.shape[1]), np.nan)
-        for shape, rows in self._by_shape():
+        for shape, rows in self._groups:
             here = score if len(score) == 1 else score[rows]
             if shape is Shape.LOGNORMAL:
                 out[rows] = self.to_log(self.value[rows])[:, None] + self._log_slope(rows)[:, None] * here
@@ -182,7 +182,7 @@ class Measured:
             Infinite, and minus infinity, beyond a hard end of the distribution.
         """
         score = np.full(logarithm.shape, np.nan)
-        for shape, rows in self._by_shape():
+        for shape, rows in self._groups:
             here = logarithm[rows]
             if shape is Shape.LOGNORMAL:
                 score[rows] = (here - self.to_log(self.value[rows])[:, None]) / self._log_slope(rows)[:, None]
@@ -198,7 +198,7 @@ class Measured:
     def log_density(self, logarithm: np.ndarray) -> np.ndarray:
         """Logarithm of the density over ln(quantity), (star, k)."""
         out = np.full(logarithm.shape, np.nan)
-        for shape, rows in self._by_shape():
+        for shape, rows in self._groups:
             here = logarithm[rows]
             if shape is Shape.LOGNORMAL:
                 step = self._log_slope(rows)[:, None]
@@ -210,12 +210,12 @@ class Measured:
             out[rows] = density + to_log - np.log1p(-self.removed[rows])[:, None]
         return out
 
-    def _by_shape(self):
-        """Yield each shape present with its rows (at most five passes, never one a star)."""
-        for code in (Shape.EXACT, Shape.NORMAL, Shape.LOGNORMAL, Shape.THREE_QUANTILE, Shape.SPLIT_NORMAL):
-            rows = np.flatnonzero(self.shape == code)
-            if rows.size:
-                yield code, rows
+    @cached_property
+    def _groups(self) -> tuple[tuple[Shape, np.ndarray], ...]:
+        """Each shape present with its rows: at most five passes, never one a star."""
+        shapes_present = (Shape.EXACT, Shape.NORMAL, Shape.LOGNORMAL, Shape.THREE_QUANTILE, Shape.SPLIT_NORMAL)
+        groups = ((code, np.flatnonzero(self.shape == code)) for code in shapes_present)
+        return tuple((code, rows) for code, rows in groups if rows.size)
 
     def _parameters(self, rows):
         return self.value[rows][:, None], self.upper[rows][:, None], self.lower[rows][:, None]

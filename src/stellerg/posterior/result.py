@@ -253,14 +253,7 @@ class Posterior:
         InputError
             If two stars have the same identifier: their draws would be the same.
         """
-        if count < 1 or count & (count - 1):
-            raise InputError(f"count: {count} must be a power of two (512, 1024, 2048, ...)")
-        names, repeats = np.unique(self.star, return_counts=True)
-        if (repeats > 1).any():
-            raise InputError(
-                f"star: {names[repeats > 1][0]!r} names {repeats.max()} stars; draws are keyed by the identifier, "
-                "give each star its own"
-            )
+        self._check_draws(count)
         shape = (len(self), count)
         outputs = {name: np.full(shape, np.nan) for name in (*self.outputs, COEFFICIENT)}
         latents: dict[str, np.ndarray] = {}
@@ -276,11 +269,50 @@ class Posterior:
                 outputs[name][piece.rows] = np.exp(drawn.log_outputs[:, k])
         return StarDraws(u, latents, outputs, weight, reference)
 
+    def to_arviz(self, count: int = 1024, seed: int = 0):
+        """Return draws or chains as an xarray DataTree, which arviz summarises and plots.
+
+        Parameters
+        ----------
+        count : int
+            Draws of each star from engines that keep no chains; a power of two.
+        seed : int
+
+        Raises
+        ------
+        InputError
+            If no star has a result, or as `draws`.
+        """
+        from stellerg.posterior.datatree import to_datatree
+
+        if not self.pieces:
+            raise InputError("to_arviz: no star has a result")
+        self._check_draws(count)
+        return to_datatree(self, count, seed)
+
+    def diagnostics(self, row: int = 0) -> dict[str, float]:
+        """Numbers that judge the engine's work on one star: empty for quadrature."""
+        for piece in self.pieces:
+            position = np.flatnonzero(piece.rows == row)
+            if position.size:
+                return {name: float(v[position[0]]) for name, v in piece.answer.diagnostics.items()}
+        return {}
+
     def table(self):
         """Return a table of the summary (astropy QTable with units and descriptions)."""
         from stellerg.posterior.table import to_table
 
         return to_table(self)
+
+    def _check_draws(self, count: int) -> None:
+        if count < 1 or count & (count - 1):
+            raise InputError(f"count: {count} must be a power of two (512, 1024, 2048, ...)")
+        names, repeats = np.unique(self.star, return_counts=True)
+        if (repeats > 1).any():
+            raise InputError(
+                f"star: {names[repeats > 1][0]!r} names {repeats.max()} stars; draws are keyed by the identifier, "
+                "give each star its own"
+            )
 
     def _quantiles(self, answer, probabilities: np.ndarray) -> np.ndarray:
         key = (id(answer), tuple(probabilities))

@@ -1,1 +1,4 @@
-"""Figures and tables for people. Imports `posterior`, and `stars` for what was read; nothing imports it but `cli`."""
+"""Figures, tables and texts for people: of a star's answer, of what was read, of a structure model.
+
+Imports `posterior`, `stars` and `structure`; nothing imports it but `cli`.
+"""

@@ -1,4 +1,4 @@
-"""Figures of one star's answer (matplotlib; the only module that imports it)."""
+"""Figures of one star's answer (matplotlib; with `prior_figure` the only modules that import it)."""
 
 from pathlib import Path
 
@@ -11,9 +11,9 @@ from stellerg.posterior import Posterior
 from stellerg.posterior.document import star_document
 from stellerg.wording import label
 
-__all__ = ["star_figure", "write"]
+__all__ = ["ACCENT", "INK", "SHADES", "STYLE", "check_ending", "star_figure", "write"]
 
-_STYLE = {
+STYLE = {
     "font.size": 9.0,
     "axes.spines.top": False,
     "axes.spines.right": False,
@@ -21,8 +21,8 @@ _STYLE = {
     "axes.titlelocation": "left",
     "svg.fonttype": "none",
 }
-_INK, _FILL, _DEEP, _LINEAR = "#1f2a36", "#c9dbe6", "#7fa8bf", "#b5482f"
-_SHADES = ("#35566b", "#5f8a8b", "#94a86b", "#d9b650", "#c98a4b", "#8c6d8f", "#6b7a8f", "#a3a3a3")
+INK, _FILL, _DEEP, ACCENT = "#1f2a36", "#c9dbe6", "#7fa8bf", "#b5482f"
+SHADES = ("#35566b", "#5f8a8b", "#94a86b", "#d9b650", "#c98a4b", "#8c6d8f", "#6b7a8f", "#a3a3a3")
 _STRUCTURE = "#b9b2a6"
 _POINTS = 400
 
@@ -38,7 +38,7 @@ def star_figure(posterior: Posterior, row: int = 0) -> Figure:
     """
     answer = star_document(posterior, row)
     outputs = [name for name in posterior.outputs if answer["outputs"][name] is not None]
-    with matplotlib.rc_context(_STYLE):
+    with matplotlib.rc_context(STYLE):
         figure = Figure(figsize=(7.2, 2.5 * len(outputs) + 1.2 + 0.3 * len(outputs)), layout="constrained")
         heights = [2.5] * len(outputs) + [0.7 + 0.35 * len(outputs)]
         axes = figure.subplots(len(outputs) + 1, 1, height_ratios=heights, squeeze=False)[:, 0]
@@ -51,7 +51,7 @@ def star_figure(posterior: Posterior, row: int = 0) -> Figure:
             x=0.01,
             ha="left",
             fontsize=9.0,
-            color=_INK,
+            color=INK,
         )
     return figure
 
@@ -67,21 +67,21 @@ def _density(axis, posterior: Posterior, output: dict, name: str, row: int) -> N
     axis.set_xlabel(unit)
     scale = 10.0**power
     if not high > low * (1.0 + 1e-9):
-        axis.axvline(median / scale, color=_INK)
-        axis.text(median / scale, 0.5, "  exact: no width", transform=axis.get_xaxis_transform(), color=_INK)
+        axis.axvline(median / scale, color=INK)
+        axis.text(median / scale, 0.5, "  exact: no width", transform=axis.get_xaxis_transform(), color=INK)
         return
     margin = 0.08 * (high - low)
     values = np.linspace(max(low - margin, 1e-3 * median), high + margin, _POINTS)
     density = _row_density(posterior, values, name, row)
-    axis.plot(values / scale, density, color=_INK, lw=1.4, label="posterior")
+    axis.plot(values / scale, density, color=INK, lw=1.4, label="posterior")
     for key, colour, text in (("interval95", _FILL, "95.45 %"), ("interval68", _DEEP, "68.27 %")):
         inside = (values >= output[key][0]) & (values <= output[key][1])
         axis.fill_between(values / scale, density, where=inside, color=colour, lw=0, label=text)
-    axis.axvline(median / scale, color=_INK, lw=0.9, ls=":")
+    axis.axvline(median / scale, color=INK, lw=0.9, ls=":")
     value, uncertainty = output["linear"]["value"], output["linear"]["standard_uncertainty"]
     if value is not None and uncertainty:
         normal = np.exp(-0.5 * ((values - value) / uncertainty) ** 2) / (np.sqrt(2.0 * np.pi) * uncertainty)
-        axis.plot(values / scale, normal, color=_LINEAR, lw=1.2, ls="--", label="first order")
+        axis.plot(values / scale, normal, color=ACCENT, lw=1.2, ls="--", label="first order")
     axis.set_ylim(bottom=0.0)
     axis.set_xlim(values[0] / scale, values[-1] / scale)
     handles, labels = axis.get_legend_handles_labels()
@@ -99,7 +99,7 @@ def _budget(axis, budgets: dict[str, dict[str, float]]) -> None:
     """Stacked bars of the shares; negative ones (correlations) to the left of zero."""
     quantities = dict.fromkeys(key for shares in budgets.values() for key in shares)
     shown = [q for q in quantities if any(abs(shares.get(q) or 0.0) > 5e-4 for shares in budgets.values())]
-    colours = dict(zip([q for q in shown if q != "structure"], _SHADES * 3, strict=False))
+    colours = dict(zip([q for q in shown if q != "structure"], SHADES * 3, strict=False))
     colours["structure"] = _STRUCTURE
     for place, shares in enumerate(budgets.values()):
         right = left = 0.0
@@ -114,8 +114,8 @@ def _budget(axis, budgets: dict[str, dict[str, float]]) -> None:
                 label=label(quantity) if place == 0 else None,
             )
             if abs(share) >= 6.0:
-                dark = colours[quantity] in _SHADES[:2]
-                ink = "white" if dark else _INK
+                dark = colours[quantity] in SHADES[:2]
+                ink = "white" if dark else INK
                 axis.text(
                     start + share / 2,
                     place,
@@ -158,7 +158,7 @@ def write(figure: Figure, path: Path) -> None:
     # no date in the file: the same answer has the same bytes
     undated = {".svg": {"Date": None}, ".pdf": {"CreationDate": None}, ".png": None}[path.suffix.lower()]
     try:
-        with matplotlib.rc_context({**_STYLE, "svg.hashsalt": "stellerg"}):
+        with matplotlib.rc_context({**STYLE, "svg.hashsalt": "stellerg"}):
             figure.savefig(path, dpi=160, metadata=undated)
     except OSError as problem:
         raise InputError(f"plot: cannot write {str(path)!r}: {problem.strerror}") from None

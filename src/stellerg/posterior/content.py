@@ -1,0 +1,171 @@
+"""What is said of one star, as words: `text` (terminal) and `html` (notebook) only lay it out."""
+
+import math
+from dataclasses import dataclass, field
+
+from stellerg.errors import InputError
+from stellerg.posterior.document import star_document
+from stellerg.posterior.result import Posterior
+from stellerg.status import FLAG_TEXT
+from stellerg.wording import counted, label
+
+__all__ = ["ACROSS", "StarContent", "ValueRow", "number", "percentage", "power_of_ten", "star_content", "with_power"]
+
+ACROSS = 2  # with more outputs than this, the budget has outputs down and quantities across
+_SILENT = ("correlations", "mass_and_structure")  # left out of the budget where they are zero everywhere
+
+
+@dataclass(frozen=True)
+class ValueRow:
+    """One quantity with its intervals; a unit may begin with a power of ten (``10^48 erg``)."""
+
+    name: str
+    median: str
+    interval68: str
+    interval95: str
+    unit: str
+
+
+@dataclass(frozen=True)
+class StarContent:
+    """All that is said of one star; `outputs` is empty where there is no result.
+
+    Attributes
+    ----------
+    star, status, status_text : str
+    outputs : tuple of str
+        In words.
+    values : tuple of ValueRow
+    shares : dict of str to list of (float or None)
+        By quantity in words, one for each output.
+    sentences : tuple of str
+    flags : dict of str to str
+        Sentence by word.
+    """
+
+    star: str
+    status: str
+    status_text: str
+    outputs: tuple[str, ...] = ()
+    values: tuple[ValueRow, ...] = ()
+    shares: dict[str, list[float | None]] = field(default_factory=dict)
+    sentences: tuple[str, ...] = ()
+    flags: dict[str, str] = field(default_factory=dict)
+
+
+def number(value: float, power: int = 0, digits: int = 4) -> str:
+    """Return a number with significant digits, in units of a power of ten."""
+    scaled = value / 10.0**power
+    if scaled == 0.0:
+        return "0"
+    decimals = max(digits - 1 - math.floor(math.log10(abs(scaled))), 0)
+    return f"{scaled:.{decimals}f}"
+
+
+def power_of_ten(value: float) -> int:
+    """Power of ten to take out of a number too long to read."""
+    exponent = math.floor(math.log10(abs(value))) if value else 0
+    return exponent if not -4 < exponent < 5 else 0
+
+
+def with_power(unit: str, power: int) -> str:
+    """Return a unit with its power of ten: ``10^48 erg``."""
+    return f"10^{power} {unit}".strip() if power else unit
+
+
+def percentage(share: float) -> str:
+    """Return a share of one in per cent."""
+    return f"{100.0 * share:.1f} %"
+
+
+def star_content(posterior: Posterior, row: int = 0, use_option: str = "--use") -> StarContent:
+    """Return what is said of one star.
+
+    Parameters
+    ----------
+    posterior : Posterior
+    row : int
+    use_option : str
+        How the reader names independent measurements.
+
+    Raises
+    ------
+    InputError
+        If there is no such row.
+    """
+    if not 0 <= row < len(posterior):
+        rows = counted(len(posterior), "row")
+        raise InputError(f"row: {row} is not one of the {rows}, which are counted from 0")
+    answer = star_document(posterior, row)
+    given = {name: output for name, output in answer["outputs"].items() if output is not None}
+    heading = {key: answer[key] for key in ("star", "status", "status_text")}
+    if not given:
+        return StarContent(**heading)
+    sentences = {text.word: text.sentence for text in FLAG_TEXT.values()}
+    return StarContent(
+        **heading,
+        outputs=tuple(map(label, given)),
+        values=tuple(_values(given, answer["structure"])),
+        shares=_shares(given),
+        sentences=tuple(_sentences(posterior, answer, given, row, use_option)),
+        flags={word: sentences[word] for word in answer["flags"]},
+    )
+
+
+def _values(given: dict, structure: dict):
+    rows = [(name, output, output["unit"]) for name, output in given.items()]
+    rows += [
+        (name, values, "")
+        for name, values in (
+            ("structure coefficient", structure["coefficient"]),
+            ("n_effective", structure["n_effective"]),
+        )
+        if values is not None
+    ]
+    for name, values, unit in rows:
+        power = power_of_ten(values["median"])
+        intervals = [" to ".join(number(end, power) for end in values[key]) for key in ("interval68", "interval95")]
+        yield ValueRow(label(name), number(values["median"], power), *intervals, with_power(unit, power))
+
+
+def _shares(given: dict) -> dict[str, list[float | None]]:
+    quantities = dict.fromkeys(key for output in given.values() for key in output["budget"])
+    shares = {q: [output["budget"].get(q) for output in given.values()] for q in quantities}
+    return {label(q): values for q, values in shares.items() if q not in _SILENT or any(values)}
+
+
+def _sentences(posterior: Posterior, answer: dict, given: dict, row: int, use_option: str) -> list[str]:
+    lines = [
+        f"Convention: {answer['convention']['energy']}; {answer['convention']['time']}.",
+        f"Structure: prior {answer['prior']}. {posterior.prior_summary}",
+        f"Engine: {answer['engine']} ({answer['engine_reason']}).",
+        _first_order(given),
+    ]
+    if answer["consistency"]:
+        c = answer["consistency"]
+        lines.append(
+            f"Consistency of the redundant measurements: chi-squared {number(c['chi2'])} with "
+            f"{c['degrees_of_freedom']} degrees of freedom, probability {c['probability']:.3g}."
+        )
+    aside = posterior.aside_sets[posterior.aside[row]]
+    if aside:
+        names = ", ".join(map(label, aside))
+        if posterior.use:
+            lines.append(f"Not named in use, and so not used: {names}.")
+        else:
+            lines.append(f"Left aside as redundant: {names} ({use_option} names independent measurements).")
+    return lines
+
+
+def _first_order(given: dict) -> str:
+    linear = []
+    for name, output in given.items():
+        value, uncertainty = output["linear"]["value"], output["linear"]["standard_uncertainty"]
+        if value is not None:
+            power = power_of_ten(value)
+            text = f"{number(value, power)} ± {number(uncertainty, power, 3)}"
+            unit = with_power(output["unit"], power)
+            linear.append(f"{label(name)} {text if not power else f'({text})'} {unit}".rstrip())
+    if not linear:
+        return "First-order propagation has no derivative of this structure model here."
+    return f"First-order propagation would give: {'; '.join(linear)}."
