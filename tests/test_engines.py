@@ -23,9 +23,18 @@ def problem_of(stars=STARS, prior="uniform-index", **options):
     return assemble(stars, OUTPUTS, Conventions(), load_prior(prior), **options).problems[0]
 
 
+# chains of these tests are short: they are about the vocabulary, not about digits
+SHORT = {"mcmc": {"walkers": 24, "block": 200, "times": 20.0}}
+
+
 @pytest.fixture(params=ENGINES)
 def engine(request):
-    return ENGINES[request.param]()
+    return ENGINES[request.param](**SHORT.get(request.param, {}))
+
+
+def problem_for(engine):
+    """Five stars; two for the slowest engine."""
+    return problem_of().take(np.arange(2)) if engine.name == "mcmc" else problem_of()
 
 
 def test_the_table_names_every_engine_by_its_own_name():
@@ -36,22 +45,23 @@ def test_the_table_names_every_engine_by_its_own_name():
 def test_an_engine_says_which_stars_it_accepts_and_why_not(engine):
     assert isinstance(engine, Engine)
     assert engine.reasons[0] == ""
-    verdict = engine.accepts(problem_of())
-    assert verdict.shape == (5,)
+    problem = problem_for(engine)
+    verdict = engine.accepts(problem)
+    assert verdict.shape == (len(problem),)
     assert (verdict == 0).all()
     assert all(len(reason) > 20 for reason in engine.reasons[1:])
     assert "When it is wrong" in __import__(type(engine).__module__, fromlist=["x"]).__doc__
 
 
 def test_an_answer_has_the_one_vocabulary(engine):
-    problem = problem_of()
+    problem = problem_for(engine)
     answer = engine.solve(problem)
     assert isinstance(answer, Answer)
     assert answer.problem is problem
-    shape = (5, len(problem.outputs))
+    shape = (len(problem), len(problem.outputs))
     for name in ("log_mean", "log_sd", "numerical_error"):
         assert getattr(answer, name).shape == shape, name
-    assert answer.status.shape == (5,)
+    assert answer.status.shape == (len(problem),)
     assert (answer.status == Status.OK).all()
     quantiles = answer.quantile(PROBABILITIES)
     assert quantiles.shape == (*shape, len(PROBABILITIES))
@@ -64,21 +74,23 @@ def test_an_answer_has_the_one_vocabulary(engine):
 
 
 def test_a_row_alone_has_the_same_bits_as_in_a_catalogue(engine):
-    problem = problem_of()
+    problem = problem_for(engine)
     together = engine.solve(problem)
     quantiles = together.quantile(PROBABILITIES)
-    for row in range(5):
+    for row in range(len(problem)):
         alone = engine.solve(problem.take(np.array([row])))
         np.testing.assert_array_equal(alone.quantile(PROBABILITIES)[0], quantiles[row])
         np.testing.assert_array_equal(alone.log_mean[0], together.log_mean[row])
         np.testing.assert_array_equal(alone.log_sd[0], together.log_sd[row])
-    backwards = engine.solve(problem.take(np.arange(5)[::-1]))
-    np.testing.assert_array_equal(backwards.quantile(PROBABILITIES)[::-1], quantiles)
+        np.testing.assert_array_equal(together.take(np.array([row])).quantile(PROBABILITIES)[0], quantiles[row])
+    if engine.name != "mcmc":  # star after star: an order of stars is nothing new
+        backwards = engine.solve(problem.take(np.arange(len(problem))[::-1]))
+        np.testing.assert_array_equal(backwards.quantile(PROBABILITIES)[::-1], quantiles)
 
 
 def test_every_engine_tells_about_the_same_story(engine):
     """Medians of the engines lie within a tenth of a standard deviation of quadrature's (0.35 for first order)."""
-    problem = problem_of()
+    problem = problem_for(engine)
     reference = ENGINES["quadrature"]().solve(problem)
     distance = np.abs(engine.solve(problem).quantile([0.5]) - reference.quantile([0.5]))[..., 0]
     assert (distance < (0.35 if engine.name == "linear" else 0.1) * reference.log_sd).all()

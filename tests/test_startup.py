@@ -61,7 +61,9 @@ def loaded(modules, names):
 
 
 @pytest.mark.parametrize(
-    "arguments", [["--help"], ["star", "--help"], ["catalogue", "--help"], ["--version"]], ids=" ".join
+    "arguments",
+    [["--help"], ["star", "--help"], ["catalogue", "--help"], ["priors", "show", "--help"], ["--version"]],
+    ids=" ".join,
 )
 def test_help_loads_no_heavy_library(arguments):
     text, (code, modules) = modules_after(RUN, *arguments)

@@ -16,6 +16,11 @@ from stellerg.status import FLAG_TEXT, Flag
 __all__ = ["write_record"]
 
 
+def _engine(engine) -> str | dict:
+    """An engine by name, or with its options."""
+    return engine if isinstance(engine, str) else {"name": engine.name, **asdict(engine)}
+
+
 def write_record(folder: Path, plan: Run, source: Source, columns: Columns, propagation, tally: Tally) -> None:
     """`run.json`: all that made the numbers, and what became of the rows."""
     prior = propagation["prior"]
@@ -24,7 +29,7 @@ def write_record(folder: Path, plan: Run, source: Source, columns: Columns, prop
         "input": {"file": source.path.name, "sha256": source.sha256(), "rows": tally.rows},
         "options": {
             "format": plan.output_format,
-            "engine": str(propagation["engine"]),
+            "engine": _engine(propagation["engine"]),
             "seed": propagation["seed"],
             "outputs": list(propagation["outputs"]),
             "use": list(propagation["use"] or ()),

@@ -1,8 +1,8 @@
 """The command line: one file a command. Commands parse, call and print; they compute nothing.
 
 At start-up only typer is imported, so that help comes at once; a command imports what it needs when it runs.
-Exit codes: 0 with an answer (a catalogue: every row accounted for), 2 for a wrong call, 3 when the star
-cannot be done.
+Exit codes: 0 with an answer (a catalogue: every row accounted for), 1 when a published number is not found
+again (`verify`), 2 for a wrong call or a faulty structure file, 3 when the star cannot be done.
 """
 
 import sys
@@ -11,7 +11,9 @@ import typer
 
 from stellerg.cli.catalogue import catalogue
 from stellerg.cli.options import with_options
+from stellerg.cli.priors import priors
 from stellerg.cli.star import star
+from stellerg.cli.verify import verify
 from stellerg.errors import StellergError
 
 __all__ = ["app", "main"]
@@ -25,6 +27,8 @@ app = typer.Typer(
 )
 app.command("star", no_args_is_help=True)(with_options(star, observables=True))
 app.command("catalogue", no_args_is_help=True)(with_options(catalogue, observables=False))
+app.command("verify")(verify)
+app.add_typer(priors, name="priors")
 
 
 def _show_version(asked: bool) -> None:

@@ -48,9 +48,39 @@ _SHARED: list[tuple[str, object, object]] = [
     (
         "engine",
         str,
-        typer.Option("auto", help="auto, quadrature, montecarlo or linear.", rich_help_panel=_MODEL),
+        typer.Option("auto", help="auto, quadrature, montecarlo, mcmc or linear.", rich_help_panel=_MODEL),
     ),
     ("seed", int, typer.Option(0, help="Seed of engines that draw.", rich_help_panel=_MODEL)),
+    (
+        "digits",
+        int,
+        typer.Option(
+            0,
+            help="montecarlo: draw until the numbers stand to so many digits of their standard deviation (1 or 2).",
+            show_default=False,
+            rich_help_panel=_MODEL,
+        ),
+    ),
+    (
+        "workers",
+        int,
+        typer.Option(0, help="mcmc: processes.", show_default=False, rich_help_panel=_MODEL),
+    ),
+    (
+        "most_steps",
+        int,
+        typer.Option(0, help="mcmc: cap on the steps of a chain.", show_default=False, rich_help_panel=_MODEL),
+    ),
+    (
+        "checkpoint",
+        str,
+        typer.Option(
+            "",
+            help="mcmc: folder in which chains are kept as they grow; the same call goes on from there.",
+            show_default=False,
+            rich_help_panel=_MODEL,
+        ),
+    ),
     (
         "outputs",
         str,
@@ -135,6 +165,10 @@ class Settings:
     prior: str
     engine: str
     seed: int
+    digits: int
+    workers: int
+    most_steps: int
+    checkpoint: str
     outputs: str
     time_convention: str
     adiabatic_index: str
@@ -155,7 +189,7 @@ class Settings:
         return {
             "outputs": _names(self.outputs),
             "prior": self.prior,
-            "engine": self.engine,
+            "engine": self._engine(),
             "seed": self.seed,
             "use": _names(self.use) or None,
             "conventions": Conventions(
@@ -166,6 +200,24 @@ class Settings:
                 nuclear_efficiency=self.nuclear_efficiency,
             ),
         }
+
+    def _engine(self):
+        """The engine's name, or the engine itself where options of its own were given."""
+        names = ("digits", "workers", "most_steps", "checkpoint")
+        given = {name: getattr(self, name) for name in names if getattr(self, name)}
+        if not given:
+            return self.engine
+        from dataclasses import fields
+
+        from stellerg.engines import ENGINES
+
+        if self.engine not in ENGINES:
+            raise InputError(f"--{_dashed(next(iter(given)))}: belongs to one engine; name it with --engine")
+        known = {f.name for f in fields(ENGINES[self.engine])}
+        for name in given:
+            if name not in known:
+                raise InputError(f"--{_dashed(name)}: the engine {self.engine} has no such option")
+        return ENGINES[self.engine](**given, **({"seed": self.seed} if "seed" in known else {}))
 
     def solar(self):
         """Return the solar references of the scaling relations."""
@@ -191,6 +243,10 @@ class Settings:
             except ValueError:
                 raise InputError(f"--correlation: {value!r} in {text!r} is not a number") from None
         return found
+
+
+def _dashed(name: str) -> str:
+    return name.replace("_", "-")
 
 
 def _names(text: str) -> tuple[str, ...]:

@@ -3,11 +3,12 @@
 All of it takes a function that draws a block, so that the examples of clause 9 of the standard go through the
 code that stars use. Statistics of blocks are kept, draws are not: memory does not grow with the number of blocks.
 
-When it is wrong: the rule estimates a standard error from as few as two blocks and stops too early now and then;
-`fewest_blocks` guards against that. Interval ends are averages over blocks, where clause 7.9.4 l) sorts all draws
-once more. For central intervals the two differ by a part of the order of 1/(draws of a block). A shortest
-interval chooses among noisy widths and comes out too short, by a part of the order of (draws of a block)^(-2/3):
-normal draws in blocks of 2,000 lose more than they do in blocks of 100,000 (a test shows it); take large blocks.
+When it is wrong: the rule estimates a standard error from as few as two blocks and stops too early now and then: of
+1,000 rows of normal draws (two digits, blocks of 10,000) 14 % had an interval end beyond the tolerance, with
+`fewest_blocks` of 10 0.3 %. Interval ends are averages over blocks, where clause 7.9.4 l) sorts all draws once more.
+For central intervals the two differ by a part of the order of 1/(draws of a block). A shortest interval chooses among
+noisy widths and comes out too short, by a part of the order of (draws of a block)^(-2/3): for normal draws 0.6 % in
+blocks of 2,000 and 0.05 % in blocks of 100,000 (a test shows the trend); take large blocks.
 
 References
 ----------
@@ -70,9 +71,8 @@ def numerical_tolerance(standard_uncertainty: ArrayLike, digits: int) -> np.ndar
     known = (u > _TEN[_MOST_DIGITS + 1]) & (u < _TEN[-_MOST_DIGITS])
     safe = np.where(known, u, 1.0)
     place = np.floor(np.log10(safe)).astype(int) - digits + 1 - _POWERS.start
-    integer = np.rint(safe / _TEN[place])
-    place = place - (integer < 10.0 ** (digits - 1))  # a logarithm rounded up
-    place = place + (np.rint(safe / _TEN[place]) >= 10.0**digits)  # the carry
+    # the carry; where a logarithm was rounded up to a whole number, so is the number itself
+    place = place + (np.rint(safe / _TEN[place]) >= 10.0**digits)
     return np.where(known, _HALF[place], np.where((u >= 0.0) & (u < 1.0), 0.0, np.nan))
 
 
@@ -313,7 +313,7 @@ def _block(values: np.ndarray, rows: np.ndarray, size: int | None, p: np.ndarray
     if values.shape[-1] < _least_draws(p):
         raise EngineError(
             f"block of draws: {values.shape[-1]} are too few for an interval of probability {float(p.max())}; "
-            f"at least {_least_draws(p)} are needed (JCGM 101, 7.9.4), {standard_block_size(p)} is the standard's choice"
+            f"at least {_least_draws(p)} are needed (JCGM 101, 7.9.4), {standard_block_size(p)} are usual"
         )
     return values
 

@@ -166,7 +166,7 @@ def _reasons(steps: int, tau: float, times: float, rhat: np.ndarray, effective: 
     found = []
     if not steps >= times * tau:
         found.append(
-            f"{steps} steps are {steps / tau:.1f} autocorrelation times ({tau:.1f} steps each), {times:g} wanted"
+            f"{steps} steps are {steps / tau:.1f} autocorrelation times of {tau:.1f} steps, {times:g} wanted"
         )
     if not np.all(rhat <= _LARGEST_RHAT):
         found.append(f"the ensembles disagree: nested R-hat {np.max(rhat):.3f}, at most {_LARGEST_RHAT} wanted")

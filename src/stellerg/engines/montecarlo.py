@@ -1,6 +1,7 @@
 """Monte Carlo: draws through the model (JCGM 101:2008, clause 7), of every shape, correlation and redundancy.
 
-Low-discrepancy by default, with a standard error from independent randomisations.
+Low-discrepancy by default, with a standard error from independent randomisations; with `digits`, blocks of draws are
+added until mean, standard deviation and quantiles of log10 Y stand (JCGM 101, clause 7.9).
 
 When it is wrong: never by more than its stated error, but it is slow; and the weights of an over-determined
 star whose measurements contradict each other strongly leave few effective draws (``mass = 1.0 ± 0.01`` and
@@ -8,11 +9,13 @@ star whose measurements contradict each other strongly leave few effective draws
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from functools import partial
 from typing import ClassVar
 
 import numpy as np
 
+from stellerg.engines.adaptive import numerical_tolerance, run_blocks
 from stellerg.engines.sampling import Draws, Plan, sample
 from stellerg.problem import Problem
 from stellerg.status import Status
@@ -20,6 +23,8 @@ from stellerg.status import Status
 __all__ = ["MonteCarlo", "MonteCarloAnswer"]
 
 _STANDARD = (0.5, 0.15865525393145707, 0.8413447460685429, 0.02275013194817921, 0.9772498680518208)
+_INTERVALS = (0.0, 0.6826894921370859, 0.9544997361036416)  # the median, one and two standard deviations
+_LN10 = float(np.log(10.0))
 _VALUES = 2**22  # doubles in one array of draws: bounds memory, changes no bit
 _LEAST_EFFECTIVE = 100.0  # judgement: below, an interval of 95 % rests on two draws in each tail
 _BANDWIDTH = 0.15  # half width of the density's window in standard deviations (bias 0.4 % at a normal peak)
@@ -37,17 +42,26 @@ class MonteCarlo:
     kind : str
         low-discrepancy or plain.
     randomisations : int
+    digits : int or None
+        Significant digits of the standard deviation of log10 Y that all reported numbers must be good to; None:
+        one block of draws.
+    most_blocks : int
+        Cap on the blocks; a star that needs more is `not-converged`.
     """
 
     draws: int = 2**14
     seed: int = 0
     kind: str = "low-discrepancy"
     randomisations: int = 32
+    digits: int | None = None
+    most_blocks: int = 200
     name: ClassVar[str] = "montecarlo"
     reasons: ClassVar[tuple[str, ...]] = ("",)
 
     def __post_init__(self):
         self.plan  # noqa: B018 - its own checks are this engine's
+        if self.digits is not None:
+            numerical_tolerance(1.0, self.digits)
 
     @property
     def plan(self) -> Plan:
@@ -60,26 +74,63 @@ class MonteCarlo:
 
     def solve(self, problem: Problem) -> "MonteCarloAnswer":
         """Answer a problem."""
-        return MonteCarloAnswer(problem, self.plan)
+        if self.digits is None:
+            return MonteCarloAnswer(problem, self.plan, np.ones(len(problem), int), np.ones(len(problem), bool))
+        blocks, standing = np.ones(len(problem), int), np.ones(len(problem), bool)
+        for rows in _chunks(np.arange(len(problem)), problem, self.draws):
+            found = run_blocks(
+                partial(_draw_block, problem.take(rows), self.plan),
+                len(rows),
+                digits=self.digits,
+                probability=_INTERVALS,
+                most_blocks=self.most_blocks,
+            )
+            blocks[rows], standing[rows] = found.blocks, found.converged
+        return MonteCarloAnswer(problem, self.plan, blocks, standing)
+
+
+def _draw_block(problem: Problem, plan: Plan, number: int, rows: np.ndarray) -> np.ndarray:
+    """log10 Y of one block of draws of some stars, (row, output, draw)."""
+    return sample(problem.take(rows), replace(plan, first_block=number)).equally_weighted() / _LN10
+
+
+def _chunks(rows: np.ndarray, problem: Problem, draws: int):
+    """Split rows so that one array of draws fits the memory; no result depends on it."""
+    size = max(1, _VALUES // (draws * (len(problem.inputs) + len(problem.outputs) + 2)))
+    for start in range(0, len(rows), size):
+        yield rows[start : start + size]
 
 
 @dataclass(frozen=True)
 class MonteCarloAnswer:
-    """Distributions by draws, made anew (the same bits) whenever asked for. See `answer.Answer`."""
+    """Distributions by draws, made anew (the same bits) whenever asked for. See `answer.Answer`.
+
+    Attributes
+    ----------
+    problem : Problem
+    plan : Plan
+    blocks : ndarray of int, (star,)
+        Blocks of draws of each star.
+    standing : ndarray of bool, (star,)
+        Whether its numbers stand to the digits asked for.
+    """
 
     problem: Problem
     plan: Plan
+    blocks: np.ndarray
+    standing: np.ndarray
     _cache: dict = field(default_factory=dict, repr=False, compare=False)
 
     def draws(self):
-        """Yield (slice, Draws) in pieces that fit the memory."""
-        size = max(1, _VALUES // (self.plan.draws * (len(self.problem.inputs) + len(self.problem.outputs) + 2)))
-        for chunk, piece in self.problem.split(size):
-            yield chunk, sample(piece, self.plan)
+        """Yield (rows, Draws) in pieces that fit the memory; the stars of a piece have as many blocks."""
+        for count in np.unique(self.blocks):
+            rows = np.flatnonzero(self.blocks == count)
+            for some in _chunks(rows, self.problem, self.plan.draws * int(count)):
+                yield some, sample(self.problem.take(some), replace(self.plan, blocks=int(count)))
 
     def take(self, which: np.ndarray) -> "MonteCarloAnswer":
         """Return some of the stars."""
-        return MonteCarloAnswer(self.problem.take(which), self.plan)
+        return MonteCarloAnswer(self.problem.take(which), self.plan, self.blocks[which], self.standing[which])
 
     def failure(self, star: int) -> str:
         """Why a star is not converged."""
@@ -89,6 +140,11 @@ class MonteCarloAnswer:
                 "no value satisfies all measurements within the ends of their distributions; check them, or name the "
                 "independent ones with use"
             )
+        if not self.standing[star]:
+            return (
+                f"after {self.blocks[star]} blocks of {self.plan.draws} draws the numbers do not stand to the digits "
+                "asked for; ask for fewer digits, or more blocks"
+            )
         return (
             f"{effective:.0f} effective draws are left, {_LEAST_EFFECTIVE:.0f} are needed: the measurements hardly "
             "agree; check them, name the independent ones with use, or draw more"
@@ -96,10 +152,10 @@ class MonteCarloAnswer:
 
     @property
     def status(self) -> np.ndarray:
-        """NOT_CONVERGED where too few effective draws are left, (star,)."""
+        """NOT_CONVERGED where too few effective draws are left, or the numbers do not stand, (star,)."""
         few = ~(self.diagnostics["effective_draws"] >= _LEAST_EFFECTIVE)
         few &= self.plan.draws >= _LEAST_EFFECTIVE
-        return np.where(few, Status.NOT_CONVERGED, Status.OK).astype(np.uint8)
+        return np.where(few | ~self.standing, Status.NOT_CONVERGED, Status.OK).astype(np.uint8)
 
     @property
     def log_mean(self) -> np.ndarray:
@@ -118,8 +174,11 @@ class MonteCarloAnswer:
 
     @property
     def diagnostics(self) -> Mapping[str, np.ndarray]:
-        """Effective number of draws, (star,)."""
-        return {"effective_draws": self._summary(_STANDARD)["effective"]}
+        """Number of draws and effective number of draws, (star,)."""
+        return {
+            "draws": (self.blocks * self.plan.draws).astype(float),
+            "effective_draws": self._summary(_STANDARD)["effective"],
+        }
 
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """ln Y at cumulative probabilities p (m,): (star, output, m)."""
@@ -201,15 +260,15 @@ def _error(draws: Draws, quantile, p, plan: Plan):
     if plan.kind == "plain" or plan.randomisations < 2:
         worst = np.sqrt(np.max(p * (1.0 - p)) / np.maximum(draws.effective, 1.0))
         return np.broadcast_to(worst[:, None], values.shape[:2])
-    shape = (*values.shape[:2], plan.randomisations, -1)
-    blocks = values.reshape(shape)
+    randomisations = plan.randomisations * (values.shape[-1] // plan.draws)
+    blocks = values.reshape((*values.shape[:2], randomisations, -1))
     worst = np.zeros(values.shape[:2])
     for m in range(len(p)):
         below = blocks <= quantile[..., m, None, None]
         if weight is None:
             share = below.mean(axis=-1)
         else:
-            block = weight.reshape(len(weight), 1, plan.randomisations, -1)
+            block = weight.reshape(len(weight), 1, randomisations, -1)
             share = (below * block).sum(axis=-1) / np.maximum(block.sum(axis=-1), 1e-300)
-        worst = np.maximum(worst, share.std(axis=-1, ddof=1) / np.sqrt(plan.randomisations))
+        worst = np.maximum(worst, share.std(axis=-1, ddof=1) / np.sqrt(randomisations))
     return worst

@@ -19,6 +19,7 @@ from stellerg.problem import Problem
 
 __all__ = ["Draws", "Plan", "sample"]
 
+_BLOCK_DIMENSIONS = 64  # dimensions set apart for each block of a star; no problem has as many
 _FREEDOM = 4.0  # a chi-squared of 4 degrees of freedom is -2 ln of a product of two uniforms
 
 
@@ -29,7 +30,7 @@ class Plan:
     Attributes
     ----------
     draws : int
-        Number of draws of each star.
+        Number of draws of each star in a block.
     seed : int
     kind : str
         ``low-discrepancy`` (scrambled Sobol' points, Owen 1998, with digital shifts keyed by star) or ``plain``.
@@ -37,6 +38,8 @@ class Plan:
         Independent randomisations of the low-discrepancy points, from which standard errors are taken.
     shuffled : bool
         Put each star's draws into an order of its own, so that the n-th draws of two stars are independent.
+    blocks, first_block : int
+        How many independent blocks, and the number of the first.
     """
 
     draws: int
@@ -44,6 +47,8 @@ class Plan:
     kind: str = "low-discrepancy"
     randomisations: int = 32
     shuffled: bool = False
+    blocks: int = 1
+    first_block: int = 0
 
     def __post_init__(self):
         if self.kind not in ("plain", "low-discrepancy"):
@@ -120,6 +125,20 @@ class Draws:
         weight = np.exp(self.log_weight - self.log_weight.max(axis=1, keepdims=True))
         return weight / weight.sum(axis=1, keepdims=True)
 
+    def equally_weighted(self) -> np.ndarray:
+        """ln Y of draws that all count the same, (star, output, draw): weighted ones are resampled systematically."""
+        weight = self.weight
+        if weight is None:
+            return self.log_outputs
+        count = self.u.shape[1]
+        running = np.cumsum(weight, axis=1)
+        places = (np.arange(count) + 0.5) / count
+        # the number of draws whose running weight lies below each place, star by star in one sorted merge
+        order = np.argsort(np.concatenate([running, np.tile(places, (len(weight), 1))], axis=1), axis=1, kind="stable")
+        is_draw = order < count
+        chosen = np.minimum(np.cumsum(is_draw, axis=1)[~is_draw].reshape(len(weight), count), count - 1)
+        return np.take_along_axis(self.log_outputs, chosen[:, None, :], axis=2)
+
     @property
     def effective(self) -> np.ndarray:
         """Effective number of draws, (sum w)^2/sum w^2 (Kish 1965), (star,)."""
@@ -158,7 +177,7 @@ def sample(problem: Problem, plan: Plan) -> Draws:
         theta, log_weight, converged = _weighted(problem, u[:-1])
         log_inputs = problem.base[:, :, None] + np.einsum("jr,sdr->sjd", problem.design, theta)
         return Draws(problem, log_inputs, u[-1], log_weight, theta, converged)
-    score = ndtri(np.stack(u[:-1], axis=1)) if problem.inputs else np.zeros((len(problem), 0, plan.draws))
+    score = ndtri(np.stack(u[:-1], axis=1)) if problem.inputs else np.zeros((len(problem), 0, u[-1].shape[1]))
     if problem.correlation is not None:
         # a square root that also serves singular matrices
         values, vectors = np.linalg.eigh(problem.correlation)
@@ -171,17 +190,27 @@ def sample(problem: Problem, plan: Plan) -> Draws:
 
 
 def _uniforms(key, plan: Plan, dimensions: int) -> list[np.ndarray]:
-    """Uniform variates of each dimension, (star, draw) each; the last one is that of structure."""
+    """Uniform variates of each dimension, (star, draw) each, block after block; the last is that of structure."""
+    blocks = [
+        _block_of_uniforms(key, plan, dimensions, number * _BLOCK_DIMENSIONS)
+        for number in range(plan.first_block, plan.first_block + plan.blocks)
+    ]
+    if len(blocks) == 1:
+        return blocks[0]
+    return [np.concatenate([block[d] for block in blocks], axis=1) for d in range(dimensions)]
+
+
+def _block_of_uniforms(key, plan: Plan, dimensions: int, offset: int) -> list[np.ndarray]:
     if plan.kind == "plain":
-        return [keyed_random.uniform(plan.seed, key, d, plan.draws) for d in range(dimensions)]
+        return [keyed_random.uniform(plan.seed, key, offset + d, plan.draws) for d in range(dimensions)]
     each = plan.draws // plan.randomisations
     points = keyed_random.low_discrepancy_set(plan.seed, dimensions, each.bit_length() - 1)
     uniforms = []
     for d in range(dimensions):
-        shift = keyed_random.words(plan.seed, key, d, plan.randomisations)
+        shift = keyed_random.words(plan.seed, key, offset + d, plan.randomisations)
         uniforms.append(keyed_random.shifted(points[d], shift).reshape(len(key), plan.draws))
     if plan.shuffled:
-        order = keyed_random.random_order(plan.seed, key, dimensions, plan.draws)
+        order = keyed_random.random_order(plan.seed, key, offset + dimensions, plan.draws)
         uniforms = [np.take_along_axis(u, order, axis=1) for u in uniforms]
     return uniforms
 

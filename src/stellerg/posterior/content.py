@@ -58,8 +58,8 @@ def number(value: float, power: int = 0, digits: int = 4) -> str:
     scaled = value / 10.0**power
     if scaled == 0.0:
         return "0"
-    decimals = max(digits - 1 - math.floor(math.log10(abs(scaled))), 0)
-    return f"{scaled:.{decimals}f}"
+    exponent = int(f"{scaled:.{digits - 1}e}".partition("e")[2])  # after rounding: 9.9996 has that of 10.00
+    return f"{scaled:.{max(digits - 1 - exponent, 0)}f}"
 
 
 def power_of_ten(value: float) -> int:
@@ -139,13 +139,14 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int, use_op
         f"Convention: {answer['convention']['energy']}; {answer['convention']['time']}.",
         f"Structure: prior {answer['prior']}. {posterior.prior_summary}",
         f"Engine: {answer['engine']} ({answer['engine_reason']}).",
+        *_judgement(posterior.diagnostics(row)),
         _first_order(given),
     ]
     if answer["consistency"]:
         c = answer["consistency"]
         lines.append(
             f"Consistency of the redundant measurements: chi-squared {number(c['chi2'])} with "
-            f"{c['degrees_of_freedom']} degrees of freedom, probability {c['probability']:.3g}."
+            f"{counted(c['degrees_of_freedom'], 'degree')} of freedom, probability {c['probability']:.3g}."
         )
     aside = posterior.aside_sets[posterior.aside[row]]
     if aside:
@@ -155,6 +156,21 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int, use_op
         else:
             lines.append(f"Left aside as redundant: {names} ({use_option} names independent measurements).")
     return lines
+
+
+def _judgement(numbers: dict[str, float]) -> list[str]:
+    """What an engine that draws says of its own work."""
+    if "nested_rhat" in numbers:
+        tau = numbers["autocorrelation_time"]
+        return [
+            f"Chains: {numbers['steps']:.0f} steps are {numbers['steps'] / tau:.0f} autocorrelation times of {tau:.1f} "
+            f"steps; nested R-hat {numbers['nested_rhat']:.4f}; each quantile rests on {numbers['effective_draws']:,.0f} "
+            f"effective draws or more, its standard error in the logarithm is {numbers['largest_quantile_error']:.2g} "
+            "or less."
+        ]
+    if "draws" in numbers:
+        return [f"Draws: {numbers['draws']:,.0f}, worth {numbers['effective_draws']:,.0f} independent ones."]
+    return []
 
 
 def _first_order(given: dict) -> str:

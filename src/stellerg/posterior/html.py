@@ -19,7 +19,7 @@ from stellerg.posterior.content import (
     star_content,
     with_power,
 )
-from stellerg.posterior.result import INTERVAL68, Posterior
+from stellerg.posterior.result import STANDARD_PROBABILITIES, Posterior
 from stellerg.status import FLAG_TEXT, STATUS_TEXT, Status, flag_words, status_word
 from stellerg.wording import counted, label
 
@@ -35,8 +35,9 @@ _USE_OPTION = "the argument use of propagate"
 # Notebooks bring rules of their own for tables; these are as specific and come later, so they hold. Middle tones
 # (contrast above 3 on white and on black) and the page's own ink serve light and dark.
 _STYLE = """
-.stellerg-answer { font-size: 13px; line-height: 1.45; max-width: 64em; overflow-x: auto; }
-.stellerg-answer p { margin: 0.2em 0; }
+.stellerg-answer { font-size: 13px; line-height: 1.45; overflow-x: auto; }
+.stellerg-answer p { margin: 0.2em 0; max-width: 64em; }
+.stellerg-answer sup { font-size: 75%; line-height: 0; }
 .stellerg-answer .stellerg-title { font-size: 1.1em; }
 .stellerg-answer .stellerg-good { color: #2f8f5b; font-weight: bold; }
 .stellerg-answer .stellerg-fair { color: #b3791c; font-weight: bold; }
@@ -46,20 +47,20 @@ _STYLE = """
   padding: 0 0 0.2em 0; white-space: nowrap; }
 .stellerg-answer .stellerg-table thead tr, .stellerg-answer .stellerg-table tbody tr { background: transparent; }
 .stellerg-answer .stellerg-table thead tr th, .stellerg-answer .stellerg-table tbody tr th,
-.stellerg-answer .stellerg-table tbody tr td { border: 0; padding: 0.15em 1.4em 0.15em 0; text-align: left;
+.stellerg-answer .stellerg-table tbody tr td { border: 0; padding: 0.15em 1.1em 0.15em 0; text-align: left;
   vertical-align: top; font-weight: normal; max-width: none; white-space: nowrap; }
-.stellerg-answer .stellerg-table thead tr th { border-bottom: 1px solid rgba(128, 128, 128, 0.6); }
+.stellerg-answer .stellerg-table thead tr:last-child th { border-bottom: 1px solid rgba(128, 128, 128, 0.6); }
 .stellerg-answer .stellerg-table tbody tr + tr > * { border-top: 1px solid rgba(128, 128, 128, 0.2); }
 .stellerg-answer .stellerg-table thead tr .stellerg-number, .stellerg-answer .stellerg-table tbody tr .stellerg-number {
   text-align: right; font-variant-numeric: tabular-nums; }
-.stellerg-answer .stellerg-table tbody tr .stellerg-words { white-space: normal; min-width: 18em; }
-.stellerg-answer .stellerg-figure { display: inline-block; min-width: 4.2em; text-align: right;
+.stellerg-answer .stellerg-figure { display: inline-block; min-width: 4.8em; text-align: right;
   font-variant-numeric: tabular-nums; }
 .stellerg-answer .stellerg-track { display: inline-block; width: 11em; height: 0.75em; margin-left: 0.6em; }
 .stellerg-answer .stellerg-bar { display: block; box-sizing: border-box; height: 100%; background: #5f8fa8; }
 .stellerg-answer .stellerg-structure { background: #a8823f; }
 .stellerg-answer .stellerg-negative { background: transparent; border: 1px solid currentColor; }
 """.strip()
+_SHARE = "Under structure: its share in the variance of the logarithm."
 _NEGATIVE = "A hollow bar is a negative share: it makes the variance smaller."
 
 
@@ -103,7 +104,7 @@ def posterior_html(posterior: Posterior) -> str:
     many = len(posterior)
     parts = [f'<p class="stellerg-title"><strong>{counted(many, "star")}</strong>{_counts(posterior)}</p>']
     if 0 < many <= TABLE_LIMIT:
-        parts.append(_summary(posterior))
+        parts += _summary(posterior)
         if many > ROWS:
             left = counted(many - ROWS, "more star")
             parts.append(_paragraph(f"{left} not shown here; table() gives every row."))
@@ -140,9 +141,8 @@ def _status(word: str) -> str:
     return f'<span class="stellerg-{kind}">{escape(word)}</span>'
 
 
-def _cell(html: str, kind: str = "number", span: int = 1) -> str:
-    columns = f' colspan="{span}"' if span > 1 else ""
-    return f'<td class="stellerg-{kind}"{columns}>{html}</td>'
+def _cell(html: str, kind: str = "number") -> str:
+    return f'<td class="stellerg-{kind}">{html}</td>'
 
 
 def _heading(text: str, kind: str = "number", scope: str = "col", span: int = 1) -> str:
@@ -166,7 +166,11 @@ def _table(head: Sequence[Sequence[str]], rows: Iterable[Sequence[str]], caption
 def _values(content: StarContent) -> str:
     head = [_heading("", "name"), *map(_heading, ("median", "68.27 % interval", "95.45 % interval"))]
     rows = [
-        [_name(r.name), *(_cell(_words(x)) for x in (r.median, r.interval68, r.interval95)), _cell(_words(r.unit), "unit")]
+        [
+            _name(r.name),
+            *(_cell(_words(x)) for x in (r.median, r.interval68, r.interval95)),
+            _cell(_words(r.unit), "unit"),
+        ]
         for r in content.values
     ]
     return _table([[*head, _heading("unit", "unit")]], rows)
@@ -208,38 +212,38 @@ def _bar(share: float | None, full: float, quantity: str) -> str:
 def _counts(posterior: Posterior) -> str:
     """Stars by status, in the order of the table of statuses."""
     counts = np.bincount(posterior.status, minlength=len(Status))
-    listed = [f"{count:,} {_status(STATUS_TEXT[status].word)}" for status, count in zip(Status, counts, strict=True) if count]
+    listed = [
+        f"{count:,} {_status(STATUS_TEXT[status].word)}" for status, count in zip(Status, counts, strict=True) if count
+    ]
     return f": {', '.join(listed)}" if listed else ""
 
 
-def _summary(posterior: Posterior) -> str:
-    """Table of the first stars: each output's median, interval and share of structure."""
+def _summary(posterior: Posterior) -> list[str]:
+    """Table of the first stars (each output's median, interval and share of structure), and remarks on them."""
     shown = min(len(posterior), ROWS)
     first = [_heading("star", "name"), _heading("status", "name")]
     second = [_heading("", "name"), _heading("", "name")]
     columns = []
     for output in posterior.outputs:
-        values = posterior.quantile((0.5, *INTERVAL68), output)[:shown]
+        values = posterior.quantile(STANDARD_PROBABILITIES, output)[:shown, :3]  # median and 68.27 %
         share = posterior.budget(output).get("structure", np.full(len(posterior), np.nan))[:shown]
         power = _column_power(values[:, 0])
         unit = with_power(posterior.units[output], power or 0)
         first.append(_heading(label(output) + (f" ({unit})" if unit else ""), "share", "colgroup", 3))
-        second += [_heading(text) for text in ("median", "68.27 % interval", "structure's share")]
+        second += [_heading(text) for text in ("median", "68.27 % interval", "structure")]
         columns.append([_output(*row, power) for row in zip(values, share, strict=True)])
-    first.append(_heading("flags and remarks", "words"))
-    second.append(_heading("", "words"))
-    results, texts = posterior.has_results, posterior.status_text()
-    rows = []
-    for row in range(shown):
-        cells = [_name(str(posterior.star[row])), _cell(_status(status_word(posterior.status[row])), "status")]
-        if results[row]:
-            remarks = [*flag_words(int(posterior.flags[row])), texts[row]]
-            cells += [column[row] for column in columns]
-            cells.append(_cell("; ".join(escape(x) for x in remarks if x), "words"))
-        else:
-            cells.append(_cell(escape(texts[row]), "words", 3 * len(columns) + 1))
-        rows.append(cells)
-    return _table([first, second], rows)
+    first.append(_heading("flags", "name"))
+    second.append(_heading("", "name"))
+    columns = list(zip(*columns, strict=True)) or [()] * shown
+    rows, remarks = [], {}
+    for row, text in enumerate(posterior.status_text()[:shown]):
+        star, flags = str(posterior.star[row]), flag_words(int(posterior.flags[row]))
+        status = _cell(_status(status_word(posterior.status[row])), "status")
+        rows.append([_name(star), status, *columns[row], _cell("<br>".join(flags), "flags")])
+        if text:
+            remarks.setdefault(text, []).append(star)
+    sentences = [f"<p>{escape(', '.join(stars))}: {escape(text)}</p>" for text, stars in remarks.items()]
+    return [_table([first, second], rows), f"<p>{_SHARE}</p>", *sentences]
 
 
 def _column_power(medians: np.ndarray) -> int | None:
@@ -252,7 +256,7 @@ def _column_power(medians: np.ndarray) -> int | None:
 
 def _output(values: np.ndarray, share: float, power: int | None) -> str:
     """Return the three cells of one output; a dash where it is not given."""
-    if np.isnan(values).any():
+    if not np.isfinite(values).all():
         return _cell("\N{EN DASH}") * 2 + _cell("")
     own = power_of_ten(float(values[0])) if power is None else power
     median, lower, upper = (number(float(value), own) for value in values)

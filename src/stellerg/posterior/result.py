@@ -8,6 +8,7 @@ import numpy as np
 
 from stellerg.errors import InputError
 from stellerg.status import STATUS_TEXT, VALUE, Status, carries_results
+from stellerg.wording import counted
 
 __all__ = ["INTERVAL68", "INTERVAL95", "STANDARD_PROBABILITIES", "Piece", "Posterior", "StarDraws"]
 
@@ -124,6 +125,9 @@ class Posterior:
 
     def __len__(self) -> int:
         return len(self.star)
+
+    def __repr__(self) -> str:
+        return f"<Posterior of {counted(len(self), 'star')}: {', '.join(self.outputs)}>"
 
     @property
     def has_results(self) -> np.ndarray:
@@ -303,6 +307,12 @@ class Posterior:
         from stellerg.posterior.table import to_table
 
         return to_table(self)
+
+    def _repr_html_(self) -> str:
+        """What a notebook shows."""
+        from stellerg.posterior.html import posterior_html
+
+        return posterior_html(self)
 
     def _check_draws(self, count: int) -> None:
         if count < 1 or count & (count - 1):

@@ -16,6 +16,7 @@ from stellerg.structure.model import Component, Coordinate, Mixture
 __all__ = ["View"]
 
 _NEGLIGIBLE = 1e-9  # judgement: a family without sharp ends is taken to end where half of this lies beyond
+_TOUCHING = 1e-9  # ranges that touch are equal but for rounding
 _NODE, _WEIGHT = np.polynomial.legendre.leggauss(40)
 
 
@@ -46,7 +47,7 @@ class View:
         )
         found = [ends[0]]
         for lower, upper in ends[1:]:
-            if lower > found[-1][1]:
+            if lower > found[-1][1] + _TOUCHING:
                 found.append((lower, upper))
             else:
                 found[-1] = (found[-1][0], max(found[-1][1], upper))
@@ -93,7 +94,8 @@ class View:
                 continue
             if self.coordinate is Coordinate.COEFFICIENT and _reaches_five(part):
                 return math.inf
-            a, b = part.panels[:-1, None], part.panels[1:, None]
+            panels = _panels(part)
+            a, b = panels[:-1, None], panels[1:, None]
             q = 0.5 * (a + b) + 0.5 * (b - a) * _NODE
             mass = 0.5 * (b - a) * _WEIGHT * np.exp(part.log_density(q))
             with np.errstate(over="ignore"):
@@ -119,6 +121,12 @@ def _pieces(part: Component) -> list[tuple[float, float]]:
     points, heights = family.points, family.heights
     cells = zip(points, points[1:], heights, heights[1:], strict=False)
     return [(a, b) for a, b, left, right in cells if left > 0.0 or right > 0.0]
+
+
+def _panels(part: Component) -> np.ndarray:
+    """Panels to the end of the support: the mean of w = exp(q) weighs the upper tail more than the density does."""
+    end = part.coordinate.to_log_coefficient(part.family.support[1])
+    return np.unique(np.append(part.panels, end)) if np.isfinite(end) else part.panels
 
 
 def _reaches_five(part: Component) -> bool:
