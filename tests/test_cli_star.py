@@ -538,7 +538,7 @@ WRONG = {
     "correlation of one": ([*STAR, "--correlation", "mass=0.2"], ["'mass=0.2'", "mass,radius=0.6"]),
     "correlation of three": ([*STAR, "--correlation", "mass,radius,luminosity=0.2"], ["mass,radius=0.6"]),
     "correlation no number": ([*STAR, "--correlation", "mass,radius=much"], ["'much'", "not a number"]),
-    "unknown engine": ([*STAR, "--engine", "steam"], ["'steam'", "auto, quadrature, montecarlo, linear"]),
+    "unknown engine": ([*STAR, "--engine", "steam"], ["'steam'", "auto, quadrature, montecarlo, mcmc, linear"]),
     "unknown output": ([*STAR, "--outputs", "mass"], ["'mass'", "potential_energy", "nuclear_time"]),
     "an output twice": ([*STAR, "--outputs", "nuclear_time,nuclear_time"], ["twice"]),
     "no output": ([*STAR, "--outputs", ","], ["output: none was named"]),

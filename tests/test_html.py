@@ -321,23 +321,12 @@ def test_no_star_and_only_rows_without_results():
     assert "Cove 0, Cove 1: the star is stated evolved" in page.text
 
 
-def test_quantiles_of_a_large_catalogue_are_not_computed_to_show_it(monkeypatch):
+def test_only_the_stars_that_are_shown_are_computed():
     posterior = many(30)
-    monkeypatch.setattr(form, "TABLE_LIMIT", 29)
     page = Page(posterior_html(posterior))
-    assert page.tables == []
-    assert "30 stars: 30 ok Above 29 stars no row is shown here" in page.text
+    assert len(page.tables) == 1
+    assert "10 more stars not shown here" in page.text
     assert not posterior._cache
-    monkeypatch.setattr(form, "TABLE_LIMIT", 30)
-    assert len(Page(posterior_html(posterior)).tables) == 1
-    assert posterior._cache
-
-
-# --- the hook ---
-def test_notebooks_show_it():
-    assert one()._repr_html_() == star_html(one())
-    assert many(3)._repr_html_() == posterior_html(many(3))
-    assert repr(many(3)) == "<Posterior of 3 stars: binding_energy, kelvin_helmholtz_time>"
 
 
 def test_one_star_of_many_is_the_star_alone():

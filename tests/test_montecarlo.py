@@ -8,6 +8,7 @@ import pytest
 from cases import PROBABILITIES, random_star
 from stellerg import Conventions, Stars, load_prior, propagate
 from stellerg.assembly import assemble
+from stellerg.engines.adaptive import numerical_tolerance
 from stellerg.engines.least_squares import fit
 from stellerg.engines.montecarlo import MonteCarlo
 from stellerg.engines.quadrature import Quadrature
@@ -227,3 +228,54 @@ def test_wrong_plans_are_refused():
     for options in ({"draws": 1000}, {"draws": 0}, {"kind": "other"}, {"randomisations": 0}):
         with pytest.raises(EngineError):
             MonteCarlo(**options)
+
+
+@pytest.mark.parametrize("digits", [1, 2])
+def test_adaptive_draws_stand_to_the_digits_asked_for(digits):
+    """Mean, standard deviation and quantiles of log10 Y lie within the tolerance of JCGM 101, 7.9.2, of the exact."""
+    stars = Stars.of("a", mass=(1.0, 0.2), radius=(1.0, 0.1, 0.15), luminosity=(1.0, 0.1))
+    problem = problem_of(stars)
+    exact = Quadrature().solve(problem)
+    answer = MonteCarlo(digits=digits, seed=SEED).solve(problem)
+    assert answer.status[0] == 0
+    scale = 1.0 / np.log(10.0)
+    tolerance = numerical_tolerance(exact.log_sd * scale, digits)[0]
+    for found, true in (
+        (answer.log_mean, exact.log_mean),
+        (answer.log_sd, exact.log_sd),
+        *((answer.quantile([p])[..., 0], exact.quantile([p])[..., 0]) for p in PROBABILITIES),
+    ):
+        assert (np.abs(found - true)[0] * scale <= tolerance).all()
+    assert answer.diagnostics["draws"][0] >= 10 * 2**14
+
+
+def test_more_digits_take_more_draws_and_a_cap_is_not_converged():
+    stars = Stars.of("a", mass=(1.0, 0.2), radius=(1.0, 0.1), luminosity=(1.0, 0.1))
+    draws = [MonteCarlo(digits=d, kind="plain").solve(problem_of(stars)).diagnostics["draws"][0] for d in (1, 2)]
+    assert draws[1] > draws[0]
+    posterior = propagate(stars, engine=MonteCarlo(digits=3, kind="plain", most_blocks=3))
+    assert posterior.table()["status"][0] == "not-converged"
+    assert "after 3 blocks of 16384 draws" in posterior.status_text()[0]
+
+
+def test_adaptive_draws_of_a_star_do_not_depend_on_its_company():
+    given = {
+        "mass": ([1.0, 1.0], [0.2, 0.02]),
+        "radius": ([1.0, 1.0], [0.1, 0.1]),
+        "luminosity": ([1.0, 2.0], [0.1, 0.1]),
+    }
+    stars = Stars.of(["a", "b"], **given)
+    together = MonteCarlo(digits=2).solve(problem_of(stars))
+    for row in range(2):
+        alone = MonteCarlo(digits=2).solve(problem_of(stars.take(np.array([row]))))
+        np.testing.assert_array_equal(alone.quantile(PROBABILITIES)[0], together.quantile(PROBABILITIES)[row])
+        assert alone.blocks[0] == together.blocks[row]
+
+
+def test_weighted_draws_are_adapted_too():
+    stars = Stars.of("a", mass=(1.0, 0.2), log_mass=(0.0, 0.05), radius=(1.0, 0.1), luminosity=(1.0, 0.1))
+    problem = problem_of(stars, use=("mass", "log_mass", "radius", "luminosity"))
+    answer = MonteCarlo(digits=2, seed=SEED).solve(problem)
+    plain = MonteCarlo(draws=2**19, seed=SEED + 1).solve(problem)
+    tolerance = numerical_tolerance(plain.log_sd / np.log(10.0), 2)
+    assert (np.abs(answer.log_mean - plain.log_mean) / np.log(10.0) <= tolerance).all()

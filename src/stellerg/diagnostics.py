@@ -9,7 +9,7 @@ from collections.abc import Mapping
 
 import numpy as np
 
-__all__ = ["effective_draws", "nested_rhat", "quantile_error", "to_datatree"]
+__all__ = ["nested_rhat", "quantile_judgement", "share_error", "to_datatree"]
 
 
 def _stats():
@@ -36,18 +36,39 @@ def nested_rhat(values: np.ndarray) -> float:
     return float(_stats().rhat_nested(_chains(values), superchain_ids=ensembles))
 
 
-def effective_draws(values: np.ndarray, probability: float) -> float:
-    """Effective number of independent draws for a quantile of one quantity, (ensemble, walker, draw)."""
-    if np.ptp(values) == 0.0:
-        return float(values.size)
-    return float(_stats().ess(_chains(values), method="quantile", prob=probability))
+def share_error(below: np.ndarray) -> float:
+    """Monte Carlo standard error of the share of draws that fulfil something.
+
+    Walkers of one ensemble move by each other's differences, so that their shares go up and down together: taken as
+    independent chains they give errors that are too small (1.6 times, on forty stars). What is independent are the
+    ensembles; the series judged are their means over walkers (Goodman & Weare 2010, doi:10.2140/camcos.2010.5.65).
+
+    Parameters
+    ----------
+    below : ndarray of bool, (ensemble, walker, draw)
+    """
+    means = below.mean(axis=1)
+    return 0.0 if np.ptp(means) == 0.0 else float(_stats().mcse(means, method="mean"))
 
 
-def quantile_error(values: np.ndarray, probability: float) -> float:
-    """Monte Carlo standard error of a quantile of one quantity, (ensemble, walker, draw)."""
+def quantile_judgement(values: np.ndarray, probability: float) -> tuple[float, float]:
+    """Effective number of independent draws for a quantile of one quantity, and its standard error.
+
+    The effective number is p(1 - p) over the squared error of the share below the quantile; the standard error
+    spans the quantiles of p plus and minus that error.
+
+    Parameters
+    ----------
+    values : ndarray, (ensemble, walker, draw)
+    probability : float
+    """
     if np.ptp(values) == 0.0:
-        return 0.0
-    return float(_stats().mcse(_chains(values), method="quantile", prob=probability))
+        return float(values.size), 0.0
+    error = share_error(values <= np.quantile(values, probability))
+    if error == 0.0:
+        return float(values.size), 0.0
+    ends = np.quantile(values, np.clip([probability - error, probability + error], 0.0, 1.0))
+    return probability * (1.0 - probability) / error**2, 0.5 * float(ends[1] - ends[0])
 
 
 def to_datatree(

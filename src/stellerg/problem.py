@@ -137,6 +137,22 @@ class Problem:
         return self.log_sd[:, :, None] * correlation * self.log_sd[:, None, :]
 
     @cached_property
+    def precision_root(self) -> np.ndarray | None:
+        """L with L' L = C^-1, (star, input, input); None for independent inputs. C must not be singular."""
+        if self.correlation is None:
+            return None
+        values, vectors = np.linalg.eigh(self.correlation)
+        return np.swapaxes(vectors, 1, 2) / np.sqrt(values)[:, :, None]
+
+    @cached_property
+    def log_volume(self) -> np.ndarray:
+        """ln |det D| - ln |C|/2 of exactly determined stars, (star, 1); what is left out where C is singular."""
+        volume = np.full((len(self), 1), np.linalg.slogdet(self.design)[1])
+        if self.correlation is None:
+            return volume
+        return volume - 0.5 * np.log(np.maximum(np.linalg.det(self.correlation), 1e-300))[:, None]
+
+    @cached_property
     def solution(self) -> np.ndarray:
         """d theta/d ln obs, (star | 1, parameter, input).
 

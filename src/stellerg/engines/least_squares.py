@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import chdtrc
 
-from stellerg.engines.target import precision_root, scores
+from stellerg.engines.target import scores
 from stellerg.problem import Problem
 
 __all__ = ["Fit", "fit"]
@@ -42,7 +42,7 @@ class Fit:
 
 def fit(problem: Problem) -> Fit:
     """Find the least-squares point; of exactly determined stars, that of the medians, where chi-squared is 0."""
-    root = precision_root(problem)
+    root = problem.precision_root
     theta = _start(problem, root)
     residual, jacobian = _residual(problem, root, theta)
     chi2 = _square(residual)

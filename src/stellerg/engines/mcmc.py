@@ -19,7 +19,7 @@ from typing import ClassVar
 import numpy as np
 
 from stellerg import diagnostics as arviz_diagnostics
-from stellerg.engines.ensemble import Settings, run_chains
+from stellerg.engines.ensemble import Settings, Target, run_chains
 from stellerg.errors import EngineError
 from stellerg.problem import Problem
 from stellerg.status import Status
@@ -134,8 +134,11 @@ class StarChains:
 
 def solve_star(problem: Problem, engine: MarkovChain) -> StarChains:
     """Run and judge the chains of one star (a function of the module, so that processes can call it)."""
+    target = Target.of(problem)
+    if not np.isfinite(target.log_probability(np.zeros((1, target.dimensions))))[0]:
+        return _nowhere(problem, engine.ensembles)
     settings = Settings(engine.seed, engine.walkers, engine.ensembles, engine.block, engine.most_steps, engine.times)
-    target, chains = run_chains(problem, settings, Path(engine.checkpoint) if engine.checkpoint else None)
+    chains = run_chains(target, settings, Path(engine.checkpoint) if engine.checkpoint else None)
     steps = chains.coordinates.shape[1]
     tau = chains.autocorrelation
     first = min(int(np.ceil(5.0 * tau)), steps // 2)
@@ -143,8 +146,7 @@ def solve_star(problem: Problem, engine: MarkovChain) -> StarChains:
     kept = np.swapaxes(chains.coordinates[:, first::every], 1, 2)
     u, log_latents, log_outputs = target.quantities(kept)
     rhat = np.array([arviz_diagnostics.nested_rhat(values) for values in log_outputs])
-    effective = np.array([[arviz_diagnostics.effective_draws(v, p) for p in _PROBABILITIES] for v in log_outputs])
-    error = np.array([[arviz_diagnostics.quantile_error(v, p) for p in _PROBABILITIES] for v in log_outputs])
+    judged = np.array([[arviz_diagnostics.quantile_judgement(v, p) for p in _PROBABILITIES] for v in log_outputs])
     return StarChains(
         u=u,
         log_probability=np.swapaxes(chains.log_probability[:, first::every], 1, 2),
@@ -153,11 +155,23 @@ def solve_star(problem: Problem, engine: MarkovChain) -> StarChains:
         steps=steps,
         autocorrelation=tau,
         rhat=rhat,
-        effective=effective,
-        quantile_error=error,
+        effective=judged[..., 0],
+        quantile_error=judged[..., 1],
         accepted=chains.accepted,
         impossible=chains.impossible,
-        reasons=_reasons(steps, tau, engine.times, rhat, effective),
+        reasons=_reasons(steps, tau, engine.times, rhat, judged[..., 0]),
+    )
+
+
+def _nowhere(problem: Problem, ensembles: int) -> StarChains:
+    """What is given for a star whose measurements no value satisfies."""
+    empty = np.full((ensembles, 1, 1), np.nan)
+    outputs = np.full((len(problem.outputs), *empty.shape), np.nan)
+    latents = np.full((len(problem.latents), *empty.shape), np.nan)
+    judged = np.full((len(problem.outputs), len(_PROBABILITIES)), np.nan)
+    reason = "no value satisfies all measurements within the ends of their distributions"
+    return StarChains(
+        empty, empty, latents, outputs, 0, np.inf, judged[:, 0], judged, judged, 0.0, 0, reasons=(reason,)
     )
 
 
@@ -165,9 +179,7 @@ def _reasons(steps: int, tau: float, times: float, rhat: np.ndarray, effective: 
     """What is not good enough, with its numbers."""
     found = []
     if not steps >= times * tau:
-        found.append(
-            f"{steps} steps are {steps / tau:.1f} autocorrelation times of {tau:.1f} steps, {times:g} wanted"
-        )
+        found.append(f"{steps} steps are {steps / tau:.1f} autocorrelation times of {tau:.1f} steps, {times:g} wanted")
     if not np.all(rhat <= _LARGEST_RHAT):
         found.append(f"the ensembles disagree: nested R-hat {np.max(rhat):.3f}, at most {_LARGEST_RHAT} wanted")
     if not np.all(effective >= _LEAST_EFFECTIVE):
@@ -188,7 +200,8 @@ class MarkovChainAnswer:
 
     def failure(self, star: int) -> str:
         """Why a star is not converged, with its numbers."""
-        return "; ".join(self.stars[star].reasons) + "; run longer chains, or use another engine"
+        way_out = "run longer chains, or use another engine" if self.stars[star].steps else "check them"
+        return "; ".join((*self.stars[star].reasons, way_out))
 
     @property
     def status(self) -> np.ndarray:

@@ -25,6 +25,7 @@ __all__ = ["MonteCarlo", "MonteCarloAnswer"]
 _STANDARD = (0.5, 0.15865525393145707, 0.8413447460685429, 0.02275013194817921, 0.9772498680518208)
 _INTERVALS = (0.0, 0.6826894921370859, 0.9544997361036416)  # the median, one and two standard deviations
 _LN10 = float(np.log(10.0))
+_FEWEST_BLOCKS = 10  # two, as in the standard, stop too early for one star in seven (a test of `adaptive`)
 _VALUES = 2**22  # doubles in one array of draws: bounds memory, changes no bit
 _LEAST_EFFECTIVE = 100.0  # judgement: below, an interval of 95 % rests on two draws in each tail
 _BANDWIDTH = 0.15  # half width of the density's window in standard deviations (bias 0.4 % at a normal peak)
@@ -84,6 +85,7 @@ class MonteCarlo:
                 digits=self.digits,
                 probability=_INTERVALS,
                 most_blocks=self.most_blocks,
+                fewest_blocks=min(_FEWEST_BLOCKS, self.most_blocks),
             )
             blocks[rows], standing[rows] = found.blocks, found.converged
         return MonteCarloAnswer(problem, self.plan, blocks, standing)

@@ -9,15 +9,7 @@ import numpy as np
 
 from stellerg.problem import Problem
 
-__all__ = ["log_reference_density", "log_target", "precision_root", "scores"]
-
-
-def precision_root(problem: Problem) -> np.ndarray | None:
-    """L with L' L = C^-1, (star, input, input); None for independent inputs. C must not be singular."""
-    if problem.correlation is None:
-        return None
-    values, vectors = np.linalg.eigh(problem.correlation)
-    return np.swapaxes(vectors, 1, 2) / np.sqrt(values)[:, :, None]
+__all__ = ["log_reference_density", "log_target", "scores"]
 
 
 def scores(problem: Problem, parameters: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -51,30 +43,25 @@ def log_target(problem: Problem, parameters: np.ndarray) -> np.ndarray:
     if not problem.inputs:
         return np.zeros(parameters.shape[:2])
     score, log_slope, sign = scores(problem, parameters)
-    root = precision_root(problem)
+    root = problem.precision_root
     whitened = score if root is None else np.einsum("sij,sdj->sdi", root, score)
     with np.errstate(invalid="ignore", over="ignore"):
         square = np.square(whitened).sum(axis=-1)
     possible = np.isfinite(square)
-    density = log_reference_density(problem, np.where(possible[..., None], log_slope, 0.0), sign, root)
+    density = log_reference_density(problem, np.where(possible[..., None], log_slope, 0.0), sign)
     return np.where(possible & ~np.isnan(density), density - 0.5 * np.where(possible, square, 0.0), -np.inf)
 
 
-def log_reference_density(problem: Problem, log_slope: np.ndarray, sign: np.ndarray, root=None) -> np.ndarray:
+def log_reference_density(problem: Problem, log_slope: np.ndarray, sign: np.ndarray) -> np.ndarray:
     """ln |J' C^-1 J|^(1/2) from the slopes of the scores, (star, draw, input) to (star, draw).
 
     For exactly determined stars it is a sum: ln |det D| + sum ln |dz/d ln obs| - ln |C|/2.
     """
     if not problem.over_determined:
-        constant = np.linalg.slogdet(problem.design)[1]
-        if problem.correlation is not None:
-            # a constant of the star, left out where C is singular
-            constant = constant - 0.5 * np.log(np.maximum(np.linalg.det(problem.correlation), 1e-300))[:, None]
-        return log_slope.sum(axis=-1) + constant
+        return log_slope.sum(axis=-1) + problem.log_volume
     jacobian = (sign * np.exp(log_slope))[..., None] * problem.design
     if problem.correlation is not None:
-        whitening = precision_root(problem) if root is None else root
-        jacobian = np.einsum("sij,sdjr->sdir", whitening, jacobian)
+        jacobian = np.einsum("sij,sdjr->sdir", problem.precision_root, jacobian)
     gram = np.einsum("sdjr,sdjq->sdrq", jacobian, jacobian)
     with np.errstate(divide="ignore"):
         if gram.shape[-1] == 1:

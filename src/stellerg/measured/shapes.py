@@ -102,12 +102,18 @@ def base_score(shape: Shape, quoted: Array, value: Array, upper: Array, lower: A
     return (quoted - value) / upper
 
 
-def log_base_density(shape: Shape, quoted: Array, value: Array, upper: Array, lower: Array) -> Array:
-    """Logarithm of the density over the quoted value, before the restriction; -inf beyond a hard end."""
+def log_base_density(
+    shape: Shape, score: Array | None, quoted: Array, value: Array, upper: Array, lower: Array
+) -> Array:
+    """Logarithm of the density over the quoted value, before the restriction; -inf beyond a hard end.
+
+    `score` is the base score that belongs to `quoted`, where it is known already.
+    """
     if shape is Shape.SPLIT_NORMAL:
         side = np.where(quoted < value, lower, upper)
         return np.log(2.0 / (upper + lower)) - 0.5 * ((quoted - value) / side) ** 2 - _HALF_LOG_2PI
-    score = base_score(shape, quoted, value, upper, lower)
+    if score is None:
+        score = base_score(shape, quoted, value, upper, lower)
     if shape is not Shape.THREE_QUANTILE:
         return -np.log(upper) - 0.5 * score**2 - _HALF_LOG_2PI
     g, c = _asymmetry(upper, lower)

@@ -182,17 +182,22 @@ class Measured:
             Infinite, and minus infinity, beyond a hard end of the distribution.
         """
         score = np.full(logarithm.shape, np.nan)
+        log_slope = np.full(logarithm.shape, np.nan)
         for shape, rows in self._groups:
             here = logarithm[rows]
             if shape is Shape.LOGNORMAL:
-                score[rows] = (here - self.to_log(self.value[rows])[:, None]) / self._log_slope(rows)[:, None]
-            else:
-                base = shapes.base_score(shape, self._to_quoted(here), *self._parameters(rows))
-                score[rows] = shapes.restrict(base, self.removed[rows][:, None])
-        # the slope is the density over ln(quantity) divided by that of the score
-        inside = np.isfinite(score)
-        squared = np.square(np.where(inside, score, 0.0))
-        log_slope = np.where(inside, self.log_density(logarithm) + 0.5 * squared + _HALF_LOG_2PI, -np.inf)
+                step = self._log_slope(rows)[:, None]
+                score[rows] = (here - self.to_log(self.value[rows])[:, None]) / step
+                log_slope[rows] = -np.log(np.abs(step))
+                continue
+            quoted = self._to_quoted(here)
+            base = shapes.base_score(shape, quoted, *self._parameters(rows))
+            normal = shapes.restrict(base, self.removed[rows][:, None])
+            # the slope is the density over ln(quantity) divided by that of the score
+            inside = np.isfinite(normal)
+            density = self._log_density(shape, base, quoted, here, rows) + _HALF_LOG_2PI
+            score[rows] = normal
+            log_slope[rows] = np.where(inside, density + 0.5 * np.square(np.where(inside, normal, 0.0)), -np.inf)
         return score, log_slope
 
     def log_density(self, logarithm: np.ndarray) -> np.ndarray:
@@ -204,11 +209,15 @@ class Measured:
                 step = self._log_slope(rows)[:, None]
                 score = (here - self.to_log(self.value[rows])[:, None]) / step
                 out[rows] = -np.log(np.abs(step)) - 0.5 * score**2 - _HALF_LOG_2PI
-                continue
-            density = shapes.log_base_density(shape, self._to_quoted(here), *self._parameters(rows))
-            to_log = here if self.scale is Scale.LINEAR else np.log(1.0 / abs(LOG_PER_UNIT[self.scale]))
-            out[rows] = density + to_log - np.log1p(-self.removed[rows])[:, None]
+            else:
+                out[rows] = self._log_density(shape, None, self._to_quoted(here), here, rows)
         return out
+
+    def _log_density(self, shape, score, quoted, logarithm, rows):
+        """Logarithm of the density over ln(quantity) of the rows of one shape that is not log-normal."""
+        density = shapes.log_base_density(shape, score, quoted, *self._parameters(rows))
+        to_log = logarithm if self.scale is Scale.LINEAR else np.log(1.0 / abs(LOG_PER_UNIT[self.scale]))
+        return density + to_log - np.log1p(-self.removed[rows])[:, None]
 
     @cached_property
     def _groups(self) -> tuple[tuple[Shape, np.ndarray], ...]:

@@ -161,12 +161,12 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int, use_op
 def _judgement(numbers: dict[str, float]) -> list[str]:
     """What an engine that draws says of its own work."""
     if "nested_rhat" in numbers:
-        tau = numbers["autocorrelation_time"]
+        tau, error = numbers["autocorrelation_time"], numbers["largest_quantile_error"]
         return [
             f"Chains: {numbers['steps']:.0f} steps are {numbers['steps'] / tau:.0f} autocorrelation times of {tau:.1f} "
-            f"steps; nested R-hat {numbers['nested_rhat']:.4f}; each quantile rests on {numbers['effective_draws']:,.0f} "
-            f"effective draws or more, its standard error in the logarithm is {numbers['largest_quantile_error']:.2g} "
-            "or less."
+            f"steps; nested R-hat {numbers['nested_rhat']:.4f}; each quantile rests on "
+            f"{numbers['effective_draws']:,.0f} effective draws or more, with a standard error of {error:.2g} or less "
+            "in the logarithm."
         ]
     if "draws" in numbers:
         return [f"Draws: {numbers['draws']:,.0f}, worth {numbers['effective_draws']:,.0f} independent ones."]

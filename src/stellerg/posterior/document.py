@@ -29,6 +29,8 @@ def star_document(posterior: Posterior, row: int = 0) -> dict:
     dict
         Numbers, texts, lists and None only.
     """
+    if len(posterior) > 1:  # one star's numbers are computed, not everybody's
+        posterior, row = posterior.take([row]), 0
     number = int(posterior.engine[row])
     over_determined = not np.isnan(posterior.probability[row])
     return {

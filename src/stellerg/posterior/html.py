@@ -28,7 +28,6 @@ __all__ = ["posterior_html", "star_html"]
 ROWS = 20  # stars shown of many
 # Quantiles of all stars are computed together, some 6,000 stars a second (README): above this many, showing an
 # answer would make its reader wait (judgement).
-TABLE_LIMIT = 10_000
 _SPREAD = 1e4  # a column whose values differ by more has its powers of ten in the cells (judgement)
 _USE_OPTION = "the argument use of propagate"
 
@@ -103,13 +102,11 @@ def posterior_html(posterior: Posterior) -> str:
         return star_html(posterior)
     many = len(posterior)
     parts = [f'<p class="stellerg-title"><strong>{counted(many, "star")}</strong>{_counts(posterior)}</p>']
-    if 0 < many <= TABLE_LIMIT:
-        parts += _summary(posterior)
-        if many > ROWS:
-            left = counted(many - ROWS, "more star")
-            parts.append(_paragraph(f"{left} not shown here; table() gives every row."))
-    elif many:
-        parts.append(_paragraph(f"Above {TABLE_LIMIT:,} stars no row is shown here; table() gives every row."))
+    if many:
+        parts += _summary(posterior.take(range(min(many, ROWS))))
+    if many > ROWS:
+        left = counted(many - ROWS, "more star")
+        parts.append(_paragraph(f"{left} not shown here; table() gives every row."))
     parts.append(_paragraph(f"Convention: {posterior.energy_convention}; {posterior.time_convention}."))
     parts.append(_paragraph(f"Structure: prior {posterior.prior}. {posterior.prior_summary}"))
     for flag, text in FLAG_TEXT.items():
@@ -219,14 +216,14 @@ def _counts(posterior: Posterior) -> str:
 
 
 def _summary(posterior: Posterior) -> list[str]:
-    """Table of the first stars (each output's median, interval and share of structure), and remarks on them."""
-    shown = min(len(posterior), ROWS)
+    """Table of stars (each output's median, interval and share of structure), and remarks on them."""
+    shown = len(posterior)
     first = [_heading("star", "name"), _heading("status", "name")]
     second = [_heading("", "name"), _heading("", "name")]
     columns = []
     for output in posterior.outputs:
-        values = posterior.quantile(STANDARD_PROBABILITIES, output)[:shown, :3]  # median and 68.27 %
-        share = posterior.budget(output).get("structure", np.full(len(posterior), np.nan))[:shown]
+        values = posterior.quantile(STANDARD_PROBABILITIES, output)[:, :3]  # median and 68.27 %
+        share = posterior.budget(output).get("structure", np.full(shown, np.nan))
         power = _column_power(values[:, 0])
         unit = with_power(posterior.units[output], power or 0)
         first.append(_heading(label(output) + (f" ({unit})" if unit else ""), "share", "colgroup", 3))
@@ -236,7 +233,7 @@ def _summary(posterior: Posterior) -> list[str]:
     second.append(_heading("", "name"))
     columns = list(zip(*columns, strict=True)) or [()] * shown
     rows, remarks = [], {}
-    for row, text in enumerate(posterior.status_text()[:shown]):
+    for row, text in enumerate(posterior.status_text()):
         star, flags = str(posterior.star[row]), flag_words(int(posterior.flags[row]))
         status = _cell(_status(status_word(posterior.status[row])), "status")
         rows.append([_name(star), status, *columns[row], _cell("<br>".join(flags), "flags")])

@@ -1,7 +1,7 @@
 """Posterior: the answers of all engines, scattered back to the rows of the input."""
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -133,6 +133,39 @@ class Posterior:
     def has_results(self) -> np.ndarray:
         """Whether a row carries results, (star,)."""
         return carries_results(self.status)
+
+    def take(self, rows) -> "Posterior":
+        """Return some of the stars, in the order asked for.
+
+        Parameters
+        ----------
+        rows : array_like of int, (m,)
+
+        Raises
+        ------
+        InputError
+            If a row does not exist.
+        """
+        rows = np.atleast_1d(np.asarray(rows, int))
+        if rows.size and not (rows.min() >= 0 and rows.max() < len(self)):
+            raise InputError(f"rows: {rows.tolist()[:5]} are not all among the {len(self)} rows")
+        per_star = ("star", "status", "reason", "flags", "aside", "engine", "engine_reason")
+        per_star += ("chi2", "degrees_of_freedom", "probability")
+        place = {int(row): k for k, row in enumerate(rows)}
+        pieces = []
+        for piece in self.pieces:
+            chosen = np.flatnonzero(np.isin(piece.rows, rows))
+            if chosen.size:
+                moved = np.array([place[int(row)] for row in piece.rows[chosen]])
+                answer, linear = piece.answer.take(chosen), piece.linear.take(chosen)
+                pieces.append(Piece(moved, answer, linear, piece.budget_names, piece.budget[chosen]))
+        return replace(
+            self,
+            **{name: getattr(self, name)[rows] for name in per_star},
+            quoted={place[row]: cell for row, cell in self.quoted.items() if row in place},
+            pieces=tuple(pieces),
+            _cache={},
+        )
 
     def status_text(self) -> list[str]:
         """A sentence for each row: what is wrong, the value got, the way out; empty for `ok`."""

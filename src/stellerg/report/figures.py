@@ -36,6 +36,8 @@ def star_figure(posterior: Posterior, row: int = 0) -> Figure:
     row : int
         A star with results.
     """
+    if len(posterior) > 1:
+        posterior, row = posterior.take([row]), 0
     answer = star_document(posterior, row)
     outputs = [name for name in posterior.outputs if answer["outputs"][name] is not None]
     with matplotlib.rc_context(STYLE):
@@ -50,6 +52,7 @@ def star_figure(posterior: Posterior, row: int = 0) -> Figure:
             f"{answer['convention']['time']}",
             x=0.01,
             ha="left",
+            parse_math=False,
             fontsize=9.0,
             color=INK,
         )
