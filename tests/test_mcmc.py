@@ -79,7 +79,9 @@ def z_scores(chains, edges, wrong=1.0):
         for k, p in enumerate(PROBABILITIES):
             below = values <= edges[0, output, k] + np.log(wrong)
             # walkers of an ensemble are not independent: the error is that of the four series of ensemble means
-            z[output, k] = (below.mean() - p) / array_stats.mcse(below.mean(axis=1), method="mean")
+            # (independent draws at the best: where a wrong law leaves no draw beyond an edge, the series do not move)
+            error = max(array_stats.mcse(below.mean(axis=1), method="mean"), np.sqrt(p * (1 - p) / below.size))
+            z[output, k] = (below.mean() - p) / error
     return z
 
 
