@@ -16,6 +16,7 @@ from stellerg.problem import COEFFICIENT, Problem
 from stellerg.selection import Need, Selection, determined, select
 from stellerg.stars import EvolutionaryState, Stars
 from stellerg.status import STATUS_TEXT, Flag, Status
+from stellerg.structure.main_sequence import Place, place
 from stellerg.structure.model import StructureModel
 from stellerg.wording import label
 
@@ -309,7 +310,9 @@ def _applicable(problems, stars: Stars, structure: StructureModel, notes: Notes)
         kept += _without_structure(problem, outside, Status.OUTSIDE_CALIBRATION, sentence, notes)
         sentence = STATUS_TEXT[Status.EVOLVED_OR_CONTRACTING].sentence
         kept += _without_structure(problem, evolved, Status.EVOLVED_OR_CONTRACTING, sentence, notes)
-        kept.append(problem.take(np.flatnonzero(~outside & ~evolved)))
+        described = problem.take(np.flatnonzero(~outside & ~evolved))
+        _note_size(described, state[~outside & ~evolved], notes)
+        kept.append(described)
     return [problem for problem in kept if len(problem)]
 
 
@@ -325,6 +328,22 @@ def _outside(problem: Problem, state: np.ndarray, structure: StructureModel) -> 
         mass = np.exp(problem.log_latents(problem.log_median)[:, problem.latent("mass")])
         outside |= (mass < limits.mass[0]) | (mass > limits.mass[1])
     return outside
+
+
+def _asked_with_structure(problem: Problem) -> list[str]:
+    """Outputs asked for that carry structure; the coefficient comes along unasked."""
+    return [n for n, has in zip(problem.outputs, problem.structured, strict=True) if has and n != COEFFICIENT]
+
+
+def _note_size(problem: Problem, state: np.ndarray, notes: Notes) -> None:
+    """Mark stars too large for the main sequence, unless they are stated to be contracting; on the medians."""
+    if not {"mass", "radius"} <= set(problem.latents) or not len(problem) or not _asked_with_structure(problem):
+        return
+    latents = np.exp(problem.log_latents(problem.log_median))
+    where = place(latents[:, problem.latent("mass")], latents[:, problem.latent("radius")])
+    where = np.where(state == EvolutionaryState.PRE_MAIN_SEQUENCE, Place.UNKNOWN, where)
+    notes.flags[problem.rows[where == Place.CONTRACTING]] |= int(Flag.TAKEN_AS_CONTRACTING)
+    notes.add(problem.rows[where == Place.BEYOND], Status.DOUBTFUL, STATUS_TEXT[Status.DOUBTFUL].sentence)
 
 
 def _domain(structure: StructureModel) -> str:
@@ -345,6 +364,7 @@ def _without_structure(problem: Problem, rows: np.ndarray, status: Status, sente
         notes.set(problem.rows[rows], status, sentence)
         return []
     part = problem.take(rows).only(plain)
-    lacking = ", ".join(label(n) for n in problem.outputs if n not in part.outputs and n != COEFFICIENT)
-    notes.add(problem.rows[rows], Status.PARTIAL, f"no {lacking}: {sentence}")
+    lacking = _asked_with_structure(problem)
+    if lacking:
+        notes.add(problem.rows[rows], Status.PARTIAL, f"no {', '.join(map(label, lacking))}: {sentence}")
     return [part]

@@ -60,6 +60,7 @@ class Flag(IntFlag):
     MASS_OUT_OF_RANGE = 64
     FEW_EFFECTIVE_DRAWS = 128
     STATE_NOT_UNDERSTOOD = 256
+    TAKEN_AS_CONTRACTING = 512
 
 
 @dataclass(frozen=True)
@@ -80,7 +81,12 @@ class Text:
 STATUS_TEXT: dict[Status, Text] = {
     Status.OK: Text("ok", "All requested outputs are given."),
     Status.PARTIAL: Text("partial", "Some requested outputs are given; the others lack a measurement."),
-    Status.DOUBTFUL: Text("doubtful", "Numbers are given, but may be wrong by far: see the sentence."),
+    Status.DOUBTFUL: Text(
+        "doubtful",
+        "if this star is a giant, the numbers are wrong by 10 to 300 times: it is too large for the main sequence, and "
+        "a contracting star cannot be told from a giant by mass, radius and temperature; state its evolutionary_state "
+        "(pre-main-sequence or evolved)",
+    ),
     Status.UNDERDETERMINED: Text("underdetermined", "The measurements do not determine the requested outputs."),
     Status.ERROR_MISSING: Text(
         "error-missing",
@@ -171,6 +177,11 @@ FLAG_TEXT: dict[Flag, Text] = {
     ),
     Flag.MASS_OUT_OF_RANGE: Text(
         "mass-out-of-range", "The mass lies below 0.075 or above 150 solar masses (judgement)."
+    ),
+    Flag.TAKEN_AS_CONTRACTING: Text(
+        "taken-as-contracting",
+        "Too large for the main sequence and below 0.7 solar masses, where no single star has evolved: still "
+        "contracting (a stripped star in a binary is not covered).",
     ),
     Flag.STATE_NOT_UNDERSTOOD: Text(
         "state-not-understood",
