@@ -93,7 +93,7 @@ def test_both_files_give_the_same_numbers(results):
 def test_redundant_columns_are_left_aside_by_name(file, results):
     _, record, printed = results[file]
     aside = {tuple(entry["columns"]): entry["rows"] for entry in record["columns"]["left_aside"]}
-    assert aside == {("luminosity",): 8, ("parallax", "bolometric_flux"): 1}
+    assert aside == {("luminosity",): 8, ("angular_diameter", "bolometric_flux"): 1}
     assert record["columns"]["not_used"] == ["note"]
     assert record["columns"]["correlations"] == ["correlation_mass_radius"]
     assert record["catalogue_flags"] == []

@@ -54,7 +54,7 @@ def test_redundant_columns_are_left_aside_by_name():
         (("mass", "log_mass", "radius", "log_radius"), ("mass", "radius"), ("log_mass", "log_radius")),
         # gravity adds the radius; the density then adds nothing
         (("mass", "log_surface_gravity", "mean_density"), ("mass", "log_surface_gravity"), ("mean_density",)),
-        (("parallax", "distance", "angular_diameter"), ("angular_diameter", "parallax"), ("distance",)),
+        (("parallax", "distance", "angular_diameter"), ("parallax", "angular_diameter"), ("distance",)),
         (
             ("log_luminosity", "radius", "effective_temperature"),
             ("radius", "effective_temperature"),

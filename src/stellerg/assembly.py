@@ -198,7 +198,7 @@ def _problems_of_pattern(
         here = rows[which.ravel() == number]
         problem, conflict = _eliminate(stars, here, selection.chosen, case, given, conventions, structure)
         notes.set(here[conflict], Status.EXACT_VALUES_CONFLICT, STATUS_TEXT[Status.EXACT_VALUES_CONFLICT].sentence)
-        invalid = _invalid_correlations(stars, problem)
+        invalid = _invalid_correlations(stars, problem) | _idle_correlations(stars, problem, selection.chosen, case)
         notes.set(
             here[invalid & ~conflict],
             Status.CORRELATION_INVALID,
@@ -288,6 +288,16 @@ def _invalid_correlations(stars: Stars, problem: Problem) -> np.ndarray:
         least = np.linalg.eigvalsh(safe)[:, 0]
         invalid |= least < (-_SEMIDEFINITE if problem.over_determined else _SEMIDEFINITE)
     return invalid
+
+
+def _idle_correlations(stars: Stars, problem: Problem, chosen, exact) -> np.ndarray:
+    """Where a measurement of what exact values fix, which is not used, is correlated with one that is, (star,)."""
+    idle = {name for name, fixed in zip(chosen, exact, strict=True) if not fixed} - set(problem.inputs)
+    found = np.zeros(len(problem), bool)
+    for pair, values in stars.correlation.items():
+        if len(idle.intersection(pair)) == 1 and set(problem.inputs).intersection(pair):
+            found |= values[problem.rows] != 0.0
+    return found
 
 
 def _applicable(problems, stars: Stars, structure: StructureModel, notes: Notes) -> list[Problem]:

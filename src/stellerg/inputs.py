@@ -188,7 +188,7 @@ def in_unit_of_value(observable: Observable, error: np.ndarray, own: str, value_
 def _from_ufloats(given) -> tuple[np.ndarray | None, np.ndarray | None]:
     """Nominal values and standard deviations of one or many ufloats; None if they are not ufloats."""
     items = [given] if hasattr(given, "nominal_value") else given
-    if not isinstance(items, (list, tuple, np.ndarray)) or len(items) == 0:
+    if not isinstance(items, (list, tuple, np.ndarray)) or np.ndim(items) != 1 or len(items) == 0:
         return None, None
     if not all(hasattr(x, "nominal_value") for x in items):
         return None, None

@@ -160,8 +160,9 @@ OBSERVABLES: dict[str, Observable] = {
 }
 
 # The order in which the first determining set is taken when the user names none: direct measurements first,
-# temperature before luminosity (which catalogues often compute from it), then the order of the table.
-_FIRST = ("mass", "radius", "effective_temperature", "luminosity")
+# temperature before luminosity (which catalogues often compute from it), a distance that was measured before one
+# that follows from a radius and an angular diameter, then the order of the table.
+_FIRST = ("mass", "radius", "effective_temperature", "luminosity", "parallax", "distance")
 SELECTION_ORDER = _FIRST + tuple(name for name in OBSERVABLES if name not in _FIRST)
 
 # Spellings that people and catalogues use beside astropy's own.

@@ -197,7 +197,10 @@ def _common_length(measured: Mapping[str, Measured], star) -> int:
     if not measured:
         raise InputError("no measurement was given; give at least one observable, such as mass")
     if len(set(lengths.values())) > 1:
-        raise InputError(f"columns have different lengths: {lengths}; give one value per star in each")
+        raise InputError(
+            f"columns have different lengths: {lengths}; give one value per star in each (a value with its error is a "
+            "pair: (value, error))"
+        )
     return next(iter(lengths.values()))
 
 

@@ -90,8 +90,8 @@ STATUS_TEXT: dict[Status, Text] = {
     Status.UNDERDETERMINED: Text("underdetermined", "The measurements do not determine the requested outputs."),
     Status.ERROR_MISSING: Text(
         "error-missing",
-        "a value without an error; quote it (1.0 ± 0.1, or a column {name}_error), or write 'exact' after a value that "
-        "has none",
+        "a value without an error, or with one of two; quote it (1.0 ± 0.1, or a column {name}_error), or write "
+        "'exact' after a value that has none",
     ),
     Status.ERROR_ZERO: Text(
         "error-zero",
@@ -99,12 +99,13 @@ STATUS_TEXT: dict[Status, Text] = {
     ),
     Status.NOT_POSITIVE: Text(
         "not-positive",
-        "the value must be positive and its errors must not be negative; leave the cell empty if unknown",
+        "the value must be positive, and its errors are written without a sign; leave the cell empty if unknown "
+        "(no -9.99)",
     ),
     Status.NOT_A_NUMBER: Text(
         "not-a-number",
-        "this cannot be read as a finite number with its error; correct it (a decimal point, no comma), or leave "
-        "the cell empty if unknown",
+        "this cannot be read as a finite number with its error; correct it (a decimal point, no comma; errors not "
+        "in per cent), or leave the cell empty if unknown",
     ),
     Status.LIMIT_ONLY: Text(
         "limit-only", "a limit is not a measurement; give a value with its error, or leave the cell empty"

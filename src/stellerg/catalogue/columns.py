@@ -155,7 +155,7 @@ def recognise(source: Source) -> Columns:
 def suspicious(name: str) -> bool:
     """Whether a column that is not recognised looks as if it were meant to be one of ours."""
     plain = name.lower()
-    return plain.startswith("correlation") or any(x in plain for x in OBSERVABLES) or plain[:2] in ("e_", "E_")
+    return plain.startswith(("correlation", "e_", "evol")) or any(x in plain for x in OBSERVABLES)
 
 
 def _length(part: Mapping[str, RawColumn]) -> int:
@@ -193,7 +193,8 @@ def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
         fault[text.kind == TextKind.NOT_A_NUMBER] = Status.NOT_A_NUMBER
         written = np.array(text.unit, dtype=str)
         units = np.where(written == "", column.unit, written)
-    cells = column.as_texts().astype(object)
+    plain = column.numbers is not None
+    cells = (np.char.mod("%.10g", column.numbers) if plain else column.as_texts()).astype(object)
     for ending, sides in zip(_ERRORS, ((upper, lower), (upper,), (lower,)), strict=True):
         if name + ending in part:
             errors, wrong, none, texts = _errors(observable, part[name + ending], units)

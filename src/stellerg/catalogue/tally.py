@@ -8,7 +8,7 @@ from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
-from stellerg.catalogue.columns import Columns, suspicious
+from stellerg.catalogue.columns import Columns
 from stellerg.posterior import Posterior
 from stellerg.status import FLAG_TEXT, STATUS_TEXT, Flag, Status
 from stellerg.wording import counted, label
@@ -17,6 +17,8 @@ __all__ = ["Tally", "aside_words", "closing_summary"]
 
 _REDUNDANT_PROBABILITY = 0.99
 _REDUNDANT_SHARE = 0.10
+_REDUNDANT_LEAST = 3  # stars: fewer show nothing (judgement)
+_SHOWN = 10
 
 
 @dataclass
@@ -56,7 +58,8 @@ class Tally:
     @property
     def redundant_columns(self) -> bool:
         """Whether over-determined rows agree too well for their columns to be independent."""
-        return self.too_consistent > _REDUNDANT_SHARE * self.over_determined
+        enough = self.too_consistent >= _REDUNDANT_LEAST
+        return enough and self.too_consistent > _REDUNDANT_SHARE * self.over_determined
 
     def counts(self) -> dict[str, int]:
         """Rows by status word, in the order of the table of statuses."""
@@ -93,9 +96,10 @@ def closing_summary(folder: Path, tally: Tally, columns: Columns, *, used: bool)
             "redundant-columns: over-determined stars agree too well for their columns to be independent; "
             "name the independent ones with --use."
         )
-    unused = [name for name in columns.unrecognised if suspicious(name)]
-    if unused:
-        lines.append(f"Columns that are not understood and were not used: {', '.join(unused)} (see --explain).")
+    if columns.unrecognised:
+        shown = ", ".join(columns.unrecognised[:_SHOWN])
+        more = len(columns.unrecognised) - _SHOWN
+        lines.append(f"Columns not used: {shown}" + (f" and {counted(more, 'other')}" if more > 0 else "") + ".")
     rejected = sum(count for code, count in tally.status.items() if code > Status.DOUBTFUL)
     text = f"Results in {folder}"
     if rejected:

@@ -39,9 +39,9 @@ def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     tail = tail_names(problem.structure)
     parts = np.zeros((len(problem), len(problem.outputs), count + len(tail)))
     parts[:, :, :count] = np.square(weights) * np.einsum("sjj->sj", covariance)[:, None, :]
-    total = np.einsum("soj,sjk,sok->so", weights, covariance, weights)
     if problem.correlation is not None:
-        parts[:, :, count] = total - parts[:, :, :count].sum(axis=-1)
+        shared = np.where(np.eye(count, dtype=bool), 0.0, covariance)
+        parts[:, :, count] = np.einsum("soj,sjk,sok->so", weights, shared, weights)
     if COEFFICIENT in problem.outputs:
         spread = answer.log_sd[:, problem.outputs.index(COEFFICIENT)] ** 2
         parts[:, :, -1] = np.where(problem.structured, spread[:, None], 0.0)

@@ -35,7 +35,10 @@ def flags(problem: Problem, answer: Answer, probability: np.ndarray) -> np.ndarr
     def mark(flag: Flag, where: np.ndarray) -> None:
         found[where] |= int(flag)
 
-    for name, measured in zip(problem.inputs, problem.measured, strict=True):
+    matters = (problem.input_weights != 0.0).any(axis=(0, 1))
+    for name, measured, matter in zip(problem.inputs, problem.measured, matters, strict=True):
+        if not matter:  # a measurement that moves no output says nothing about the result
+            continue
         with np.errstate(invalid="ignore"):
             ratio = measured.upper / measured.lower
             mark(Flag.STRONGLY_ASYMMETRIC, (ratio > _ASYMMETRY) | (ratio < 1.0 / _ASYMMETRY))
@@ -59,7 +62,8 @@ def _eddington_probability(problem: Problem) -> np.ndarray:
     """Probability that L exceeds the limit, with ln(L/M) taken as normal, (star,)."""
     contrast = np.zeros(len(problem.latents))
     contrast[problem.latent("luminosity")], contrast[problem.latent("mass")] = 1.0, -1.0
-    excess = problem.log_latents(problem.log_mean) @ contrast - np.log(_EDDINGTON)
+    latents = problem.log_latents(problem.log_mean)
+    excess = latents[:, problem.latent("luminosity")] - latents[:, problem.latent("mass")] - np.log(_EDDINGTON)
     weights = np.einsum("l,slj->sj", contrast, problem.latent_input_weights)
     weights = np.broadcast_to(weights, (len(problem), len(problem.inputs)))
     sd = np.sqrt(np.maximum(np.einsum("sj,sjk,sk->s", weights, problem.log_covariance, weights), 0.0))

@@ -212,7 +212,9 @@ class Settings:
         from stellerg.engines import ENGINES
 
         if self.engine not in ENGINES:
-            raise InputError(f"--{_dashed(next(iter(given)))}: belongs to one engine; name it with --engine")
+            option = next(iter(given))
+            owner = next(name for name, made in ENGINES.items() if option in {f.name for f in fields(made)})
+            raise InputError(f"--{_dashed(option)}: belongs to {owner}; add --engine {owner}")
         known = {f.name for f in fields(ENGINES[self.engine])}
         for name in given:
             if name not in known:
@@ -250,7 +252,7 @@ def _dashed(name: str) -> str:
 
 
 def _names(text: str) -> tuple[str, ...]:
-    return tuple(name.strip() for name in text.split(",") if name.strip())
+    return tuple(name.strip().replace("-", "_") for name in text.split(",") if name.strip())
 
 
 def _fraction(option: str, text: str) -> float:

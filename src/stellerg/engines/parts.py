@@ -126,21 +126,25 @@ class GridPart:
 
     def evaluate(self, x):
         """Cumulative and density at x, (star, m)."""
-        place = (x - self.start[:, None]) / self.step[:, None]
-        index = np.clip(np.floor(place), 0, self.table.shape[1] - 2).astype(np.intp)
-        t = np.clip(place - index, 0.0, 1.0)
+        index, t, inside, above = self._place(x)
         cumulative, density = self._hermite(self.table, self.slope, index, t)
-        inside = (place >= 0.0) & (place <= self.table.shape[1] - 1)
-        return np.clip(cumulative, 0.0, 1.0), np.where(inside, np.maximum(density, 0.0), 0.0)
+        cumulative = np.where(above, 1.0, np.clip(cumulative, 0.0, 1.0))
+        return cumulative, np.where(inside, np.maximum(density, 0.0), 0.0)
 
     def evaluate_tilted(self, x):
         """Cumulative, and integral of exp(x' - mean) f(x') up to x, (star, m)."""
-        place = (x - self.start[:, None]) / self.step[:, None]
-        index = np.clip(np.floor(place), 0, self.table.shape[1] - 2).astype(np.intp)
-        t = np.clip(place - index, 0.0, 1.0)
+        index, t, _, above = self._place(x)
         cumulative, _ = self._hermite(self.table, self.slope, index, t)
         tilted, _ = self._hermite(self.tilted, self.tilted_slope, index, t)
-        return np.clip(cumulative, 0.0, 1.0), tilted
+        return np.where(above, 1.0, np.clip(cumulative, 0.0, 1.0)), tilted
+
+    def _place(self, x):
+        """Cell and place in it, and whether x lies on the grid or above it."""
+        place = (x - self.start[:, None]) / self.step[:, None]
+        last = self.table.shape[1] - 1
+        index = np.clip(np.floor(place), 0, last - 1).astype(np.intp)
+        inside = (place >= 0.0) & (place <= last)
+        return index, np.clip(place - index, 0.0, 1.0), inside, place >= last
 
     def _hermite(self, table, slopes, index, t):
         step = self.step[:, None]

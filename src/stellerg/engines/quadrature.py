@@ -5,8 +5,10 @@ convolved on a grid scaled to the star for independent inputs of any shape; stru
 its density. Where the structure model changes with the mass, the integral is taken interval by interval,
 conditioned on the normal score of the mass.
 
-When it is wrong: it is not; it refuses. Inputs that are not log-normal and correlated or over-determined
-(``mass = 1.0 ± 0.3`` quoted twice) have no such sum: use montecarlo.
+When it is wrong: by no more than `numerical_error` states (1e-4 at the worst); where it would be, it refuses. Inputs
+that are not log-normal and correlated or over-determined (``mass = 1.0 ± 0.3`` quoted twice) have no such sum, and the
+steep side of a three-quantile error with a ratio beyond 2 (``1.0 +0.5 -0.1``) is too fine for a grid as wide as its
+tail: use montecarlo.
 """
 
 from dataclasses import dataclass, field
@@ -20,13 +22,16 @@ from stellerg.engines import smoothing
 from stellerg.engines.convolution import convolve
 from stellerg.engines.intervals import MassScore, mass_score, moments_of_structure
 from stellerg.engines.parts import GaussianPart, GridPart, MassShift, RestrictedPart, SharpPart
+from stellerg.measured import Shape
 from stellerg.problem import Problem
 from stellerg.status import Status
-from stellerg.structure.distributions import Point
+from stellerg.structure.distributions import Point, Uniform
 from stellerg.structure.model import Component, Coordinate, Mixture
 
 __all__ = ["Quadrature", "QuadratureAnswer"]
 
+_LARGEST_RATIO = 2.0 + 1e-9  # of three-quantile errors: beyond, the steep side is lost between the points of a grid
+_NO_SPREAD = 1e-24  # variance of ln Y that is rounding
 _CHUNK = 2048  # stars evaluated together: bounds memory, changes no bit
 _NO_STRUCTURE = Mixture((1.0,), (Component(Coordinate.LOG_COEFFICIENT, Point(0.0)),))
 
@@ -42,12 +47,14 @@ class Quadrature:
         "correlated inputs that are not log-normal: use montecarlo",
         "the structure model changes within the range of a mass that several inputs determine, not all "
         "log-normal: use montecarlo",
+        "errors whose upper and lower side differ by more than a factor of two: use montecarlo",
     )
 
     def accepts(self, problem: Problem) -> np.ndarray:
         """Index into `reasons`, (star,)."""
         other = ~problem.log_normal
         reason = np.zeros(len(problem), int)
+        reason[_steep(problem)] = 4
         reason[~mass_score(problem).tractable] = 3
         if problem.correlation is not None:
             linked = (problem.correlation != 0.0).sum(axis=2) > 1
@@ -158,7 +165,29 @@ class QuadratureAnswer:
                 first, second, covariance = moments_of_structure(problem, score, shift, rows)
                 mean[rows, output] += first
                 variance[rows, output] += second + 2.0 * covariance
-        return mean, np.sqrt(variance)
+        return mean, np.sqrt(np.maximum(variance, 0.0))
+
+
+def _steep(problem: Problem) -> np.ndarray:
+    """Where an input that matters has three-quantile errors with a ratio beyond the grid's reach, (star,)."""
+    steep = np.zeros(len(problem), bool)
+    matters = (problem.input_weights != 0.0).any(axis=(0, 1))
+    for measured, matter in zip(problem.measured, matters, strict=True):
+        if matter:
+            with np.errstate(invalid="ignore"):
+                ratio = np.maximum(measured.upper / measured.lower, measured.lower / measured.upper)
+            steep |= (measured.shape == Shape.THREE_QUANTILE) & (ratio > _LARGEST_RATIO)
+    return steep
+
+
+def _amplified(mixture: Mixture) -> float:
+    """How much errors of a gridded part grow in the closed form of a narrow uniform index."""
+    grown = 0.0
+    for weight, component in zip(mixture.weights, mixture.components, strict=True):
+        family = component.family
+        narrow = isinstance(family, Uniform) and component.coordinate is Coordinate.INDEX
+        grown += weight * (3.0 / (family.upper - family.lower) * np.exp(-component.panels[0]) if narrow else 1.0)
+    return max(grown, 1.0)
 
 
 def _weights(problem: Problem, output: int) -> np.ndarray:
@@ -197,14 +226,16 @@ def _terms(problem: Problem, output: int):
             rows = np.flatnonzero(here & (other.any(axis=1) == gridded))
             if not rows.size:
                 continue
-            if sharp:
-                yield rows, [(mixture, SharpPart(mean[rows]))], 0.0
-            elif not gridded:
-                yield rows, [(mixture, GaussianPart(mean[rows], np.sqrt(variance[rows])))], 0.0
+            if not gridded:
+                still = sharp | (variance[rows] <= _NO_SPREAD)
+                for part, some in ((SharpPart, rows[still]), (GaussianPart, rows[~still])):
+                    if some.size:
+                        extra = () if part is SharpPart else (np.sqrt(variance[some]),)
+                        yield some, [(mixture, part(mean[some], *extra))], 0.0
             else:
                 terms = [(m.take(rows), weights[rows, j], other[rows, j]) for j, m in enumerate(problem.measured)]
                 for some, part, error in convolve(terms, mean[rows], np.sqrt(variance[rows])):
-                    yield rows[some], [(mixture, part)], error
+                    yield rows[some], [(mixture, part)], error * _amplified(mixture)
     for rows in _by_input(score, np.flatnonzero(score.interval < 0)) if structured else ():
         yield from _straddling(problem.take(rows), output, rows, _rows(score, rows))
 

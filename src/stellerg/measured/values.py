@@ -18,6 +18,7 @@ _HALF_LOG_2PI = 0.5 * float(np.log(2.0 * np.pi))
 LOG_PER_UNIT = {Scale.DEX: LN10, Scale.MAGNITUDE: -0.4 * LN10}
 
 _CHUNK = 4096  # stars whose moments are taken together: bounds memory, changes no bit
+_LARGEST_LOG10 = 60.0  # beyond is no star's quantity in any unit, and products of powers would overflow
 _NO_EFFECT = 1e-25  # a probability below zero that moves no normal score above -10 by more than rounding
 
 # Trapezoid in the normal score: spectrally accurate for smooth integrands, 1e-18 of the probability lies outside.
@@ -62,7 +63,11 @@ class Measured:
     def take(self, rows: np.ndarray) -> "Measured":
         """Return the rows asked for."""
         parts = {f.name: getattr(self, f.name) for f in fields(self)}
-        return Measured(**{k: v[rows] if isinstance(v, np.ndarray) else v for k, v in parts.items()})
+        taken = Measured(**{k: v[rows] if isinstance(v, np.ndarray) else v for k, v in parts.items()})
+        for name in ("_moments", "removed"):  # what was worked out already goes along
+            if name in self.__dict__:
+                taken.__dict__[name] = self.__dict__[name][..., rows]
+        return taken
 
     @classmethod
     def joined(cls, parts: "list[Measured]") -> "Measured":
@@ -316,6 +321,7 @@ def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, f
     with np.errstate(invalid="ignore"):
         for status, wrong in (
             (Status.NOT_A_NUMBER, np.isinf(value) | np.isinf(upper) | np.isinf(lower)),
+            (Status.NOT_A_NUMBER, (value > 0.0) & (np.abs(_log10(value, scale)) > _LARGEST_LOG10)),
             (Status.NOT_POSITIVE, (value <= 0.0) if scale is Scale.LINEAR else np.zeros(len(value), bool)),
             (Status.NOT_POSITIVE, ~exact & ((upper < 0.0) | (lower < 0.0))),
             (Status.ERROR_MISSING, ~exact & (np.isnan(upper) | np.isnan(lower))),
@@ -326,6 +332,12 @@ def assign(value, upper, lower, *, scale=Scale.LINEAR, exact=None, shape=None, f
             fault = np.where((fault == Status.OK) & given & wrong, status, fault)
     code = np.where(given & (fault == Status.OK), code, Shape.ABSENT).astype(np.uint8)
     return Measured(value, upper, lower, code, scale, fault.astype(np.uint8), cells)
+
+
+def _log10(value: np.ndarray, scale: Scale) -> np.ndarray:
+    """Logarithm to base 10 of quoted values; dex and magnitudes are logarithms already."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.log10(value) if scale is Scale.LINEAR else value
 
 
 def _shape_codes(shape, asymmetric: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

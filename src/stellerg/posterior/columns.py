@@ -83,6 +83,13 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
             columns.append(
                 Column(f"{output}_budget_{name}", share, "", f"share of {name} in the variance of ln {output}")
             )
+    if posterior.use:  # measurements named as independent may be redundant, and then say whether they agree
+        freedom = np.where(np.isnan(posterior.probability), np.nan, posterior.degrees_of_freedom)
+        columns += [
+            Column("chi2", posterior.chi2, "", "chi-squared of the redundant measurements"),
+            Column("degrees_of_freedom", freedom, "", "of chi2"),
+            Column("chi2_probability", posterior.probability, "", "probability of a larger chi2"),
+        ]
     return columns
 
 

@@ -52,6 +52,11 @@ class StarContent:
     sentences: tuple[str, ...] = ()
     flags: dict[str, str] = field(default_factory=dict)
 
+    @property
+    def uncertain(self) -> bool:
+        """Whether anything has a share of a variance."""
+        return any(share is not None for values in self.shares.values() for share in values)
+
 
 def number(value: float, power: int = 0, digits: int = 4) -> str:
     """Return a number with significant digits, in units of a power of ten."""

@@ -83,7 +83,7 @@ def star_html(posterior: Posterior, row: int = 0) -> str:
     if content.status_text:
         parts.append(_paragraph(content.status_text))
     if content.outputs:
-        parts += [_values(content), _budget(content)]
+        parts += [_values(content), *([_budget(content)] if content.uncertain else [])]
         if any(share < 0.0 for values in content.shares.values() for share in values if share is not None):
             parts.append(_paragraph(_NEGATIVE))
         parts += map(_paragraph, content.sentences)

@@ -151,18 +151,18 @@ class Posterior:
             raise InputError(f"rows: {rows.tolist()[:5]} are not all among the {len(self)} rows")
         per_star = ("star", "status", "reason", "flags", "aside", "engine", "engine_reason")
         per_star += ("chi2", "degrees_of_freedom", "probability")
-        place = {int(row): k for k, row in enumerate(rows)}
         pieces = []
         for piece in self.pieces:
-            chosen = np.flatnonzero(np.isin(piece.rows, rows))
-            if chosen.size:
-                moved = np.array([place[int(row)] for row in piece.rows[chosen]])
+            moved = np.flatnonzero(np.isin(rows, piece.rows))
+            if moved.size:
+                order = np.argsort(piece.rows)
+                chosen = order[np.searchsorted(piece.rows, rows[moved], sorter=order)]
                 answer, linear = piece.answer.take(chosen), piece.linear.take(chosen)
                 pieces.append(Piece(moved, answer, linear, piece.budget_names, piece.budget[chosen]))
         return replace(
             self,
             **{name: getattr(self, name)[rows] for name in per_star},
-            quoted={place[row]: cell for row, cell in self.quoted.items() if row in place},
+            quoted={k: self.quoted[row] for k, row in enumerate(rows.tolist()) if row in self.quoted},
             pieces=tuple(pieces),
             _cache={},
         )
@@ -222,7 +222,7 @@ class Posterior:
     def density(self, values, output: str) -> np.ndarray:
         """Density of the output (per its unit) at values (m,) or (star, m), (star, m)."""
         at = np.atleast_1d(np.asarray(values, float))
-        return self._evaluate("density", at, output) / at
+        return self._evaluate("density", at, output) / np.where(at == 0.0, 1.0, at)
 
     def log10_mean(self, output: str) -> np.ndarray:
         """Mean of log10 of an output, (star,). The mean of the output itself need not exist."""
@@ -366,8 +366,8 @@ class Posterior:
     def _evaluate(self, what: str, values, output: str) -> np.ndarray:
         at = np.atleast_1d(np.asarray(values, float))
         at = np.broadcast_to(at, (len(self), at.shape[-1]))
-        with np.errstate(divide="ignore", invalid="ignore"):
-            logs = np.log(at)
+        positive = at > 0.0
+        logs = np.log(np.where(positive, at, 1.0))
         out = np.full(at.shape, np.nan)
         self._check(output)
         for piece in self.pieces:
@@ -375,7 +375,10 @@ class Posterior:
             if position is not None:
                 outputs = piece.answer.problem.outputs
                 cube = np.repeat(logs[piece.rows][:, None, :], len(outputs), axis=1)
-                out[piece.rows] = getattr(piece.answer, what)(cube)[:, position]
+                found = getattr(piece.answer, what)(cube)[:, position]
+                # nothing lies at or below zero; what is no number stays none
+                found = np.where(positive[piece.rows], found, np.where(np.isnan(at[piece.rows]), np.nan, 0.0))
+                out[piece.rows] = found
         return out
 
     def _scatter(self, output: str, read: Callable, width: int, whole: bool = False) -> np.ndarray:

@@ -32,7 +32,8 @@ def star_text(posterior: Posterior, row: int = 0) -> RenderableType:
     if not content.outputs:
         return title
     parts: list[RenderableType] = [title, Text(), _values(content), Text()]
-    parts += [Text("Share of each quantity in the variance of the logarithm", style="bold"), _budget(content)]
+    if content.uncertain:
+        parts += [Text("Share of each quantity in the variance of the logarithm", style="bold"), _budget(content)]
     parts += [Text(), *map(Text, content.sentences)]
     parts += [Text(f"{word}: {sentence}", style="yellow") for word, sentence in content.flags.items()]
     return Group(*parts)

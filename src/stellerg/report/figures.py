@@ -62,6 +62,10 @@ def star_figure(posterior: Posterior, row: int = 0) -> Figure:
 def _density(axis, posterior: Posterior, output: dict, name: str, row: int) -> None:
     low, high = posterior.quantile((1e-4, 1.0 - 1e-4), name)[row]
     median = output["median"]
+    # a long tail must not squeeze the rest: the 95.45 % are shown, and six times what lies within 68.27 %
+    (low68, high68), (low95, high95) = output["interval68"], output["interval95"]
+    low = max(low, min(median - 6.0 * (median - low68), low95))
+    high = min(high, max(median + 6.0 * (high68 - median), high95))
     axis.set_title(label(name))
     axis.set_yticks([])
     power = int(np.floor(np.log10(median)))

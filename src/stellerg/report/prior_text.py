@@ -65,7 +65,7 @@ def _applies_to(limits: dict) -> str:
 
 def _common(common: dict | None) -> str:
     if common is None:
-        return "not stated"
+        return "how much is common to all stars is not stated"
     who = {"all": "all stars", "mass": "stars of like mass"}.get(common["within"])
     return f"{100.0 * common['fraction']:.4g} %, shared by {who or 'stars of one ' + repr(common['within'])}"
 

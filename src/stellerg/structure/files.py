@@ -81,6 +81,8 @@ def load_prior(name_or_path: str | Path) -> StructureModel:
     else:
         path = Path(name_or_path)
         if path.suffix != ".toml" or not path.is_file():
+            if path.suffix == ".toml" and not path.exists():
+                raise PriorError(f"prior: there is no file {str(name_or_path)!r}")
             raise PriorError(
                 f"prior: {str(name_or_path)!r} is neither a shipped model nor a .toml file; "
                 f"shipped: {', '.join(shipped)}"
