@@ -183,6 +183,14 @@ class Problem:
         """ln(mass, radius, ...) at given ln obs, (star, latent)."""
         return self.latent_constant + np.einsum("slj,sj->sl", self.latent_input_weights, log_inputs - self.base)
 
+    def output_weights(self, output: int) -> np.ndarray:
+        """d ln Y/d ln obs of one output, (star, input)."""
+        return np.broadcast_to(self.input_weights[:, output], (len(self), len(self.inputs)))
+
+    def variance_of(self, weights: np.ndarray) -> np.ndarray:
+        """Variance of a weighted sum of ln obs, (star,); weights (star, input)."""
+        return np.einsum("sj,sjk,sk->s", weights, self.log_covariance, weights)
+
     def latent(self, name: str) -> int:
         """Position of a latent quantity."""
         return self.latents.index(name)

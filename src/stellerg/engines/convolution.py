@@ -13,7 +13,7 @@ from scipy import fft
 from stellerg.engines.parts import GridPart
 from stellerg.measured import Measured
 
-__all__ = ["convolve"]
+__all__ = ["convolve", "part_on_grid"]
 
 _CELLS = 16.0  # grid cells in one standard deviation of the sum
 _NARROW = 1.5  # terms narrower than this many cells are not sampled
@@ -71,22 +71,52 @@ def convolve(
 def _on_grid(terms, mean, low, step, normal_sd, size) -> tuple[GridPart, np.ndarray]:
     """Distribution on one grid size, and the error estimate."""
     cumulative, density, error = _transform(terms, low, step, normal_sd, size)
-    tilt = np.exp(np.minimum(low[:, None] + step[:, None] * np.arange(size), _LARGEST))
+    points = low[:, None] + step[:, None] * np.arange(size)
+    part, more = _grid_part(points + mean[:, None], step, mean, cumulative, density, np.ones(len(mean)))
+    return part, error + more
+
+
+def part_on_grid(part, points: np.ndarray, step: np.ndarray, mean: np.ndarray) -> tuple[GridPart, np.ndarray]:
+    """Tabulate any part.
+
+    Parameters
+    ----------
+    part : a part of `stellerg.engines.parts`
+    points : ndarray, (star, N)
+        Equally spaced by `step` (star,), over all of the part.
+    mean : ndarray, (star,)
+        Where the tilted integral is of order one.
+
+    Returns
+    -------
+    part : GridPart
+    error : ndarray, (star,)
+        Estimated error between the points.
+    """
+    cumulative, density = part.evaluate(points)
+    return _grid_part(points, step, mean, cumulative, density, part.mass)
+
+
+def _grid_part(points, step, mean, cumulative, density, mass) -> tuple[GridPart, np.ndarray]:
+    """A part from its cumulative and density at points, and the error of interpolating them."""
+    size = points.shape[1]
+    tilt = np.exp(np.minimum(points - mean[:, None], _LARGEST))
     integrand = tilt * density
-    error += _interpolation_error(density, step) + _interpolation_error(integrand, step, tilt)
+    error = _interpolation_error(density, step) + _interpolation_error(integrand, step, tilt)
+    full = mass[:, None] - _WINDOW
     first = np.argmax(cumulative > _WINDOW, axis=1)
-    last = np.argmax(cumulative >= 1.0 - _WINDOW, axis=1)
-    last = np.where(cumulative[:, -1] > 1.0 - _WINDOW, last, size - 1)
+    last = np.where(cumulative[:, -1] > full[:, 0], np.argmax(cumulative >= full, axis=1), size - 1)
     part = GridPart(
-        start=low + mean,
+        start=points[:, 0],
         step=step,
-        lower=low + mean + np.maximum(first - 1, 0) * step,
-        upper=low + mean + last * step,
+        lower=points[:, 0] + np.maximum(first - 1, 0) * step,
+        upper=points[:, 0] + last * step,
         mean=mean,
         table=cumulative,
         slope=density,
         tilted=_running_integral(integrand, step),
         tilted_slope=integrand,
+        mass=mass,
     )
     return part, error
 

@@ -103,6 +103,8 @@ class GridPart:
         Cumulative and density.
     tilted, tilted_slope : ndarray, (star, N)
         Integral of exp(x - mean) times the density up to a point, and its integrand.
+    mass : ndarray, (star,)
+        Total probability.
     """
 
     start: np.ndarray
@@ -114,11 +116,7 @@ class GridPart:
     slope: np.ndarray
     tilted: np.ndarray
     tilted_slope: np.ndarray
-
-    @property
-    def mass(self):
-        """Total probability, (star,)."""
-        return np.ones(len(self.start))
+    mass: np.ndarray
 
     def take(self, rows):
         """Return some rows."""
@@ -128,7 +126,7 @@ class GridPart:
         """Cumulative and density at x, (star, m)."""
         index, t, inside, above = self._place(x)
         cumulative, density = self._hermite(self.table, self.slope, index, t)
-        cumulative = np.where(above, 1.0, np.clip(cumulative, 0.0, 1.0))
+        cumulative = np.where(above, self.mass[:, None], np.clip(cumulative, 0.0, 1.0))
         return cumulative, np.where(inside, np.maximum(density, 0.0), 0.0)
 
     def evaluate_tilted(self, x):
@@ -136,7 +134,7 @@ class GridPart:
         index, t, _, above = self._place(x)
         cumulative, _ = self._hermite(self.table, self.slope, index, t)
         tilted, _ = self._hermite(self.tilted, self.tilted_slope, index, t)
-        return np.where(above, 1.0, np.clip(cumulative, 0.0, 1.0)), tilted
+        return np.where(above, self.mass[:, None], np.clip(cumulative, 0.0, 1.0)), tilted
 
     def _place(self, x):
         """Cell and place in it, and whether x lies on the grid or above it."""

@@ -21,7 +21,8 @@ from scipy.special import ndtri
 from stellerg.engines import smoothing
 from stellerg.engines.convolution import convolve
 from stellerg.engines.intervals import MassScore, mass_score, moments_of_structure
-from stellerg.engines.parts import GaussianPart, GridPart, MassShift, RestrictedPart, SharpPart
+from stellerg.engines.parts import GaussianPart, GridPart, SharpPart
+from stellerg.engines.straddling import mass_shift, straddling_terms
 from stellerg.measured import Shape
 from stellerg.problem import Problem
 from stellerg.status import Status
@@ -120,7 +121,7 @@ class QuadratureAnswer:
                 if len(terms) == 1 and isinstance(terms[0][1], GridPart):
                     # the quantiles for a normal measured part of the same mean and width lie close by
                     mixture, part = terms[0]
-                    normal = GaussianPart(part.mean, np.sqrt(_variance(piece, _weights(piece, output))[rows]))
+                    normal = GaussianPart(part.mean, np.sqrt(piece.variance_of(piece.output_weights(output))[rows]))
                     start = smoothing.quantile([(mixture, normal)], p, start)
                 view[rows] = smoothing.quantile(terms, p, start)
         return out
@@ -161,7 +162,7 @@ class QuadratureAnswer:
                 mean[rows, output] += piece.mixture.moments[0]
                 variance[rows, output] += piece.mixture.moments[1] ** 2
             for rows in _by_input(score, straddling):
-                shift, _ = _mass_shift(problem.take(rows), int(output), _rows(score, rows))
+                shift, _ = mass_shift(problem.take(rows), int(output), _rows(score, rows))
                 first, second, covariance = moments_of_structure(problem, score, shift, rows)
                 mean[rows, output] += first
                 variance[rows, output] += second + 2.0 * covariance
@@ -190,16 +191,6 @@ def _amplified(mixture: Mixture) -> float:
     return max(grown, 1.0)
 
 
-def _weights(problem: Problem, output: int) -> np.ndarray:
-    """Weights of the inputs in ln Y, (star, input)."""
-    return np.broadcast_to(problem.input_weights[:, output], (len(problem), len(problem.inputs)))
-
-
-def _variance(problem: Problem, weights: np.ndarray) -> np.ndarray:
-    """Variance of a sum of inputs, (star,)."""
-    return np.einsum("sj,sjk,sk->s", weights, problem.log_covariance, weights)
-
-
 def _by_input(score: MassScore, rows: np.ndarray) -> list[np.ndarray]:
     """Split stars that straddle a boundary by the input through which their mass is uncertain."""
     return [rows[score.through[rows] == through] for through in np.unique(score.through[rows])]
@@ -211,10 +202,10 @@ def _rows(score: MassScore, rows: np.ndarray) -> MassScore:
 
 def _terms(problem: Problem, output: int):
     """Yield (rows, terms, error estimate) for groups of stars that are treated alike."""
-    weights = _weights(problem, output)
+    weights = problem.output_weights(output)
     mean = problem.log_outputs(problem.log_mean)[:, output]
     other = (weights != 0.0) & ~problem.log_normal
-    variance = _variance(problem, np.where(problem.log_normal, weights, 0.0))
+    variance = problem.variance_of(np.where(problem.log_normal, weights, 0.0))
     sharp = not (weights != 0.0).any()
     intervals = problem.structure.intervals
     score = mass_score(problem)
@@ -237,59 +228,4 @@ def _terms(problem: Problem, output: int):
                 for some, part, error in convolve(terms, mean[rows], np.sqrt(variance[rows])):
                     yield rows[some], [(mixture, part)], error * _amplified(mixture)
     for rows in _by_input(score, np.flatnonzero(score.interval < 0)) if structured else ():
-        yield from _straddling(problem.take(rows), output, rows, _rows(score, rows))
-
-
-def _mass_shift(problem: Problem, output: int, score: MassScore) -> tuple[MassShift, np.ndarray]:
-    """How the measured part moves with the score of the mass; and the variance that normal inputs leave.
-
-    All stars straddle a boundary and have the mass through the same input, or jointly normal.
-    """
-    weights = _weights(problem, output)
-    gaussian = np.where(problem.log_normal, weights, 0.0)
-    variance = _variance(problem, gaussian)
-    position = problem.latent("mass")
-    on_mass = np.broadcast_to(problem.latent_input_weights[:, position], weights.shape)
-    sd = np.sqrt(_variance(problem, on_mass))
-    slope = np.einsum("sj,sjk,sk->s", gaussian, problem.log_covariance, on_mass) / np.where(sd > 0.0, sd, 1.0)
-    slope = np.where(np.abs(slope) < 1e-12, 0.0, slope)
-    through = int(score.through[0]) if len(problem) else -1
-    if through < 0:
-        return MassShift(slope, np.zeros(len(problem)), None), np.maximum(variance - slope**2, 0.0)
-    measured = problem.measured[through]
-    return MassShift(weights[:, through].copy(), measured.log_mean, measured), variance
-
-
-def _straddling(problem: Problem, output: int, rows: np.ndarray, score: MassScore):
-    """Terms of stars (at `rows`) whose mass may lie in several intervals, uncertain through the same input."""
-    intervals = problem.structure.intervals
-    shift, variance = _mass_shift(problem, output, score)
-    weights = _weights(problem, output)
-    mean = problem.log_outputs(problem.log_mean)[:, output]
-    other = (weights != 0.0) & ~problem.log_normal
-    if score.through[0] >= 0:
-        other[:, score.through[0]] = False
-    # what is left beside the mass is taken for nothing where it is rounding
-    spread = np.sqrt(variance) > 1e-12 * np.maximum(np.abs(shift.slope), 1.0)
-    for rest, group, error in _rests(problem, weights, mean, variance, other, spread):
-        terms = []
-        for number, interval in enumerate(intervals):
-            low, high = score.bounds(number, len(intervals))
-            terms.append((interval.mixture, RestrictedPart(rest, shift.take(group), low[group], high[group])))
-        yield rows[group], terms, error
-
-
-def _rests(problem: Problem, weights, mean, variance, other, spread):
-    """Yield (part, rows, error) for what is left of the measured part once the score of the mass is given."""
-    gridded = other.any(axis=1)
-    rows = np.flatnonzero(~gridded & ~spread)
-    if rows.size:
-        yield SharpPart(mean[rows]), rows, 0.0
-    rows = np.flatnonzero(~gridded & spread)
-    if rows.size:
-        yield GaussianPart(mean[rows], np.sqrt(variance[rows])), rows, 0.0
-    rows = np.flatnonzero(gridded)
-    if rows.size:
-        terms = [(m.take(rows), weights[rows, j], other[rows, j]) for j, m in enumerate(problem.measured)]
-        for some, part, error in convolve(terms, mean[rows], np.sqrt(variance[rows])):
-            yield part, rows[some], error
+        yield from straddling_terms(problem.take(rows), output, rows, _rows(score, rows))
