@@ -39,9 +39,9 @@ def nested_rhat(values: np.ndarray) -> float:
 def share_error(below: np.ndarray) -> float:
     """Monte Carlo standard error of the share of draws that fulfil something.
 
-    Walkers of one ensemble move by each other's differences, so that their shares go up and down together: taken as
-    independent chains they give errors that are too small (1.6 times, on forty stars). What is independent are the
-    ensembles; the series judged are their means over walkers (Goodman & Weare 2010, doi:10.2140/camcos.2010.5.65).
+    Walkers of one ensemble move by each other's differences; what is independent are the ensembles. The series judged
+    are their means over walkers (Goodman & Weare 2010, doi:10.2140/camcos.2010.5.65), which assumes nothing about the
+    walkers. (On eight stars the error was 0 to 4 % larger than with every walker taken as a chain.)
 
     Parameters
     ----------
