@@ -19,6 +19,7 @@ from typing import ClassVar
 import numpy as np
 
 from stellerg import diagnostics as arviz_diagnostics
+from stellerg.engines.answer import REPORTED, density_of_draws
 from stellerg.engines.ensemble import Settings, Target, run_chains
 from stellerg.errors import EngineError
 from stellerg.problem import Problem
@@ -26,10 +27,8 @@ from stellerg.status import Status
 
 __all__ = ["MarkovChain", "MarkovChainAnswer", "StarChains"]
 
-_PROBABILITIES = (0.5, 0.15865525393145707, 0.8413447460685429, 0.02275013194817921, 0.9772498680518208)
 _LARGEST_RHAT = 1.02  # judgement
 _LEAST_EFFECTIVE = 400.0  # of each reported quantile; judgement
-_BANDWIDTH = 0.15  # half width of the density's window in standard deviations
 _SINGULAR = 1e-10
 
 
@@ -146,7 +145,7 @@ def solve_star(problem: Problem, engine: MarkovChain) -> StarChains:
     kept = np.swapaxes(chains.coordinates[:, first::every], 1, 2)
     u, log_latents, log_outputs = target.quantities(kept)
     rhat = np.array([arviz_diagnostics.nested_rhat(values) for values in log_outputs])
-    judged = np.array([[arviz_diagnostics.quantile_judgement(v, p) for p in _PROBABILITIES] for v in log_outputs])
+    judged = np.array([[arviz_diagnostics.quantile_judgement(v, p) for p in REPORTED] for v in log_outputs])
     return StarChains(
         u=u,
         log_probability=np.swapaxes(chains.log_probability[:, first::every], 1, 2),
@@ -168,7 +167,7 @@ def _nowhere(problem: Problem, ensembles: int) -> StarChains:
     empty = np.full((ensembles, 1, 1), np.nan)
     outputs = np.full((len(problem.outputs), *empty.shape), np.nan)
     latents = np.full((len(problem.latents), *empty.shape), np.nan)
-    judged = np.full((len(problem.outputs), len(_PROBABILITIES)), np.nan)
+    judged = np.full((len(problem.outputs), len(REPORTED)), np.nan)
     reason = "no value satisfies all measurements within the ends of their distributions"
     return StarChains(
         empty, empty, latents, outputs, 0, np.inf, judged[:, 0], judged, judged, 0.0, 0, reasons=(reason,)
@@ -221,7 +220,7 @@ class MarkovChainAnswer:
     @property
     def numerical_error(self) -> np.ndarray:
         """Standard error of the cumulative, the largest of the reported quantiles, (star, output)."""
-        p = np.array(_PROBABILITIES)
+        p = np.array(REPORTED)
         return np.array([np.sqrt(p * (1.0 - p) / s.effective).max(axis=1) for s in self.stars])
 
     @property
@@ -251,10 +250,8 @@ class MarkovChainAnswer:
         return out
 
     def density(self, log_value: np.ndarray) -> np.ndarray:
-        """Density over ln Y at (star, output, m): the probability of a window of 0.3 standard deviations."""
-        half = _BANDWIDTH * self.log_sd[:, :, None]
-        half = np.where(half > 0.0, half, 1e-12)
-        return (self.cumulative(log_value + half) - self.cumulative(log_value - half)) / (2.0 * half)
+        """Density over ln Y at (star, output, m)."""
+        return density_of_draws(self, log_value)
 
 
 def _flat(chains: StarChains) -> np.ndarray:

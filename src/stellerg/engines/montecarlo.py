@@ -16,19 +16,18 @@ from typing import ClassVar
 import numpy as np
 
 from stellerg.engines.adaptive import numerical_tolerance, run_blocks
+from stellerg.engines.answer import REPORTED, density_of_draws
 from stellerg.engines.sampling import Draws, Plan, sample
 from stellerg.problem import Problem
 from stellerg.status import Status
 
 __all__ = ["MonteCarlo", "MonteCarloAnswer"]
 
-_STANDARD = (0.5, 0.15865525393145707, 0.8413447460685429, 0.02275013194817921, 0.9772498680518208)
 _INTERVALS = (0.0, 0.6826894921370859, 0.9544997361036416)  # the median, one and two standard deviations
 _LN10 = float(np.log(10.0))
 _FEWEST_BLOCKS = 10  # two, as in the standard, stop too early for one star in seven (a test of `adaptive`)
 _VALUES = 2**22  # doubles in one array of draws: bounds memory, changes no bit
 _LEAST_EFFECTIVE = 100.0  # judgement: below, an interval of 95 % rests on two draws in each tail
-_BANDWIDTH = 0.15  # half width of the density's window in standard deviations (bias 0.4 % at a normal peak)
 
 
 @dataclass(frozen=True)
@@ -162,24 +161,24 @@ class MonteCarloAnswer:
     @property
     def log_mean(self) -> np.ndarray:
         """Mean of ln Y, (star, output)."""
-        return self._summary(_STANDARD)["mean"]
+        return self._summary(REPORTED)["mean"]
 
     @property
     def log_sd(self) -> np.ndarray:
         """Standard deviation of ln Y, (star, output)."""
-        return self._summary(_STANDARD)["sd"]
+        return self._summary(REPORTED)["sd"]
 
     @property
     def numerical_error(self) -> np.ndarray:
         """Standard error of the cumulative, the largest of the five standard quantiles, (star, output)."""
-        return self._summary(_STANDARD)["error"]
+        return self._summary(REPORTED)["error"]
 
     @property
     def diagnostics(self) -> Mapping[str, np.ndarray]:
         """Number of draws and effective number of draws, (star,)."""
         return {
             "draws": (self.blocks * self.plan.draws).astype(float),
-            "effective_draws": self._summary(_STANDARD)["effective"],
+            "effective_draws": self._summary(REPORTED)["effective"],
         }
 
     def quantile(self, p: np.ndarray) -> np.ndarray:
@@ -194,10 +193,8 @@ class MonteCarloAnswer:
         return out
 
     def density(self, log_value: np.ndarray) -> np.ndarray:
-        """Density over ln Y at (star, output, m): the probability of a window of 0.3 standard deviations."""
-        half = _BANDWIDTH * self.log_sd[:, :, None]
-        half = np.where(half > 0.0, half, 1e-12)
-        return (self.cumulative(log_value + half) - self.cumulative(log_value - half)) / (2.0 * half)
+        """Density over ln Y at (star, output, m)."""
+        return density_of_draws(self, log_value)
 
     def _summary(self, p: tuple[float, ...]) -> dict[str, np.ndarray]:
         """All that one pass over the draws gives."""
