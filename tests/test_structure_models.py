@@ -240,7 +240,7 @@ def test_present_sun_is_for_the_sun():
     model = load_prior("present-sun")
     assert model.applies_to.mass == (0.98, 1.02)
     assert model.applies_to.evolutionary_state == ("main-sequence",)
-    assert model.needs_mass
+    assert model.needs == ("mass",)
     w = np.exp(model.quantile(stats.norm.cdf([-1.0, 0.0, 1.0])))
     assert w[1] == pytest.approx(1.613, abs=0.0005)  # as its summary says, to the digits printed
     assert (w[2] - w[0]) / 2.0 == pytest.approx(0.026, abs=0.0005)
@@ -248,7 +248,7 @@ def test_present_sun_is_for_the_sun():
 
 def test_by_mass_switches_at_its_boundary():
     model, edge = load_prior("by-mass"), math.log(0.35)
-    assert model.needs_mass
+    assert model.needs == ("mass",)
     assert model.edges == pytest.approx([edge], abs=1e-15)
     masses = np.array([-np.inf, math.log(0.08), np.nextafter(edge, -np.inf), edge, np.nextafter(edge, np.inf), 3.0])
     n = 5.0 - 3.0 * np.exp(-model.quantile(np.full(6, 0.9), masses))
@@ -266,5 +266,5 @@ def test_by_mass_takes_masses_for_draws():
 
 def test_index_models_do_not_look_at_the_mass():
     model = load_prior("uniform-index")
-    assert not model.needs_mass
+    assert model.needs == ()
     assert model.quantile(P).tolist() == model.quantile(P, np.full(len(P), 5.0), np.zeros(len(P))).tolist()

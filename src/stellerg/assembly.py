@@ -5,91 +5,38 @@ one, and no row is dropped.
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, replace
 
 import numpy as np
 
+from stellerg.applicability import applicable
+from stellerg.binding import Kind
 from stellerg.energetics import OUTPUTS, Conventions
 from stellerg.errors import InputError
+from stellerg.notes import Notes
 from stellerg.observables import LATENTS, OBSERVABLES
 from stellerg.problem import COEFFICIENT, Problem
 from stellerg.selection import Need, Selection, determined, select
-from stellerg.stars import EvolutionaryState, Stars
+from stellerg.stars import Stars
 from stellerg.status import STATUS_TEXT, Flag, Status
-from stellerg.structure.main_sequence import Place, place
+from stellerg.structure.calibration import Calibration
+from stellerg.structure.interior import Interior
 from stellerg.structure.model import StructureModel
 from stellerg.wording import label
 
-__all__ = ["Assembly", "Notes", "assemble"]
+__all__ = ["Assembly", "assemble"]
 
 _EXACT_TOLERANCE = 1e-9  # relative disagreement of exact values that is taken for rounding
 _SEMIDEFINITE = -1e-10  # an eigenvalue below is negative, not rounding
 
 
-@dataclass
-class Notes:
-    """What became of each row before any engine saw it.
-
-    Attributes
-    ----------
-    status : ndarray of uint8, (star,)
-    reason : ndarray of int32, (star,)
-        Index into `sentences`; 0 is the empty sentence.
-    culprit : ndarray of int16, (star,)
-        Index of the observable at fault in the order of `OBSERVABLES`; -1 if there is none.
-    flags : ndarray of int64, (star,)
-        Bit mask of `Flag`.
-    aside : ndarray of int16, (star,)
-        Index into `aside_sets`.
-    """
-
-    status: np.ndarray
-    reason: np.ndarray
-    culprit: np.ndarray
-    flags: np.ndarray
-    aside: np.ndarray
-    sentences: list[str] = field(default_factory=lambda: [""])
-    aside_sets: list[tuple[str, ...]] = field(default_factory=lambda: [()])
-
-    @classmethod
-    def empty(cls, count: int) -> "Notes":
-        """Notes of rows about which nothing is known yet."""
-        return cls(
-            np.zeros(count, np.uint8),
-            np.zeros(count, np.int32),
-            np.full(count, -1, np.int16),
-            np.zeros(count, np.int64),
-            np.zeros(count, np.int16),
-        )
-
-    def set(self, rows: np.ndarray, status: Status, sentence: str, culprit: str = "") -> None:
-        """Give rows a status with its sentence."""
-        if not len(rows):
-            return
-        self.status[rows] = status
-        self.reason[rows] = self._number(sentence)
-        self.culprit[rows] = list(OBSERVABLES).index(culprit) if culprit else -1
-
-    def add(self, rows: np.ndarray, status: Status, sentence: str) -> None:
-        """Give rows a status, and its sentence after the one they have."""
-        for code in np.unique(self.reason[rows]):
-            some = rows[self.reason[rows] == code]
-            joined = f"{self.sentences[code]}; {sentence}" if code else sentence
-            self.status[some] = status
-            self.reason[some] = self._number(joined)
-
-    def _number(self, sentence: str) -> int:
-        if sentence not in self.sentences:
-            self.sentences.append(sentence)
-        return self.sentences.index(sentence)
-
-
 @dataclass(frozen=True)
 class Assembly:
-    """Problems, the outputs asked for, and notes on every row."""
+    """Problems, the outputs asked for and the conventions they follow, and notes on every row."""
 
     problems: tuple[Problem, ...]
     outputs: tuple[str, ...]
+    conventions: Conventions
     notes: Notes
 
 
@@ -97,7 +44,7 @@ def assemble(
     stars: Stars,
     outputs: Sequence[str],
     conventions: Conventions,
-    structure: StructureModel,
+    structure: StructureModel | Calibration,
     use: Sequence[str] | None = None,
 ) -> Assembly:
     """Group stars into problems.
@@ -107,6 +54,8 @@ def assemble(
     InputError
         If an output or an observable of `use` is unknown.
     """
+    if isinstance(structure, Calibration):  # radiation always counts under it
+        conventions = replace(conventions, pressure="gas+radiation")
     _check_names(outputs, OUTPUTS, "output")
     if use is not None:
         _check_names(use, OBSERVABLES, "observable in use")
@@ -132,7 +81,7 @@ def assemble(
             )
             notes.add(rows, Status.PARTIAL, f"no {lacking}: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
         problems += _problems_of_pattern(stars, rows, selection, given, conventions, structure, notes)
-    return Assembly(tuple(_applicable(problems, stars, structure, notes)), tuple(outputs), notes)
+    return Assembly(tuple(applicable(problems, stars, structure, notes)), tuple(outputs), conventions, notes)
 
 
 def _check_names(names: Sequence[str], known: Sequence[str], what: str) -> None:
@@ -148,16 +97,20 @@ def _check_names(names: Sequence[str], known: Sequence[str], what: str) -> None:
 def _needs(outputs, conventions, structure) -> tuple[list[Need], set[str]]:
     """What must be determined for each output, and the outputs whose factor is positive.
 
-    A structure that looks at the mass makes the mass a need of every output that carries structure.
+    What a structure model looks at is a need of every output that carries structure; radiation needs the mass, and
+    ionisation the radius too.
     """
-    unit = np.eye(len(LATENTS))
-    mass = tuple(unit[LATENTS.index("mass")])
+    unit = dict(zip(LATENTS, map(tuple, np.eye(len(LATENTS))), strict=True))
     needs, bound = [], set()
     for name in outputs:
         output = OUTPUTS[name]
-        looks_at_mass = structure.needs_mass and output.carries_structure(conventions)
-        monomial = tuple(map(float, (*output.exponents, 0.0)))
-        needs.append(Need(name, (monomial, mass) if looks_at_mass else (monomial,)))
+        kind = output.kind(conventions)
+        looks_at = set(structure.needs if kind != Kind.NONE else ())
+        if kind in (Kind.BINDING, Kind.INTERNAL):
+            looks_at |= {"mass"} if conventions.pressure != "gas" else set()
+            looks_at |= {"mass", "radius"} if conventions.ionisation else set()
+        monomial = (*map(float, output.exponents), *[0.0] * (len(LATENTS) - len(output.exponents)))
+        needs.append(Need(name, (monomial, *(unit[latent] for latent in LATENTS if latent in looks_at))))
         if output.factor(conventions) > 0.0:
             bound.add(name)
     return needs, bound
@@ -235,12 +188,17 @@ def _eliminate(stars, rows, chosen, exact, given, conventions, structure) -> tup
     kept = np.flatnonzero(~exact & (np.abs(design).max(axis=1, initial=0.0) > 1e-9))
     names = [need.name for need in given]
     wanted = np.array([need.monomials[0] for need in given]).reshape(len(given), len(LATENTS))
-    structured = [OUTPUTS[name].carries_structure(conventions) for name in names]
-    constant = [OUTPUTS[name].log_constant(conventions) + np.log(OUTPUTS[name].factor(conventions)) for name in names]
+    kinds = [OUTPUTS[name].kind(conventions) for name in names]
+    binding = stars.binding(conventions.binding, conventions.ionisation).take(rows)
+    constant = [
+        OUTPUTS[name].log_constant(conventions)
+        + np.log(OUTPUTS[name].factor(conventions) if binding.constant else OUTPUTS[name].prefactor(conventions))
+        for name in names
+    ]
     known = [n for n, latent in enumerate(LATENTS) if determined(tuple(np.eye(len(LATENTS))[n]), chosen)]
     latent = np.eye(len(LATENTS))[known]
-    if LATENTS.index("mass") in known or not structure.needs_mass:
-        names, structured, constant = [*names, COEFFICIENT], [*structured, True], [*constant, 0.0]
+    if {LATENTS.index(latent) for latent in structure.needs} <= set(known):
+        names, kinds, constant = [*names, COEFFICIENT], [*kinds, Kind.COEFFICIENT], [*constant, 0.0]
         wanted = np.concatenate([wanted, np.zeros((1, len(LATENTS)))])
     problem = Problem(
         rows=rows,
@@ -253,11 +211,12 @@ def _eliminate(stars, rows, chosen, exact, given, conventions, structure) -> tup
         outputs=tuple(names),
         weights=wanted @ basis.T @ free,
         constant=np.array(constant) + np.einsum("or,sr->so", wanted @ basis.T, fixed),
-        structured=np.array(structured, bool),
+        kinds=np.array(kinds, int),
         latents=tuple(LATENTS[n] for n in known),
         latent_weights=latent @ basis.T @ free,
         latent_constant=np.einsum("lr,sr->sl", latent @ basis.T, fixed),
-        structure=structure,
+        interior=Interior(structure),
+        binding=binding,
     )
     return problem, conflict
 
@@ -298,83 +257,3 @@ def _idle_correlations(stars: Stars, problem: Problem, chosen, exact) -> np.ndar
         if len(idle.intersection(pair)) == 1 and set(problem.inputs).intersection(pair):
             found |= values[problem.rows] != 0.0
     return found
-
-
-def _applicable(problems, stars: Stars, structure: StructureModel, notes: Notes) -> list[Problem]:
-    """Take out the stars that the structure model does not describe, decided on the medians.
-
-    A star stated evolved is described only by a model that says so: its core holds the energy.
-    """
-    kept = []
-    for problem in problems:
-        state = stars.evolutionary_state[problem.rows]
-        notes.flags[problem.rows[state == EvolutionaryState.NOT_UNDERSTOOD]] |= int(Flag.STATE_NOT_UNDERSTOOD)
-        if not problem.structured.any():
-            kept.append(problem)
-            continue
-        evolved = state == EvolutionaryState.EVOLVED
-        if "evolved" in structure.applies_to.evolutionary_state:
-            evolved = np.zeros(len(problem), bool)
-        outside = _outside(problem, state, structure) & ~evolved
-        sentence = f"prior {structure.name} applies only to {_domain(structure)}; choose another prior"
-        kept += _without_structure(problem, outside, Status.OUTSIDE_CALIBRATION, sentence, notes)
-        sentence = STATUS_TEXT[Status.EVOLVED_OR_CONTRACTING].sentence
-        kept += _without_structure(problem, evolved, Status.EVOLVED_OR_CONTRACTING, sentence, notes)
-        described = problem.take(np.flatnonzero(~outside & ~evolved))
-        _note_size(described, state[~outside & ~evolved], notes)
-        kept.append(described)
-    return [problem for problem in kept if len(problem)]
-
-
-def _outside(problem: Problem, state: np.ndarray, structure: StructureModel) -> np.ndarray:
-    """Where a star's stated evolution or median mass lies outside what a model applies to, (star,)."""
-    limits = structure.applies_to
-    outside = np.zeros(len(problem), bool)
-    if limits.evolutionary_state:
-        allowed = [EvolutionaryState[word.replace("-", "_").upper()] for word in limits.evolutionary_state]
-        allowed += [EvolutionaryState.UNKNOWN, EvolutionaryState.NOT_UNDERSTOOD]
-        outside |= ~np.isin(state, allowed)
-    if limits.mass is not None:
-        mass = np.exp(problem.log_latents(problem.log_median)[:, problem.latent("mass")])
-        outside |= (mass < limits.mass[0]) | (mass > limits.mass[1])
-    return outside
-
-
-def _asked_with_structure(problem: Problem) -> list[str]:
-    """Outputs asked for that carry structure; the coefficient comes along unasked."""
-    return [n for n, has in zip(problem.outputs, problem.structured, strict=True) if has and n != COEFFICIENT]
-
-
-def _note_size(problem: Problem, state: np.ndarray, notes: Notes) -> None:
-    """Mark stars too large for the main sequence, unless they are stated to be contracting; on the medians."""
-    if not {"mass", "radius"} <= set(problem.latents) or not len(problem) or not _asked_with_structure(problem):
-        return
-    latents = np.exp(problem.log_latents(problem.log_median))
-    where = place(latents[:, problem.latent("mass")], latents[:, problem.latent("radius")])
-    where = np.where(state == EvolutionaryState.PRE_MAIN_SEQUENCE, Place.UNKNOWN, where)
-    notes.flags[problem.rows[where == Place.CONTRACTING]] |= int(Flag.TAKEN_AS_CONTRACTING)
-    notes.add(problem.rows[where == Place.BEYOND], Status.DOUBTFUL, STATUS_TEXT[Status.DOUBTFUL].sentence)
-
-
-def _domain(structure: StructureModel) -> str:
-    limits = structure.applies_to
-    words = [f"{limits.mass[0]:g} to {limits.mass[1]:g} solar masses"] if limits.mass else []
-    if limits.evolutionary_state:
-        words.append("stars stated " + " or ".join(limits.evolutionary_state))
-    return ", ".join(words)
-
-
-def _without_structure(problem: Problem, rows: np.ndarray, status: Status, sentence: str, notes: Notes) -> list:
-    """Give rows a status; what carries no structure stays available to them (`partial`)."""
-    rows = np.flatnonzero(rows)
-    plain = np.flatnonzero(~problem.structured)
-    if not len(rows):
-        return []
-    if not len(plain):
-        notes.set(problem.rows[rows], status, sentence)
-        return []
-    part = problem.take(rows).only(plain)
-    lacking = _asked_with_structure(problem)
-    if lacking:
-        notes.add(problem.rows[rows], Status.PARTIAL, f"no {', '.join(map(label, lacking))}: {sentence}")
-    return [part]

@@ -14,12 +14,14 @@ from typing import Final
 import numpy as np
 
 from stellerg import constants as const
+from stellerg.binding import Binding, Kind
 from stellerg.errors import InputError
 
 __all__ = [
     "DEFAULT_OUTPUTS",
     "ENERGY_UNITS",
     "OUTPUTS",
+    "PRESSURES",
     "TIME_CONVENTIONS",
     "Conventions",
     "Output",
@@ -28,6 +30,7 @@ __all__ = [
 ]
 
 DEFAULT_OUTPUTS = ("binding_energy", "kelvin_helmholtz_time")
+PRESSURES = ("gas", "gas+radiation")
 ENERGY_UNITS = {"erg": 1e-7, "J": 1.0}  # in joules
 MONATOMIC: Final = 5.0 / 3.0
 
@@ -84,6 +87,10 @@ class Conventions:
         erg or J.
     nuclear_mass_fraction, nuclear_efficiency : float
         Share of the mass that burns and share of its rest energy set free, for `nuclear_time`.
+    pressure : str
+        gas, or gas+radiation; a calibrated coefficient always takes the latter.
+    ionisation : bool
+        Whether the energy that ionised the star counts.
     """
 
     time: str = "total"
@@ -91,6 +98,8 @@ class Conventions:
     energy_unit: str = "erg"
     nuclear_mass_fraction: float = 0.1
     nuclear_efficiency: float = 0.007
+    pressure: str = "gas"
+    ionisation: bool = False
 
     def __post_init__(self):
         if self.time not in TIME_CONVENTIONS:
@@ -100,11 +109,18 @@ class Conventions:
         for name in ("nuclear_mass_fraction", "nuclear_efficiency"):
             if not 0.0 < getattr(self, name) <= 1.0:
                 raise InputError(f"{name}: must lie in (0, 1], got {getattr(self, name)}")
+        if self.pressure not in PRESSURES:
+            raise InputError(f"pressure: {self.pressure!r} is unknown; choose from {', '.join(PRESSURES)}")
         binding_factor(self.adiabatic_index)
 
     @property
+    def binding(self) -> Binding:
+        """How the binding energy follows from |Omega|, but for the energies of ionisation of the stars."""
+        return Binding(self.factor, self.pressure != "gas")
+
+    @property
     def factor(self) -> float:
-        """Share of |Omega| that is the binding energy."""
+        """Share of |Omega| that is the binding energy of the gas alone."""
         return binding_factor(self.adiabatic_index)
 
     @property
@@ -114,6 +130,10 @@ class Conventions:
             "monatomic ideal gas" if self.adiabatic_index == MONATOMIC else f"adiabatic index {self.adiabatic_index:g}"
         )
         share = "abs(Omega)/2" if self.factor == 0.5 else f"{self.factor:.6g} abs(Omega)"
+        if self.pressure != "gas":
+            share, gas = f"beta {share}", f"{gas} and radiation"
+        if self.ionisation:
+            share, gas = f"{share} - e M", f"{gas}, less the energy of ionisation"
         return f"abs(E) = {share} ({gas})"
 
     @property
@@ -150,17 +170,25 @@ class Output:
             return TIME_CONVENTIONS[conventions.time].structure
         return self.name not in ("free_fall_time", "nuclear_time")
 
+    def kind(self, conventions: Conventions) -> Kind:
+        """How structure enters."""
+        if not self.carries_structure(conventions):
+            return Kind.NONE
+        if self.name == "kelvin_helmholtz_time":
+            return Kind.BINDING if TIME_CONVENTIONS[conventions.time].binding else Kind.COEFFICIENT
+        return {"potential_energy": Kind.COEFFICIENT, "internal_energy": Kind.INTERNAL}.get(self.name, Kind.BINDING)
+
+    def prefactor(self, conventions: Conventions) -> float:
+        """Pure number beside the share of |Omega|."""
+        if self.name == "kelvin_helmholtz_time":
+            return TIME_CONVENTIONS[conventions.time].prefactor
+        if self.name == "nuclear_time":
+            return conventions.nuclear_mass_fraction * conventions.nuclear_efficiency
+        return 1.0
+
     def factor(self, conventions: Conventions) -> float:
-        """Share of |Omega|, or other pure number; not positive where the star is not bound."""
-        f = conventions.factor
-        convention = TIME_CONVENTIONS[conventions.time]
-        return {
-            "potential_energy": 1.0,
-            "internal_energy": 1.0 - f,
-            "kelvin_helmholtz_time": convention.prefactor * (f if convention.binding else 1.0),
-            "free_fall_time": 1.0,
-            "nuclear_time": conventions.nuclear_mass_fraction * conventions.nuclear_efficiency,
-        }.get(self.name, f)
+        """Share of |Omega| of the gas alone, or other pure number; not positive where the star is not bound."""
+        return self.prefactor(conventions) * conventions.binding.constant_share(self.kind(conventions))
 
     def log_constant(self, conventions: Conventions) -> float:
         """ln of the output in its unit at M = R = L = w = 1, without the factor."""

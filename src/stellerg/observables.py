@@ -1,7 +1,8 @@
-"""What can be measured: each observable is a row of exponents over (mass, radius, luminosity, distance).
+"""What can be measured: each observable is a row of exponents over (mass, radius, luminosity, distance, mean
+molecular weight).
 
-``ln(observable) = reference + exponents . (ln M, ln R, ln L, ln d)`` with M, R, L in nominal solar units and d
-in parsec. Imports `measured` and the leaves.
+``ln(observable) = reference + exponents . (ln M, ln R, ln L, ln d, ln mu)`` with M, R, L in nominal solar units, d
+in parsec and mu in atomic mass constants. Imports `measured` and the leaves.
 """
 
 import math
@@ -12,9 +13,18 @@ from functools import lru_cache
 from stellerg import constants as const
 from stellerg.measured import Scale
 
-__all__ = ["LATENTS", "OBSERVABLES", "SELECTION_ORDER", "Observable", "SolarReferences", "unit_conversion"]
+__all__ = [
+    "COMPOSITION",
+    "LATENTS",
+    "MEASURABLE",
+    "OBSERVABLES",
+    "SELECTION_ORDER",
+    "Observable",
+    "SolarReferences",
+    "unit_conversion",
+]
 
-LATENTS = ("mass", "radius", "luminosity", "distance")
+LATENTS = ("mass", "radius", "luminosity", "distance", "mean_molecular_weight")
 
 LN10 = math.log(10.0)
 _RADIANS_PER_MAS = math.pi / (180.0 * 3600.0e3)
@@ -39,7 +49,7 @@ class Observable:
     ----------
     name : str
     exponents : tuple of float
-        Over (mass, radius, luminosity, distance).
+        Over `LATENTS`.
     reference : float
         ln(observable) in `unit` at M = R = L = 1 nominal solar unit, d = 1 pc.
     unit : str
@@ -52,7 +62,7 @@ class Observable:
     """
 
     name: str
-    exponents: tuple[float, float, float, float]
+    exponents: tuple[float, ...]
     reference: float
     unit: str
     scale: Scale
@@ -70,7 +80,7 @@ _LN_T = math.log(const.NOMINAL_SOLAR_EFFECTIVE_TEMPERATURE)
 _LN_FLUX = math.log(_FLUX_AT_1_PC)
 
 OBSERVABLES: dict[str, Observable] = {
-    row[0]: Observable(*row)
+    row[0]: Observable(row[0], (*row[1], *(0,) * (len(LATENTS) - len(row[1]))), *row[2:])
     for row in (
         ("mass", (1, 0, 0, 0), 0.0, "solMass", _LINEAR, "mass, nominal solar"),
         ("radius", (0, 1, 0, 0), 0.0, "solRad", _LINEAR, "radius, nominal solar"),
@@ -156,8 +166,19 @@ OBSERVABLES: dict[str, Observable] = {
             _MAG,
             "IAU 2015 zero point, mag",
         ),
+        ("mean_molecular_weight", (0, 0, 0, 0, 1), 0.0, "", _LINEAR, "mean molecular weight, atomic mass constants"),
     )
 }
+
+# What composition is made of: it gives the mean molecular weight and the energy of ionisation.
+COMPOSITION: dict[str, Observable] = {
+    name: Observable(name, (0,) * len(LATENTS), 0.0, "", _LINEAR, meaning)
+    for name, meaning in (
+        ("hydrogen_mass_fraction", "hydrogen mass fraction X"),
+        ("metal_mass_fraction", "metal mass fraction Z"),
+    )
+}
+MEASURABLE: dict[str, Observable] = {**OBSERVABLES, **COMPOSITION}
 
 # The order in which the first determining set is taken when the user names none: direct measurements first,
 # temperature before luminosity (which catalogues often compute from it), a distance that was measured before one

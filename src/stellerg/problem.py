@@ -4,19 +4,23 @@ This is all that an engine sees. With theta the combinations of (ln M, ln R, ln 
 determine,
 
     ln obs_j = base_j + sum_r design_jr theta_r          (the j-th measured quantity)
-    ln Y_o   = constant_o + sum_r weights_or theta_r + [S(u | ln M, ln R) where the output carries structure]
+    ln Y_o   = constant_o + sum_r weights_or theta_r + [q + ln f(q, ln M, ln R, ln mu)],   q = S(u | ln M, ln R)
 
-and z_j(theta) the normal scores of the measured quantities, C their correlations and J = dz/dtheta, the
+where the bracket stands for outputs that carry structure, and ln f for those that follow the binding energy.
+
+With z_j(theta) the normal scores of the measured quantities, C their correlations and J = dz/dtheta, the
 density of theta is exp(-z' C^-1 z/2) |J' C^-1 J|^(1/2). Exact values were eliminated before.
 """
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
 
+from stellerg.binding import MEAN_MOLECULAR_WEIGHT, Binding, Kind
 from stellerg.measured import Measured, Scale
-from stellerg.structure.model import StructureModel
+from stellerg.structure.interior import Interior
 
 __all__ = ["COEFFICIENT", "Problem"]
 
@@ -48,13 +52,16 @@ class Problem:
         d ln Y/d theta at fixed structure.
     constant : ndarray, (star, output)
         ln Y at theta = 0 and ln w = 0.
-    structured : ndarray of bool, (output,)
-        Whether an output carries ln w.
+    kinds : ndarray of int, (output,)
+        `stellerg.binding.Kind`: how structure enters each output.
     latents : tuple of str, (latent,)
-        Which of mass, radius, luminosity, distance are determined.
+        Which of mass, radius, luminosity, distance, mean molecular weight are determined.
     latent_weights : ndarray, (latent, parameter)
     latent_constant : ndarray, (star, latent)
-    structure : StructureModel
+    interior : Interior
+        S(u | ln M, ln R).
+    binding : Binding
+        ln f; where it is one number, it stands in `constant`.
     """
 
     rows: np.ndarray
@@ -67,11 +74,12 @@ class Problem:
     outputs: tuple[str, ...]
     weights: np.ndarray
     constant: np.ndarray
-    structured: np.ndarray
+    kinds: np.ndarray
     latents: tuple[str, ...]
     latent_weights: np.ndarray
     latent_constant: np.ndarray
-    structure: StructureModel
+    interior: Interior
+    binding: Binding
 
     def __len__(self) -> int:
         return len(self.rows)
@@ -87,6 +95,8 @@ class Problem:
             correlation=None if self.correlation is None else self.correlation[which],
             constant=self.constant[which],
             latent_constant=self.latent_constant[which],
+            interior=self.interior.take(which),
+            binding=self.binding.take(which),
         )
 
     def only(self, outputs: np.ndarray) -> "Problem":
@@ -96,7 +106,7 @@ class Problem:
             outputs=tuple(self.outputs[o] for o in outputs),
             weights=self.weights[outputs],
             constant=self.constant[:, outputs],
-            structured=self.structured[outputs],
+            kinds=self.kinds[outputs],
         )
 
     def split(self, size: int):
@@ -104,6 +114,11 @@ class Problem:
         for start in range(0, len(self), size):
             piece = np.arange(start, min(start + size, len(self)))
             yield slice(piece[0], piece[-1] + 1), self.take(piece)
+
+    @property
+    def structured(self) -> np.ndarray:
+        """Whether each output carries ln w, (output,)."""
+        return self.kinds != Kind.NONE
 
     @property
     def over_determined(self) -> bool:
@@ -190,6 +205,30 @@ class Problem:
     def variance_of(self, weights: np.ndarray) -> np.ndarray:
         """Variance of a weighted sum of ln obs, (star,); weights (star, input)."""
         return np.einsum("sj,sjk,sk->s", weights, self.log_covariance, weights)
+
+    def log_structure(self, q: np.ndarray, log_latents: Mapping[str, np.ndarray]) -> np.ndarray:
+        """What structure adds to ln Y.
+
+        Parameters
+        ----------
+        q : ndarray, (star, m)
+            ln w.
+        log_latents : mapping of str to ndarray, (star, m)
+            ln(mass, radius, mean molecular weight), as far as they are determined.
+
+        Returns
+        -------
+        ndarray, (star, output, m)
+        """
+        out = np.zeros((len(q), len(self.kinds), q.shape[-1]))
+        for kind in np.unique(self.kinds[self.structured]):
+            added = q
+            if not self.binding.constant and kind != Kind.COEFFICIENT:
+                molecular = log_latents.get("mean_molecular_weight", np.log(MEAN_MOLECULAR_WEIGHT))
+                here = (log_latents["mass"], log_latents.get("radius"), molecular)
+                added = q + self.binding.log_share(Kind(kind), q, *here)
+            out[:, self.kinds == kind] = added[:, None]
+        return out
 
     def latent(self, name: str) -> int:
         """Position of a latent quantity."""

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import numpy as np
 
-from stellerg.assembly import Notes, assemble
+from stellerg.assembly import assemble
 from stellerg.checks.budget import budget
 from stellerg.checks.validity import flags
 from stellerg.energetics import DEFAULT_OUTPUTS, OUTPUTS, Conventions
@@ -15,12 +15,14 @@ from stellerg.engines.least_squares import fit
 from stellerg.engines.linear import Linear
 from stellerg.engines.sampling import Draws, Plan, sample
 from stellerg.errors import InputError
+from stellerg.notes import Notes
 from stellerg.observables import OBSERVABLES
 from stellerg.posterior import Piece, Posterior
 from stellerg.problem import Problem
 from stellerg.stars import Stars
-from stellerg.status import Status
-from stellerg.structure.files import load_prior
+from stellerg.status import Flag, Status
+from stellerg.structure.calibration import Calibration
+from stellerg.structure.files import load_prior, main_sequence
 from stellerg.structure.model import StructureModel
 
 __all__ = ["propagate"]
@@ -30,7 +32,7 @@ def propagate(
     stars: Stars,
     *,
     outputs: Sequence[str] = DEFAULT_OUTPUTS,
-    prior: str | Path | StructureModel = "uniform-index",
+    prior: str | Path | StructureModel | Calibration = "uniform-index",
     engine: str | Engine = "auto",
     conventions: Conventions | None = None,
     use: Sequence[str] | None = None,
@@ -43,7 +45,7 @@ def propagate(
     stars : Stars
     outputs : sequence of str
         Of `stellerg.energetics.OUTPUTS`.
-    prior : str, Path or StructureModel
+    prior : str, Path, StructureModel or Calibration
         A shipped structure model by name, a .toml file, or a loaded model.
     engine : str or Engine
         ``auto`` (for each star the cheapest engine that is exact for it), a name of
@@ -71,11 +73,11 @@ def propagate(
     if seed < 0:
         raise InputError(f"seed: must not be negative, got {seed}")
     conventions = conventions or Conventions()
-    structure = prior if isinstance(prior, StructureModel) else load_prior(prior)
+    structure = load_prior(prior) if isinstance(prior, str | Path) else prior
     outputs, use = _listed(outputs), None if use is None else _listed(use)
     choices = _choices(engine, seed)
     assembly = assemble(stars, outputs, conventions, structure, use)
-    notes = assembly.notes
+    conventions, notes = assembly.conventions, assembly.notes
     used = np.full(len(stars), -1, np.int8)
     why = np.zeros(len(stars), np.int16)
     reasons = [""]
@@ -101,6 +103,7 @@ def propagate(
                 answer = answer.take(np.flatnonzero(~failed))
             if len(part):
                 pieces.append(Piece(part.rows, answer, Linear().solve(part), *budget(answer)))
+    excluded = np.flatnonzero(notes.flags & Flag.PRIOR_EXCLUDES_CALIBRATION)
     return Posterior(
         star=stars.identifier,
         outputs=assembly.outputs,
@@ -127,7 +130,21 @@ def propagate(
         probability=probability,
         pieces=tuple(pieces),
         sampler=_sampler,
+        calibrated_medians=_calibrated_medians(stars, excluded, outputs, assembly.conventions, use, seed),
     )
+
+
+def _calibrated_medians(stars: Stars, rows, outputs, conventions, use, seed) -> dict[str, np.ndarray]:
+    """Medians under the calibration of the outputs that carry structure, (star,) each; NaN but for some rows."""
+    carrying = [name for name in outputs if OUTPUTS[name].carries_structure(conventions)]
+    medians = {name: np.full(len(stars), np.nan) for name in carrying}
+    if len(rows) and carrying:
+        under = propagate(
+            stars.take(rows), outputs=carrying, prior=main_sequence(), conventions=conventions, use=use, seed=seed
+        )
+        for name in carrying:
+            medians[name][rows] = under.median(name)
+    return medians
 
 
 def _listed(names: str | Sequence[str]) -> tuple[str, ...]:

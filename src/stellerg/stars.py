@@ -6,11 +6,13 @@ from enum import IntEnum
 
 import numpy as np
 
+from stellerg.binding import Binding
+from stellerg.composition import mass_fractions, with_molecular_weight
 from stellerg.errors import InputError
 from stellerg.inputs import measured_from
 from stellerg.keyed_random import hash_identifiers
 from stellerg.measured import Measured
-from stellerg.observables import OBSERVABLES, SolarReferences
+from stellerg.observables import COMPOSITION, MEASURABLE, OBSERVABLES, SolarReferences
 
 __all__ = ["EvolutionaryState", "Stars", "state_codes"]
 
@@ -63,6 +65,8 @@ class Stars:
             object.__setattr__(self, "key", hash_identifiers(self.identifier))
         if self.evolutionary_state is None:
             object.__setattr__(self, "evolutionary_state", np.zeros(len(self.identifier), np.uint8))
+        if set(COMPOSITION) & set(self.measured):
+            object.__setattr__(self, "measured", with_molecular_weight(self.measured))
 
     def __len__(self) -> int:
         return len(self.identifier)
@@ -107,12 +111,12 @@ class Stars:
         >>> Stars.of("K-7", mass="1.02 ± 0.03", radius="1.05(2)", luminosity="1.10 +0.12 -0.10")  # doctest: +SKIP
         """
         for name in (*observables, *(unit or ()), *(shape if isinstance(shape, Mapping) else ())):
-            if name not in OBSERVABLES:
-                raise InputError(f"{name!r} is not an observable; choose from {', '.join(OBSERVABLES)}")
+            if name not in MEASURABLE:
+                raise InputError(f"{name!r} is not an observable; choose from {', '.join(MEASURABLE)}")
         shapes = shape if isinstance(shape, Mapping) else dict.fromkeys(observables, shape)
         units = unit or {}
         measured = {
-            name: measured_from(OBSERVABLES[name], given, shape=shapes.get(name), unit=units.get(name, ""))
+            name: measured_from(MEASURABLE[name], given, shape=shapes.get(name), unit=units.get(name, ""))
             for name, given in observables.items()
             if given is not None
         }
@@ -141,6 +145,14 @@ class Stars:
             evolutionary_state=np.concatenate([p.evolutionary_state for p in parts]),
             key=np.concatenate([p.key for p in parts]),
         )
+
+    def binding(self, binding: Binding, ionisation: bool) -> Binding:
+        """How the stars are bound, with their energies of ionisation if these count."""
+        if not ionisation:
+            return binding
+        from stellerg.structure.radiation import ionisation_energy
+
+        return replace(binding, ionisation=ionisation_energy(*mass_fractions(self.measured, len(self))))
 
     def take(self, rows: np.ndarray) -> "Stars":
         """Return the rows asked for."""

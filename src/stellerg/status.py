@@ -61,6 +61,12 @@ class Flag(IntFlag):
     FEW_EFFECTIVE_DRAWS = 128
     STATE_NOT_UNDERSTOOD = 256
     TAKEN_AS_CONTRACTING = 512
+    RADIUS_INFLATED = 1024
+    NEAR_BOUNDARY = 2048
+    PRIOR_EXCLUDES_CALIBRATION = 4096
+    RADIATION_NEGLECTED = 8192
+    PRIOR_DATA_CONFLICT = 16384
+    USED_IN_TRAINING = 32768
 
 
 @dataclass(frozen=True)
@@ -183,6 +189,33 @@ FLAG_TEXT: dict[Flag, Text] = {
         "taken-as-contracting",
         "Too large for the main sequence and below 0.7 solar masses, where no single star has evolved: still "
         "contracting (a stripped star in a binary is not covered).",
+    ),
+    Flag.RADIUS_INFLATED: Text(
+        "radius-inflated",
+        "Larger than any single star of its mass at the age of the Universe, and not evolved: the coefficient "
+        "is held at its value for the largest such star, with a wider scatter (judgement).",
+    ),
+    Flag.NEAR_BOUNDARY: Text(
+        "near-boundary",
+        "More than 5 % of the probability of mass and radius lies beyond a boundary of the calibration (judgement).",
+    ),
+    Flag.PRIOR_EXCLUDES_CALIBRATION: Text(
+        "prior-excludes-calibration",
+        "The coefficient calibrated for main-sequence stars of this mass and radius lies outside the central 95.45 % "
+        "of the prior: compare the medians under the calibration, or use prior main-sequence (judgement).",
+    ),
+    Flag.RADIATION_NEGLECTED: Text(
+        "radiation-neglected",
+        "Radiation carries more than 3 % of the pressure and is not counted: use pressure gas+radiation (judgement).",
+    ),
+    Flag.PRIOR_DATA_CONFLICT: Text(
+        "prior-data-conflict",
+        "A structure observable lies outside what the prior allows: two-sided predictive probability below 0.01 "
+        "(judgement).",
+    ),
+    Flag.USED_IN_TRAINING: Text(
+        "used-in-training",
+        "The prior was learnt from stars that include this one: its measurements count twice.",
     ),
     Flag.STATE_NOT_UNDERSTOOD: Text(
         "state-not-understood",

@@ -3,8 +3,10 @@
 import numpy as np
 
 from stellerg.engines.answer import Answer
+from stellerg.engines.first_order import structure_term
 from stellerg.engines.intervals import mass_score
 from stellerg.problem import COEFFICIENT
+from stellerg.structure.calibration import Calibration
 from stellerg.structure.model import StructureModel
 
 __all__ = ["CORRELATIONS", "MASS_AND_STRUCTURE", "STRUCTURE", "budget", "tail_names"]
@@ -17,9 +19,10 @@ STRUCTURE = "structure"
 def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     """Shares of the variance of ln Y.
 
-    Variances of the measured quantities are those of their assigned distributions in ln; correlations enter
-    to first order in the normal scores (exactly for log-normal inputs). A structure model that changes with the
-    mass makes the two share a part of the variance (``mass_and_structure``).
+    Variances of the measured quantities are those of their assigned distributions in ln; correlations enter to first
+    order in the normal scores (exactly for log-normal inputs). A calibrated coefficient follows mass and radius: their
+    net effect counts. A structure model that changes with the mass makes the two share a part of the variance
+    (``mass_and_structure``).
 
     Parameters
     ----------
@@ -34,17 +37,20 @@ def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     """
     problem = answer.problem
     count = len(problem.inputs)
-    weights = np.broadcast_to(problem.input_weights, (len(problem), len(problem.outputs), count))
+    term = structure_term(problem, problem.log_median)
+    weights = problem.input_weights + term.weights
     covariance = problem.log_covariance
-    tail = tail_names(problem.structure)
+    tail = tail_names(problem.interior.model)
     parts = np.zeros((len(problem), len(problem.outputs), count + len(tail)))
     parts[:, :, :count] = np.square(weights) * np.einsum("sjj->sj", covariance)[:, None, :]
     if problem.correlation is not None:
         shared = np.where(np.eye(count, dtype=bool), 0.0, covariance)
         parts[:, :, count] = np.einsum("soj,sjk,sok->so", weights, shared, weights)
     if COEFFICIENT in problem.outputs:
-        spread = answer.log_sd[:, problem.outputs.index(COEFFICIENT)] ** 2
-        parts[:, :, -1] = np.where(problem.structured, spread[:, None], 0.0)
+        spread = answer.log_sd[:, [problem.outputs.index(COEFFICIENT)]]
+        if problem.interior.relation is not None:  # of which mass and radius carry a part, counted with them
+            spread = term.spread
+        parts[:, :, -1] = np.where(problem.structured, spread**2, 0.0)
         if MASS_AND_STRUCTURE in tail:
             straddling = (mass_score(problem).interval < 0)[:, None] & problem.structured
             shared = answer.log_sd**2 - parts.sum(axis=-1)
@@ -56,7 +62,7 @@ def budget(answer: Answer) -> tuple[tuple[str, ...], np.ndarray]:
     return (*problem.inputs, *tail), shares
 
 
-def tail_names(structure: StructureModel) -> tuple[str, ...]:
+def tail_names(structure: StructureModel | Calibration) -> tuple[str, ...]:
     """Names in a budget beside the measured quantities."""
-    shared = (MASS_AND_STRUCTURE,) if len(structure.intervals) > 1 else ()
+    shared = (MASS_AND_STRUCTURE,) if len(getattr(structure, "intervals", ())) > 1 else ()
     return (CORRELATIONS, *shared, STRUCTURE)

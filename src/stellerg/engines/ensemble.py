@@ -105,9 +105,10 @@ class Target:
         outputs = np.einsum("or,...r->o...", problem.weights, theta)
         outputs = outputs + problem.constant[0].reshape(-1, *([1] * u.ndim))
         if problem.structured.any():
-            known = dict(zip(problem.latents, latents, strict=True))
-            coefficient = problem.structure.quantile(u, known.get("mass"), known.get("radius"))
-            outputs[problem.structured] += coefficient
+            # one star: its draws along the second axis
+            known = {name: values.reshape(1, -1) for name, values in zip(problem.latents, latents, strict=True)}
+            q = problem.interior.quantile(u.reshape(1, -1), known.get("mass"), known.get("radius"))
+            outputs = outputs + problem.log_structure(q, known)[0].reshape(outputs.shape)
         return u, latents, outputs
 
 
@@ -261,8 +262,11 @@ def _folder(checkpoint: Path, problem: Problem, settings: Settings) -> Path:
     options = {f.name: getattr(settings, f.name) for f in fields(settings)}
     options.pop("most_steps")  # a longer run goes on from a shorter one
     options.pop("times")
-    digest.update(repr((sorted(options.items()), problem.inputs, problem.outputs, problem.structure.text)).encode())
-    arrays = [problem.design, problem.base, problem.weights, problem.constant, problem.structured]
+    binding = problem.binding
+    words = [sorted(options.items()), problem.inputs, problem.outputs, problem.interior.model.text]
+    digest.update(repr((*words, binding.gas, binding.radiation)).encode())
+    arrays = [problem.design, problem.base, problem.weights, problem.constant, problem.kinds]
+    arrays += [binding.ionisation] if binding.ionisation is not None else []
     arrays += [problem.correlation] if problem.correlation is not None else []
     for measured in problem.measured:
         arrays += [measured.value, measured.upper, measured.lower, measured.shape, np.array(measured.scale.value)]

@@ -53,7 +53,7 @@ class MassScore:
 def mass_score(problem: Problem) -> MassScore:
     """Place the masses of a problem among the intervals of its structure model."""
     count = len(problem)
-    boundaries = problem.structure.edges
+    boundaries = problem.interior.edges
     nowhere = np.zeros(count, int)
     if not len(boundaries) or "mass" not in problem.latents:
         none = np.zeros((count, len(boundaries)))
@@ -109,7 +109,7 @@ def moments_of_structure(
     -------
     mean, variance, covariance : ndarray, (m,)
     """
-    intervals = problem.structure.intervals
+    intervals = problem.interior.intervals
     first = np.zeros(len(rows))
     second = np.zeros(len(rows))
     moved = np.zeros(len(rows))

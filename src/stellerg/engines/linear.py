@@ -9,27 +9,20 @@ lacks the term (u/M)^2 = 9 %; under `wide-index` the 95 % interval in Y reaches 
 Structure that is a mixture, or changes within the range of the mass, has no derivative: refused.
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from typing import ClassVar
 
 import numpy as np
 from scipy.special import ndtr, ndtri
 
+from stellerg.engines.first_order import StructureTerm, has_derivative, structure_expectation, structure_term
 from stellerg.engines.intervals import mass_score
 from stellerg.errors import EngineError
 from stellerg.problem import Problem
 from stellerg.status import Status
-from stellerg.structure.model import Component
 
-__all__ = ["Linear", "LinearAnswer", "structure_expectation"]
-
-
-def structure_expectation(component: Component) -> tuple[float, float, float]:
-    """Expectation and standard deviation of the variable a density is stated on, and d ln w/d(variable) there."""
-    mean, sd = float(component.family.mean), float(component.family.standard_deviation)
-    slope = float(np.exp(-component.coordinate.log_slope(component.coordinate.to_log_coefficient(mean))))
-    return mean, sd, slope
+__all__ = ["Linear", "LinearAnswer"]
 
 
 @dataclass(frozen=True)
@@ -56,10 +49,7 @@ class Linear:
 
     def accepts(self, problem: Problem) -> np.ndarray:
         """Index into `reasons`, (star,)."""
-        interval = mass_score(problem).interval
-        single = np.array([len(piece.mixture.components) == 1 for piece in problem.structure.intervals])
-        refused = (interval < 0) | ~single[np.maximum(interval, 0)]
-        return (refused & problem.structured.any()).astype(int)
+        return (~has_derivative(problem) & problem.structured.any()).astype(int)
 
     def solve(self, problem: Problem) -> "LinearAnswer":
         """Answer a problem."""
@@ -89,43 +79,35 @@ class LinearAnswer:
 
     @cached_property
     def relative_gradient(self) -> np.ndarray:
-        """Relative change of Y for one standard deviation of each input, (star, output, input)."""
+        """Relative change of Y for one standard deviation of each input, structure included, (star, output, input)."""
         problem = self.problem
         steps = [_log_step(m) for m in problem.measured]
         relative = np.stack(steps, axis=1) if steps else np.zeros((len(problem), 0))
-        return problem.input_weights * relative[:, None, :]
+        return (problem.input_weights + self.term.weights) * relative[:, None, :]
+
+    @cached_property
+    def _log_inputs(self) -> np.ndarray:
+        """ln obs at the expectations, (star, input)."""
+        log_inputs = [_log_of_expectation(m) for m in self.problem.measured]
+        return np.stack(log_inputs, axis=1) if log_inputs else np.zeros((len(self.problem), 0))
 
     @cached_property
     def _result(self) -> tuple[np.ndarray, np.ndarray]:
         """ln of the linear value, and its relative standard uncertainty, (star, output)."""
         problem = self.problem
-        log_inputs = [_log_of_expectation(m) for m in problem.measured]
-        log_inputs = np.stack(log_inputs, axis=1) if log_inputs else np.zeros((len(problem), 0))
-        value = problem.log_outputs(log_inputs)
+        value = problem.log_outputs(self._log_inputs) + self.term.value
         gradient = self.relative_gradient
         correlation = np.eye(len(problem.inputs))[None] if problem.correlation is None else problem.correlation
         correlation = np.broadcast_to(correlation, (len(problem), *correlation.shape[1:]))
         variance = np.einsum("soj,sjk,sok->so", gradient, correlation, gradient)
-        if problem.structured.any():
-            shift, spread = self.structure
-            value = value + np.where(problem.structured, shift[:, None], 0.0)
-            variance = variance + np.where(problem.structured, spread[:, None] ** 2, 0.0)
-        return value, np.sqrt(np.maximum(variance, 0.0))
+        return value, np.sqrt(np.maximum(variance + self.term.spread**2, 0.0))
 
     @cached_property
-    def structure(self) -> tuple[np.ndarray, np.ndarray]:
-        """ln w at the expectation, and its standard uncertainty to first order, (star,) each; NaN if refused."""
-        refused = Linear().accepts(self.problem) != 0
-        interval = mass_score(self.problem).interval
-        shift, spread = np.full((2, len(self.problem)), np.nan)
-        for number, piece in enumerate(self.problem.structure.intervals):
-            rows = (interval == number) & ~refused
-            if rows.any():
-                component = piece.mixture.components[0]
-                mean, sd, slope = structure_expectation(component)
-                shift[rows] = component.coordinate.to_log_coefficient(mean)
-                spread[rows] = sd * slope
-        return shift, spread
+    def term(self) -> StructureTerm:
+        """Structure at the expectations of the inputs; NaN where it is refused."""
+        term = structure_term(self.problem, self._log_inputs)
+        refused = (Linear().accepts(self.problem) != 0)[:, None] & self.problem.structured
+        return replace(term, value=np.where(refused, np.nan, term.value), spread=np.where(refused, np.nan, term.spread))
 
     @property
     def value(self) -> np.ndarray:
@@ -183,8 +165,9 @@ class LinearAnswer:
         Returns
         -------
         dict of str to uncertainties.UFloat
-            Inputs in their quoted scale, ``structure`` (in the variable its density is stated on) where it is
-            not exact, and every output in its unit; the outputs are correlated with the inputs.
+            Inputs in their quoted scale, ``structure`` (in the variable its density is stated on; a normal score
+            under a calibration) where it is not exact, and every output in its unit; the outputs are correlated with
+            the inputs.
         """
         import uncertainties
         from uncertainties import umath
@@ -197,24 +180,35 @@ class LinearAnswer:
             values = uncertainties.correlated_values_norm(pairs, problem.correlation[star])
         found = dict(zip(problem.inputs, values, strict=True))
         logs = [m.to_log_of_variable(v, umath.log) for m, v in zip(problem.measured, values, strict=True)]
-        shift: object = 0.0
-        if problem.structured.any():
-            if not np.isfinite(self.structure[0][star]):
-                raise EngineError(f"linear: {Linear.reasons[1]}")
-            number = int(mass_score(problem).interval[star])
-            component = problem.structure.intervals[number].mixture.components[0]
-            mean, sd, slope = structure_expectation(component)
-            shift = float(component.coordinate.to_log_coefficient(mean))
-            if sd > 0.0:
-                found["structure"] = uncertainties.ufloat(mean, sd, tag="structure")
-                shift = shift + slope * (found["structure"] - mean)
+        structure = self._variable(star, found) if problem.structured.any() else {}
         weights = np.broadcast_to(problem.input_weights, (len(problem), *problem.input_weights.shape[1:]))[star]
+        at = self._log_inputs[star]
         for o, name in enumerate(problem.outputs):
-            log_value = problem.constant[star, o] + (shift if problem.structured[o] else 0.0)
+            log_value = problem.constant[star, o] + structure.get(o, 0.0)
             for j, log_input in enumerate(logs):
                 log_value = log_value + weights[o, j] * (log_input - problem.base[star, j])
+                log_value = log_value + self.term.weights[star, o, j] * (log_input - at[j])
             found[name] = umath.exp(log_value)
         return found
+
+    def _variable(self, star: int, found: dict) -> dict:
+        """What structure adds to ln Y of each output that carries it; its variable is entered in `found`."""
+        import uncertainties
+
+        problem, term = self.problem, self.term
+        carrying = np.flatnonzero(problem.structured)
+        if not np.isfinite(term.value[star, carrying]).all():
+            raise EngineError(f"linear: {Linear.reasons[1]}")
+        spread = term.spread[star]
+        if not spread[carrying].any():
+            return {int(o): float(term.value[star, o]) for o in carrying}
+        mean, sd = 0.0, 1.0
+        if problem.interior.relation is None:
+            number = int(mass_score(problem).interval[star])
+            mean, sd, _ = structure_expectation(problem.interior.model.intervals[number].mixture.components[0])
+        found["structure"] = uncertainties.ufloat(mean, sd, tag="structure")
+        score = (found["structure"] - mean) / sd
+        return {int(o): float(term.value[star, o]) + float(spread[o]) * score for o in carrying}
 
     def _score(self, log_value):
         value, relative = (x[:, :, None] for x in self._result)

@@ -19,8 +19,11 @@ import numpy as np
 from scipy.special import ndtri
 
 from stellerg.engines import smoothing
+from stellerg.engines.answer import Answer
+from stellerg.engines.calibrated import CalibratedAnswer, calibrated_refusal
 from stellerg.engines.convolution import convolve
 from stellerg.engines.intervals import MassScore, mass_score, moments_of_structure
+from stellerg.engines.joined import JoinedAnswer
 from stellerg.engines.parts import GaussianPart, GridPart, SharpPart
 from stellerg.engines.straddling import mass_shift, straddling_terms
 from stellerg.measured import Shape
@@ -49,6 +52,7 @@ class Quadrature:
         "the structure model changes within the range of a mass that several inputs determine, not all "
         "log-normal: use montecarlo",
         "errors whose upper and lower side differ by more than a factor of two: use montecarlo",
+        "errors too large for the expansion under a calibrated coefficient: use montecarlo",
     )
 
     def accepts(self, problem: Problem) -> np.ndarray:
@@ -56,7 +60,12 @@ class Quadrature:
         other = ~problem.log_normal
         reason = np.zeros(len(problem), int)
         reason[_steep(problem)] = 4
-        reason[~mass_score(problem).tractable] = 3
+        if problem.interior.relation is not None:
+            refusal = calibrated_refusal(problem.only(np.flatnonzero(problem.structured)))
+
+            reason = np.where(refusal > 0, np.where(refusal == 1, 3, 5), reason)
+        else:
+            reason[~mass_score(problem).tractable] = 3
         if problem.correlation is not None:
             linked = (problem.correlation != 0.0).sum(axis=2) > 1
             reason[(linked & other).any(axis=1)] = 2
@@ -64,9 +73,25 @@ class Quadrature:
             reason[other.any(axis=1)] = 1
         return reason
 
-    def solve(self, problem: Problem) -> "QuadratureAnswer":
+    def solve(self, problem: Problem) -> Answer:
         """Answer a problem."""
-        return QuadratureAnswer(problem)
+        parts = []
+        for positions, kind in _sorted_outputs(problem):
+            some = problem if len(positions) == len(problem.outputs) else problem.only(positions)
+            parts.append((positions, kind(some)))
+        return parts[0][1] if len(parts) == 1 else JoinedAnswer(problem, tuple(parts))
+
+
+def _sorted_outputs(problem: Problem):
+    """Yield the positions of outputs that are treated alike, and how."""
+    carrying = problem.structured
+    if problem.interior.relation is None:
+        yield np.arange(len(carrying)), QuadratureAnswer
+        return
+    for chosen, kind in ((carrying, CalibratedAnswer), (~carrying, QuadratureAnswer)):
+        positions = np.flatnonzero(chosen)
+        if positions.size:
+            yield positions, kind
 
 
 @dataclass(frozen=True)
@@ -157,7 +182,7 @@ class QuadratureAnswer:
         score = mass_score(problem)
         straddling = np.flatnonzero(score.interval < 0)
         for output in np.flatnonzero(problem.structured):
-            for number, piece in enumerate(problem.structure.intervals):
+            for number, piece in enumerate(problem.interior.intervals):
                 rows = score.interval == number
                 mean[rows, output] += piece.mixture.moments[0]
                 variance[rows, output] += piece.mixture.moments[1] ** 2
@@ -207,7 +232,7 @@ def _terms(problem: Problem, output: int):
     other = (weights != 0.0) & ~problem.log_normal
     variance = problem.variance_of(np.where(problem.log_normal, weights, 0.0))
     sharp = not (weights != 0.0).any()
-    intervals = problem.structure.intervals
+    intervals = problem.interior.intervals
     score = mass_score(problem)
     structured = bool(problem.structured[output])
     for number in range(len(intervals)) if structured else (0,):

@@ -105,8 +105,12 @@ class Draws:
     @cached_property
     def log_coefficient(self) -> np.ndarray:
         """ln w = S(u | ln M, ln R), (star, draw)."""
-        known = dict(zip(self.problem.latents, np.swapaxes(self.log_latents, 0, 1), strict=True))
-        return self.problem.structure.quantile(self.u, known.get("mass"), known.get("radius"))
+        known = self._known
+        return self.problem.interior.quantile(self.u, known.get("mass"), known.get("radius"))
+
+    @property
+    def _known(self) -> dict[str, np.ndarray]:
+        return dict(zip(self.problem.latents, np.swapaxes(self.log_latents, 0, 1), strict=True))
 
     @cached_property
     def log_outputs(self) -> np.ndarray:
@@ -115,7 +119,7 @@ class Draws:
         measured = self._linear(p.weights, p.constant, p.input_weights)
         if not p.structured.any():
             return measured
-        return measured + np.where(p.structured[None, :, None], self.log_coefficient[:, None, :], 0.0)
+        return measured + p.log_structure(self.log_coefficient, self._known)
 
     @property
     def weight(self) -> np.ndarray | None:

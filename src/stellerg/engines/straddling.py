@@ -37,7 +37,7 @@ def mass_shift(problem: Problem, output: int, score: MassScore) -> tuple[MassShi
 
 def straddling_terms(problem: Problem, output: int, rows: np.ndarray, score: MassScore):
     """Terms of stars (at `rows`) whose mass may lie in several intervals, uncertain through the same input."""
-    intervals = problem.structure.intervals
+    intervals = problem.interior.intervals
     shift, variance = mass_shift(problem, output, score)
     weights = problem.output_weights(output)
     mean = problem.log_outputs(problem.log_mean)[:, output]

@@ -64,7 +64,7 @@ class Measured:
         """Return the rows asked for."""
         parts = {f.name: getattr(self, f.name) for f in fields(self)}
         taken = Measured(**{k: v[rows] if isinstance(v, np.ndarray) else v for k, v in parts.items()})
-        for name in ("_moments", "removed"):  # what was worked out already goes along
+        for name in ("_moments", "log_cumulants", "removed"):  # what was worked out already goes along
             if name in self.__dict__:
                 taken.__dict__[name] = self.__dict__[name][..., rows]
         return taken
@@ -116,6 +116,29 @@ class Measured:
     def log_sd(self) -> np.ndarray:
         """Standard deviation of ln(quantity), (star,)."""
         return self._moments[1]
+
+    @cached_property
+    def log_cumulants(self) -> np.ndarray:
+        """Cumulants 3 to 6 of ln(quantity), (4, star); 0 where it is normal or exact."""
+        cumulants = np.zeros((4, len(self)))
+        for shape, rows in self._groups:
+            if shape in (Shape.EXACT, Shape.LOGNORMAL):
+                continue
+            for start in range(0, len(rows), _CHUNK):
+                some = rows[start : start + _CHUNK]
+                deviation = self.log_quantile_of(some, _SCORE[None, :]) - self.log_mean[some, None]
+                two, three, four, five, six = ((deviation**k * _WEIGHT).sum(axis=-1) for k in range(2, 7))
+                cumulants[:, some] = (
+                    three,
+                    four - 3.0 * two**2,
+                    five - 10.0 * three * two,
+                    six - 15.0 * four * two - 10.0 * three**2 + 30.0 * two**3,
+                )
+        return cumulants
+
+    def log_quantile_of(self, rows: np.ndarray, score: np.ndarray) -> np.ndarray:
+        """`log_quantile` of some rows, (m, k)."""
+        return self.take(rows).log_quantile(score)
 
     @cached_property
     def expectation(self) -> np.ndarray:

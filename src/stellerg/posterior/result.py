@@ -94,6 +94,8 @@ class Posterior:
         Of over-determined stars; NaN elsewhere.
     degrees_of_freedom : ndarray of int, (star,)
     pieces : tuple of Piece
+    calibrated_medians : dict of str to ndarray, (star,)
+        By output: see `calibrated`.
     """
 
     star: np.ndarray
@@ -121,6 +123,7 @@ class Posterior:
     probability: np.ndarray
     pieces: tuple[Piece, ...]
     sampler: Callable = field(repr=False)
+    calibrated_medians: Mapping[str, np.ndarray] = field(default_factory=dict, repr=False)
     _cache: dict = field(default_factory=dict, repr=False, compare=False)
 
     def __len__(self) -> int:
@@ -164,6 +167,7 @@ class Posterior:
             **{name: getattr(self, name)[rows] for name in per_star},
             quoted={k: self.quoted[row] for k, row in enumerate(rows.tolist()) if row in self.quoted},
             pieces=tuple(pieces),
+            calibrated_medians={name: values[rows] for name, values in self.calibrated_medians.items()},
             _cache={},
         )
 
@@ -207,6 +211,11 @@ class Posterior:
     def median(self, output: str) -> np.ndarray:
         """Median of an output, (star,)."""
         return self.quantile(STANDARD_PROBABILITIES, output)[:, 0]
+
+    def calibrated(self, output: str) -> np.ndarray:
+        """Median under the calibrated coefficient where the prior excludes its value, (star,); NaN elsewhere."""
+        self._check(output)
+        return self.calibrated_medians.get(output, np.full(len(self), np.nan)).copy()
 
     def interval(self, output: str, probability: float = INTERVAL68[1] - INTERVAL68[0]) -> np.ndarray:
         """Central interval of an output, (star, 2)."""

@@ -2,19 +2,24 @@
 
 A file holds `summary`, `source` ("judgement" or a reference), optionally `[applies_to]` and `[common]`, and
 either one density (`[index]`, `[coefficient]` or `[log_coefficient]`) or several `[[interval]]`, each with
-`mass = [lower, upper]` in nominal solar masses and a density. Plain data: nothing in a file is executed.
+`mass = [lower, upper]` in nominal solar masses and a density; `[training]` names the stars that a density was
+learned from. Plain data: nothing in a file is executed.
 """
 
 import itertools
 import math
 import tomllib
-from dataclasses import dataclass
+from functools import lru_cache
 from importlib import resources
 from pathlib import Path
 
 from stellerg.errors import PriorError
+from stellerg.structure.calibration import Calibration
+from stellerg.structure.calibration_file import parse_calibration
 from stellerg.structure.distributions import Beta, Family, Normal, Point, Tabulated, Uniform
-from stellerg.structure.lines import line_of, line_of_decode_error
+from stellerg.structure.fields import Place, check_keys, read_finite, read_number, read_numbers, read_text, wanted_value
+from stellerg.structure.learned_file import read_training
+from stellerg.structure.lines import line_of_decode_error
 from stellerg.structure.model import (
     AppliesTo,
     Common,
@@ -25,7 +30,7 @@ from stellerg.structure.model import (
     StructureModel,
 )
 
-__all__ = ["available_priors", "load_prior", "parse_prior"]
+__all__ = ["available_priors", "load_prior", "main_sequence", "parse_prior"]
 
 # Where each coordinate may lie: n in [0, 5); w at least 3/5, the uniform sphere, the least bound star whose
 # density does not increase outwards.
@@ -35,6 +40,8 @@ _RANGE = {
     Coordinate.LOG_COEFFICIENT: (math.log(0.6), math.inf),
 }
 _COORDINATES = {c.value: c for c in Coordinate}
+_TRAINED_ON = ("log_k2", "moment_of_inertia_factor", "structure_coefficient")
+_ABOUT = ("summary", "source", "applies_to", "common", "training")
 _STATES = ("main-sequence", "pre-main-sequence", "evolved")
 _KEYS = {
     "point": ("value",),
@@ -62,7 +69,7 @@ def available_priors() -> dict[str, Path]:
     return dict(sorted(found.items()))
 
 
-def load_prior(name_or_path: str | Path) -> StructureModel:
+def load_prior(name_or_path: str | Path) -> StructureModel | Calibration:
     """Load a structure model.
 
     Parameters
@@ -101,7 +108,13 @@ def load_prior(name_or_path: str | Path) -> StructureModel:
     return parse_prior(text, name=path.stem, file=str(path))
 
 
-def parse_prior(text: str, name: str = "prior", file: str = "") -> StructureModel:
+@lru_cache(maxsize=1)
+def main_sequence() -> Calibration:
+    """Return the shipped calibration, by which sizes are judged under every prior."""
+    return load_prior("main-sequence")
+
+
+def parse_prior(text: str, name: str = "prior", file: str = "") -> StructureModel | Calibration:
     """Read a structure model from the text of its file.
 
     Parameters
@@ -125,93 +138,30 @@ def parse_prior(text: str, name: str = "prior", file: str = "") -> StructureMode
         raise PriorError(f"{title}, line {line}: not a TOML file: {problem}", line) from None
     except RecursionError:
         raise PriorError(f"{title}: not a TOML file of ours: brackets are nested too deeply") from None
-    top = _Place(text, title)
-    _only(table, ("summary", "source", "applies_to", "common", "interval", *_COORDINATES), top)
-    for key in ("summary", "source"):
-        _line_of_text(table, key, top)
+    top = Place(text, title)
+    check_keys(table, (*_ABOUT, "interval", "calibration", *_COORDINATES), top)
+    about = {
+        "name": name,
+        "summary": read_text(table, "summary", top),
+        "source": read_text(table, "source", top),
+        "applies_to": _applies_to(table.get("applies_to", {}), top),
+        "common": _common(table["common"], top) if "common" in table else None,
+        "text": text,
+        "training": read_training(table["training"], top) if "training" in table else (),
+    }
+    given = [key for key in table if key not in _ABOUT]
+    if len(given) > 1 and ("interval" in given or "calibration" in given):
+        raise top.fault("give one density, or [[interval]] tables, or [calibration], not two of them", given[1])
+    if "calibration" in table:
+        return parse_calibration(table["calibration"], top, **about)
     if "interval" in table:
-        given = [key for key in table if key == "interval" or key in _COORDINATES]
-        if len(given) > 1:
-            raise top.fault("give either one density or [[interval]] tables, not both", given[1])
         intervals = _intervals(table["interval"], top)
     else:
         intervals = (MassInterval(-math.inf, math.inf, _mixture(table, top)),)
-    return StructureModel(
-        name=name,
-        summary=table["summary"].strip(),
-        source=table["source"].strip(),
-        intervals=intervals,
-        applies_to=_applies_to(table.get("applies_to", {}), top),
-        common=_common(table["common"], top) if "common" in table else None,
-        text=text,
-    )
+    return StructureModel(intervals=intervals, **about)
 
 
-@dataclass(frozen=True)
-class _Place:
-    """A table of a file: the words for it in messages, and the keys that lead to it."""
-
-    text: str
-    title: str
-    words: str = ""
-    keys: tuple[str | int, ...] = ()
-
-    def inside(self, words: str, *keys: str | int) -> "_Place":
-        """A table within this one."""
-        return _Place(self.text, self.title, f"{self.words}, {words}", (*self.keys, *keys))
-
-    def fault(self, message: str, *keys: str | int) -> PriorError:
-        """What to raise for a fault of this table, or of what `keys` lead to in it."""
-        line = line_of(self.text, (*self.keys, *keys))
-        return PriorError(f"{self.title}, line {line}{self.words}: {message}", line)
-
-
-def _only(table: object, allowed: tuple[str, ...], where: _Place) -> None:
-    if not isinstance(table, dict):
-        raise where.fault(f"a table is wanted here, got {table!r}")
-    for key in table:
-        if key not in allowed:
-            raise where.fault(f"unknown key {key!r}; allowed here: {', '.join(allowed)}", key)
-
-
-def _given(table: dict, key: str, wanted: str, where: _Place) -> object:
-    """The value of a key that must be there."""
-    if key not in table:
-        raise where.fault(f"{key!r} is missing; it must be {wanted}")
-    return table[key]
-
-
-def _line_of_text(table: dict, key: str, where: _Place) -> None:
-    wanted = "one line of text" + (" (a reference, or 'judgement')" if key == "source" else "")
-    value = _given(table, key, wanted, where)
-    if not isinstance(value, str) or not value.strip():
-        raise where.fault(f"{key!r} must be {wanted}, got {value!r}", key)
-
-
-def _number(table: dict, key: str, where: _Place) -> float:
-    return _finite(_given(table, key, "a finite number", where), where, key)
-
-
-def _finite(value: object, where: _Place, *keys: str | int) -> float:
-    """A finite number that stands at `keys`."""
-    try:
-        number = math.nan if isinstance(value, bool) or not isinstance(value, (int, float)) else float(value)
-    except OverflowError:  # a whole number beyond the largest float
-        number = math.inf
-    if not math.isfinite(number):
-        shown = value if len(repr(value)) < 40 else f"one of {len(repr(value))} characters"
-        raise where.fault(f"{keys[0]!r} must be a finite number, got {shown!r}", *keys)
-    return number
-
-
-def _numbers(table: dict, key: str, where: _Place) -> tuple[float, ...]:
-    values = _given(table, key, "a list of numbers", where)
-    if not isinstance(values, list):
-        raise where.fault(f"{key!r} must be a list of numbers, got {values!r}", key)
-    return tuple(_finite(value, where, key, place) for place, value in enumerate(values))
-
-
-def _mixture(table: dict, where: _Place) -> Mixture:
+def _mixture(table: dict, where: Place) -> Mixture:
     """One density on one coordinate, as a mixture."""
     given = [key for key in table if key in _COORDINATES]
     if len(given) != 1:
@@ -221,12 +171,12 @@ def _mixture(table: dict, where: _Place) -> Mixture:
     coordinate, density = _COORDINATES[name], table[name]
     where = where.inside(f"[{name}]", name)
     if isinstance(density, dict) and density.get("distribution") == "mixture":
-        _only(density, ("distribution", "component"), where)
+        check_keys(density, ("distribution", "component"), where)
         return _components(density, coordinate, where)
     return Mixture((1.0,), (Component(coordinate, _family(density, coordinate, where)),))
 
 
-def _components(density: dict, coordinate: Coordinate, where: _Place) -> Mixture:
+def _components(density: dict, coordinate: Coordinate, where: Place) -> Mixture:
     parts = density.get("component")
     if not isinstance(parts, list) or not parts:
         raise where.fault("a mixture needs [[component]] tables", "component")
@@ -235,7 +185,7 @@ def _components(density: dict, coordinate: Coordinate, where: _Place) -> Mixture
         inside = where.inside(f"component {number + 1}", "component", number)
         if not isinstance(part, dict):
             raise inside.fault(f"a table is wanted here, got {part!r}")
-        weight = _number(part, "weight", inside)
+        weight = read_number(part, "weight", inside)
         if weight <= 0.0:
             raise inside.fault(f"'weight' must be positive, got {weight}", "weight")
         weights.append(weight)
@@ -247,14 +197,14 @@ def _components(density: dict, coordinate: Coordinate, where: _Place) -> Mixture
     return Mixture(tuple(weight / total for weight in weights), tuple(components))
 
 
-def _family(table: object, coordinate: Coordinate, where: _Place) -> Family:
+def _family(table: object, coordinate: Coordinate, where: Place) -> Family:
     if not isinstance(table, dict):
         raise where.fault(f"a table is wanted here, got {table!r}")
     choice = [key for key in _KEYS if key != "mixture"]
-    kind = _given(table, "distribution", f"one of {', '.join(choice)}", where)
+    kind = wanted_value(table, "distribution", f"one of {', '.join(choice)}", where)
     if kind not in choice:
         raise where.fault(f"'distribution' must be one of {', '.join(choice)}, got {kind!r}", "distribution")
-    _only(table, ("distribution", *_KEYS[kind]), where)
+    check_keys(table, ("distribution", *_KEYS[kind]), where)
     least, most = _RANGE[coordinate]
     if kind == "normal":
         return _normal(table, least, most, where)
@@ -267,8 +217,8 @@ def _family(table: object, coordinate: Coordinate, where: _Place) -> Family:
     return family
 
 
-def _closed_form(kind: str, table: dict, where: _Place) -> Family:
-    numbers = [_number(table, key, where) for key in _KEYS[kind]]
+def _closed_form(kind: str, table: dict, where: Place) -> Family:
+    numbers = [read_number(table, key, where) for key in _KEYS[kind]]
     if kind == "beta" and min(numbers[:2]) < 1.0:
         message = f"'alpha' and 'beta' must be at least 1 (a bounded density), got {numbers[:2]}"
         raise where.fault(message, "alpha" if numbers[0] < 1.0 else "beta")
@@ -279,8 +229,8 @@ def _closed_form(kind: str, table: dict, where: _Place) -> Family:
     return family
 
 
-def _normal(table: dict, least: float, most: float, where: _Place) -> Normal:
-    mean, sd = _number(table, "mean", where), _number(table, "standard_deviation", where)
+def _normal(table: dict, least: float, most: float, where: Place) -> Normal:
+    mean, sd = read_number(table, "mean", where), read_number(table, "standard_deviation", where)
     if sd <= 0.0:
         message = f"'standard_deviation' must be positive, got {sd}; use 'point' for no spread"
         raise where.fault(message, "standard_deviation")
@@ -291,8 +241,8 @@ def _normal(table: dict, least: float, most: float, where: _Place) -> Normal:
     return family
 
 
-def _tabulated(table: dict, where: _Place) -> Tabulated:
-    points, heights = _numbers(table, "points", where), _numbers(table, "density", where)
+def _tabulated(table: dict, where: Place) -> Tabulated:
+    points, heights = read_numbers(table, "points", where), read_numbers(table, "density", where)
     if len(points) != len(heights) or len(points) < 2:
         message = f"'points' and 'density' must have the same length, at least 2, got {len(points)} and {len(heights)}"
         raise where.fault(message, "density" if len(points) > 1 else "points")
@@ -305,17 +255,17 @@ def _tabulated(table: dict, where: _Place) -> Tabulated:
     return Tabulated(points, heights)
 
 
-def _intervals(tables: object, where: _Place) -> tuple[MassInterval, ...]:
+def _intervals(tables: object, where: Place) -> tuple[MassInterval, ...]:
     if not isinstance(tables, list) or not tables:
         raise where.fault(f"[[interval]] tables are wanted, got {tables!r}", "interval")
     found, previous = [], 0.0
     for number, table in enumerate(tables):
         inside = where.inside(f"interval {number + 1}", "interval", number)
-        _only(table, ("mass", *_COORDINATES), inside)
-        bounds = _given(table, "mass", "[lower, upper] in solar masses", inside)
+        check_keys(table, ("mass", *_COORDINATES), inside)
+        bounds = wanted_value(table, "mass", "[lower, upper] in solar masses", inside)
         if not isinstance(bounds, list) or len(bounds) != 2:
             raise inside.fault(f"'mass' must be [lower, upper] in solar masses, got {bounds!r}", "mass")
-        lower, upper = (math.inf if b == math.inf else _finite(b, inside, "mass", k) for k, b in enumerate(bounds))
+        lower, upper = (math.inf if b == math.inf else read_finite(b, inside, "mass", k) for k, b in enumerate(bounds))
         if lower != previous or upper <= lower:
             message = f"intervals must follow each other from 0 to inf without gaps, got {bounds}"
             raise inside.fault(message, "mass")
@@ -329,10 +279,10 @@ def _intervals(tables: object, where: _Place) -> tuple[MassInterval, ...]:
     return tuple(found)
 
 
-def _applies_to(table: object, where: _Place) -> AppliesTo:
+def _applies_to(table: object, where: Place) -> AppliesTo:
     where = where.inside("[applies_to]", "applies_to")
-    _only(table, ("mass", "evolutionary_state"), where)
-    mass = _numbers(table, "mass", where) if "mass" in table else None
+    check_keys(table, ("mass", "evolutionary_state"), where)
+    mass = read_numbers(table, "mass", where) if "mass" in table else None
     if mass is not None and (len(mass) != 2 or not 0.0 <= mass[0] < mass[1]):
         raise where.fault(f"'mass' must be [lower, upper] in solar masses, got {list(mass)}", "mass")
     states = table.get("evolutionary_state", [])
@@ -342,14 +292,22 @@ def _applies_to(table: object, where: _Place) -> AppliesTo:
     return AppliesTo(mass, tuple(states))
 
 
-def _common(table: object, where: _Place) -> Common:
+def _common(table: object, where: Place) -> Common:
     where = where.inside("[common]", "common")
-    _only(table, ("fraction", "within"), where)
-    fraction = _number(table, "fraction", where)
-    if not 0.0 <= fraction <= 1.0:
-        raise where.fault(f"'fraction' must lie in [0, 1], got {fraction}", "fraction")
+    check_keys(table, ("fraction", "standard_deviation", "within", "scale"), where)
+    if ("fraction" in table) == ("standard_deviation" in table):
+        raise where.fault("give either 'fraction' or 'standard_deviation' (of ln w)", "fraction")
+    size = "fraction" if "fraction" in table else "standard_deviation"
+    value = read_number(table, size, where)
+    if not 0.0 <= value <= 1.0:
+        raise where.fault(f"{size!r} must lie in [0, 1], got {value}", size)
     rule = "'all', 'mass' or the name of a column"
-    within = _given(table, "within", rule, where)
+    within = wanted_value(table, "within", rule, where)
     if not isinstance(within, str) or not within:
         raise where.fault(f"'within' must be {rule}, got {within!r}", "within")
-    return Common(fraction, within)
+    scale = read_number(table, "scale", where) if "scale" in table else None
+    if scale is not None and (scale <= 0.0 or within != "mass"):
+        raise where.fault(f"'scale' goes with within = \"mass\" and must be positive, got {scale}", "scale")
+    if size == "fraction":
+        return Common(value, within, scale=scale)
+    return Common(None, within, standard_deviation=value, scale=scale)

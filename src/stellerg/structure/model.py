@@ -149,10 +149,24 @@ class AppliesTo:
 
 @dataclass(frozen=True)
 class Common:
-    """How much of a model's uncertainty is common to stars, and to which."""
+    """How much of a model's uncertainty is common to stars, and to which.
 
-    fraction: float
+    Attributes
+    ----------
+    fraction : float or None
+        Of the variance of the normal score of u.
+    within : str
+        all, mass or the name of a column.
+    standard_deviation : float or None
+        Of ln w, where that is stated instead of a fraction.
+    scale : float or None
+        For ``mass``: of a Gaussian kernel in ln M.
+    """
+
+    fraction: float | None
     within: str
+    standard_deviation: float | None = None
+    scale: float | None = None
 
 
 @dataclass(frozen=True)
@@ -168,6 +182,8 @@ class StructureModel:
     common : Common or None
     text : str
         The file as it stands, kept with every run.
+    training : tuple of int
+        64-bit keys of the stars that a model was learned from: their data must not be used with it again.
     """
 
     name: str
@@ -177,16 +193,27 @@ class StructureModel:
     applies_to: AppliesTo = field(default_factory=AppliesTo)
     common: Common | None = None
     text: str = ""
+    training: tuple[int, ...] = ()
 
     @property
-    def needs_mass(self) -> bool:
-        """Whether the model, or the rule that says where it applies, looks at the mass."""
-        return len(self.intervals) > 1 or self.applies_to.mass is not None
+    def needs(self) -> tuple[str, ...]:
+        """What the model, or the rule that says where it applies, looks at: the mass, or nothing."""
+        return ("mass",) if len(self.intervals) > 1 or self.applies_to.mass is not None else ()
 
     @cached_property
     def edges(self) -> np.ndarray:
         """Inner boundaries of the mass intervals in ln M, (interval - 1,)."""
         return np.array([piece.log_lower for piece in self.intervals[1:]])
+
+    def cumulative(self, q: np.ndarray, log_mass: np.ndarray | None = None) -> np.ndarray:
+        """Cumulative probability at ln w = q, any shape; `log_mass` of the same, where the model looks at it."""
+        if len(self.intervals) == 1:
+            return self.intervals[0].mixture.cumulative(q)
+        which = np.searchsorted(self.edges, log_mass, side="right")
+        return np.select(
+            [which == number for number in range(len(self.intervals))],
+            [piece.mixture.cumulative(q) for piece in self.intervals],
+        )
 
     def quantile(self, u: np.ndarray, log_mass: np.ndarray | None = None, log_radius: np.ndarray | None = None):
         """S(u | ln M, ln R): ln w at cumulative probability u.
