@@ -23,6 +23,13 @@ def interval(lower, upper, density="[interval.index]\n" + UNIFORM):
     return f"[[interval]]\nmass = [{lower}, {upper}]\n{density}"
 
 
+KEYS = '["00000000000000ff", "8000000000000001"]'
+
+
+def training(keys=KEYS, stars="2", observables='["log_k2"]'):
+    return GOOD + f"[training]\nstars = {stars}\nkeys = {keys}\nobservables = {observables}\n"
+
+
 MIXTURE = INDEX + 'distribution = "mixture"\n'
 
 REFUSED = {
@@ -174,6 +181,24 @@ REFUSED = {
     "fraction above 1": (GOOD + '[common]\nfraction = 1.1\nwithin = "all"\n', ["'fraction'", "1.1"]),
     "no within": (GOOD + "[common]\nfraction = 0.5\n", ["[common]", "'within'", "missing"]),
     "within no text": (GOOD + "[common]\nfraction = 0.5\nwithin = 3\n", ["'within'", "3"]),
+    # training
+    "training no table": ("training = 3\n" + GOOD, ["[training]", "3"]),
+    "unknown key in training": (training() + "n = 2\n", ["[training]", "'n'", "stars, keys, observables"]),
+    "no keys": (GOOD + "[training]\nstars = 2\n", ["[training]", "'keys'", "missing"]),
+    "keys no list": (training('"00000000000000ff"'), ["'keys'", "list", "00000000000000ff"]),
+    "an empty list of keys": (training("[]", "0"), ["'keys'", "[]"]),
+    "a number for a key": (training("[255]", "1"), ["'keys'", "16 hexadecimal digits", "255"]),
+    "a short key": (training('["ff"]', "1"), ["'keys'", "16 hexadecimal digits", "'ff'"]),
+    "a key that is no number": (training('["00000000000000fg"]', "1"), ["'keys'", "0-9, a-f", "00fg"]),
+    "a key in capitals": (training('["00000000000000FF"]', "1"), ["'keys'", "0-9, a-f", "00FF"]),
+    "a key twice": (training('["00000000000000ff", "00000000000000ff"]'), ["'keys'", "00ff", "twice"]),
+    "no number of stars": (training().replace("stars = 2\n", ""), ["[training]", "'stars'", "missing"]),
+    "another number of stars": (training(stars="3"), ["'stars'", "number of keys, 2", "3"]),
+    "a boolean number of stars": (training('["00000000000000ff"]', "true"), ["'stars'", "True"]),
+    "no observables": (training().replace('observables = ["log_k2"]\n', ""), ["'observables'", "missing", "log_k2"]),
+    "no observable": (training(observables="[]"), ["'observables'", "[]"]),
+    "an unknown observable": (training(observables='["mass"]'), ["'observables'", "['mass']", "log_k2"]),
+    "observables no list": (training(observables='"log_k2"'), ["'observables'", "'log_k2'"]),
 }
 
 
@@ -227,6 +252,20 @@ def test_optional_tables_are_kept():
     assert model.applies_to.evolutionary_state == ("evolved",)
     assert (model.common.fraction, model.common.within) == (0.5, "mass")
     assert parse_prior(GOOD).common is None
+
+
+def test_the_stars_a_model_was_learned_from_are_kept():
+    model = parse_prior(training())
+    assert model.training == (0xFF, 0x8000000000000001)
+    assert parse_prior(GOOD).training == ()
+    with pytest.raises(PriorError, match=r"line 8, \[training\]: 'stars' must be the number of keys"):
+        parse_prior(training(stars="3"))
+
+
+def test_a_wrong_key_is_named_with_its_own_line():
+    text = training('[\n"00000000000000ff",\n"0x000000000000ff"]')
+    with pytest.raises(PriorError, match=r"line 11, \[training\]: 'keys' must be .* got '0x000000000000ff'"):
+        parse_prior(text)
 
 
 # --- files ---

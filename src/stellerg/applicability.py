@@ -9,7 +9,9 @@ from dataclasses import replace
 import numpy as np
 from scipy.special import ndtr
 
+from stellerg.binding import MEAN_MOLECULAR_WEIGHT, Kind
 from stellerg.notes import Notes
+from stellerg.observables import STRUCTURE_OBSERVABLES
 from stellerg.problem import COEFFICIENT, Problem
 from stellerg.stars import EvolutionaryState, Stars
 from stellerg.status import STATUS_TEXT, Flag, Status
@@ -17,6 +19,8 @@ from stellerg.structure.calibration import Calibration, Place
 from stellerg.structure.files import main_sequence
 from stellerg.structure.interior import Interior
 from stellerg.structure.model import StructureModel
+from stellerg.structure.observed import DISCREPANCY, Observed, direct_share
+from stellerg.structure.relation import Relation
 from stellerg.wording import label
 
 __all__ = ["applicable"]
@@ -35,7 +39,11 @@ _OUTSIDE = {
 
 
 def applicable(
-    problems: list[Problem], stars: Stars, structure: StructureModel | Calibration, notes: Notes
+    problems: list[Problem],
+    stars: Stars,
+    structure: StructureModel | Calibration,
+    discrepancy: float,
+    notes: Notes,
 ) -> list[Problem]:
     """Give the stars that the model describes their interiors; the others a status, and what carries no structure."""
     kept = []
@@ -46,14 +54,17 @@ def applicable(
             kept.append(problem)
             continue
         if isinstance(structure, Calibration):
-            kept += _calibrated(problem, state, structure, notes)
+            kept += _calibrated(problem, stars, structure, discrepancy, notes)
         else:
-            kept += _with_density(problem, state, structure, notes)
+            kept += _with_density(problem, stars, structure, discrepancy, notes)
     return [problem for problem in kept if len(problem)]
 
 
-def _with_density(problem: Problem, state: np.ndarray, structure: StructureModel, notes: Notes) -> list[Problem]:
+def _with_density(
+    problem: Problem, stars: Stars, structure: StructureModel, discrepancy: float, notes: Notes
+) -> list[Problem]:
     """Stars under a density on the index or the coefficient."""
+    state = stars.evolutionary_state[problem.rows]
     evolved = state == EvolutionaryState.EVOLVED
     if "evolved" in structure.applies_to.evolutionary_state:
         evolved = np.zeros(len(problem), bool)
@@ -66,7 +77,57 @@ def _with_density(problem: Problem, state: np.ndarray, structure: StructureModel
     described = problem.take(np.flatnonzero(here))
     if {"mass", "radius"} <= set(problem.latents) and len(described) and _asked_with_structure(problem):
         _compare(described, state[here], structure, notes)
-    return [*kept, described]
+    return [*kept, *_inside(described, stars, structure, None, discrepancy, notes)]
+
+
+def _inside(
+    problem: Problem, stars: Stars, structure, relation: Relation | None, discrepancy: float, notes: Notes
+) -> list[Problem]:
+    """Give stars their interiors: those with structure observables apart from the others."""
+    given = {name: stars.measured[name].take(problem.rows) for name in STRUCTURE_OBSERVABLES if name in stars.measured}
+    faulty = np.zeros(len(problem), bool)
+    for measured in given.values():
+        faulty |= measured.fault != Status.OK
+    notes.flags[problem.rows[faulty]] |= int(Flag.MEASUREMENT_UNUSABLE)
+    has = np.logical_or.reduce([m.usable for m in given.values()]) if given else np.zeros(len(problem), bool)
+    made = []
+    for rows, inside in ((np.flatnonzero(~has), False), (np.flatnonzero(has), True)):
+        if not rows.size:
+            continue
+        some, law = problem.take(rows), relation and relation.take(rows)
+        observed = None
+        if inside:
+            observed = _observed({n: m.take(rows) for n, m in given.items()}, some, stars, law, discrepancy)
+        some = replace(some, interior=Interior.of(structure, law, observed, len(some)))
+        unbound = _unbound(some)
+        sentence = STATUS_TEXT[Status.NOT_BOUND].sentence
+        made += _without(some, unbound, np.isin(some.kinds, (Kind.BINDING,)), Status.NOT_BOUND, sentence, notes)
+        made.append(some.take(np.flatnonzero(~unbound)))
+    return made
+
+
+def _unbound(problem: Problem) -> np.ndarray:
+    """Where the energy of ionisation exceeds what binds a star, at the medians, (star,)."""
+    if problem.binding.ionisation is None or not (problem.kinds == Kind.BINDING).any():
+        return np.zeros(len(problem), bool)
+    latents = problem.log_latents(problem.log_median)
+    known = {name: latents[:, k, None] for k, name in enumerate(problem.latents)}
+    q = problem.interior.quantile(np.full((len(problem), 1), 0.5), known["mass"], known["radius"])
+    molecular = known.get("mean_molecular_weight", np.log(MEAN_MOLECULAR_WEIGHT))
+    return problem.binding.bound_share(q, known["mass"], known["radius"], molecular)[:, 0] <= 0.0
+
+
+def _observed(measured, problem: Problem, stars: Stars, relation: Relation | None, discrepancy: float) -> Observed:
+    """Structure observables of stars, with the size of the misfit and the relations that hold for each."""
+    size = np.full(len(problem), discrepancy / DISCREPANCY)
+    direct = np.zeros(len(problem))
+    if "mass" in problem.latents:
+        log_mass = problem.log_latents(problem.log_median)[:, problem.latent("mass")]
+        size = size * main_sequence().misfit(log_mass)
+        if relation is not None:
+            direct = direct_share(log_mass)
+    weight = stars.k2_weight[problem.rows]
+    return Observed({n: m for n, m in measured.items() if m.usable.any()}, weight, DISCREPANCY * size, size, direct)
 
 
 def _compare(problem: Problem, state: np.ndarray, structure: StructureModel, notes: Notes) -> None:
@@ -96,8 +157,11 @@ def _medians(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     return latents[:, problem.latent("mass")], latents[:, problem.latent("radius")]
 
 
-def _calibrated(problem: Problem, state: np.ndarray, structure: Calibration, notes: Notes) -> list[Problem]:
+def _calibrated(
+    problem: Problem, stars: Stars, structure: Calibration, discrepancy: float, notes: Notes
+) -> list[Problem]:
     """Stars under a calibration, with their relations."""
+    state = stars.evolutionary_state[problem.rows]
     if COEFFICIENT not in problem.outputs:  # mass or radius is unknown: no output with structure is asked of these
         return [problem]
     contracting = state == EvolutionaryState.PRE_MAIN_SEQUENCE
@@ -125,12 +189,11 @@ def _calibrated(problem: Problem, state: np.ndarray, structure: Calibration, not
     here = np.flatnonzero(_covered(place))
     described = problem.take(here)
     relation = structure.relation(log_mass[here], log_radius[here], contracting[here])
-    described = replace(described, interior=Interior(structure, relation))
     for kind, flag in ((Place.CONTRACTING, Flag.TAKEN_AS_CONTRACTING), (Place.INFLATED, Flag.RADIUS_INFLATED)):
         notes.flags[described.rows[place[here] == kind]] |= int(flag)
     near = _beyond_boundary(described, structure, place[here]) > _NEAR
     notes.flags[described.rows[near]] |= int(Flag.NEAR_BOUNDARY)
-    return [*kept, described]
+    return [*kept, *_inside(described, stars, structure, relation, discrepancy, notes)]
 
 
 def _beyond_boundary(problem: Problem, structure: Calibration, place: np.ndarray) -> np.ndarray:
@@ -193,15 +256,20 @@ def _domain(structure: StructureModel) -> str:
 
 def _without_structure(problem: Problem, rows: np.ndarray, status: Status, sentence: str, notes: Notes) -> list:
     """Give rows a status; what carries no structure stays available to them (`partial`)."""
+    return _without(problem, rows, problem.structured, status, sentence, notes)
+
+
+def _without(problem: Problem, rows, lost: np.ndarray, status: Status, sentence: str, notes: Notes) -> list:
+    """Give rows a status and take some outputs from them; the others stay available (`partial`)."""
     rows = np.flatnonzero(rows)
-    plain = np.flatnonzero(~problem.structured)
+    plain = np.flatnonzero(~lost)
     if not len(rows):
         return []
-    if not len(plain):
+    if not any(problem.outputs[k] != COEFFICIENT for k in plain):
         notes.set(problem.rows[rows], status, sentence)
         return []
     part = problem.take(rows).only(plain)
-    lacking = _asked_with_structure(problem)
+    lacking = [n for n, gone in zip(problem.outputs, lost, strict=True) if gone and n != COEFFICIENT]
     if lacking:
         notes.add(problem.rows[rows], Status.PARTIAL, f"no {', '.join(map(label, lacking))}: {sentence}")
     return [part]

@@ -22,6 +22,7 @@ from stellerg.status import STATUS_TEXT, Flag, Status
 from stellerg.structure.calibration import Calibration
 from stellerg.structure.interior import Interior
 from stellerg.structure.model import StructureModel
+from stellerg.structure.observed import DISCREPANCY
 from stellerg.wording import label
 
 __all__ = ["Assembly", "assemble"]
@@ -46,6 +47,7 @@ def assemble(
     conventions: Conventions,
     structure: StructureModel | Calibration,
     use: Sequence[str] | None = None,
+    discrepancy: float = DISCREPANCY,
 ) -> Assembly:
     """Group stars into problems.
 
@@ -81,7 +83,8 @@ def assemble(
             )
             notes.add(rows, Status.PARTIAL, f"no {lacking}: {STATUS_TEXT[Status.NOT_BOUND].sentence}")
         problems += _problems_of_pattern(stars, rows, selection, given, conventions, structure, notes)
-    return Assembly(tuple(applicable(problems, stars, structure, notes)), tuple(outputs), conventions, notes)
+    problems = applicable(problems, stars, structure, discrepancy, notes)
+    return Assembly(tuple(problems), tuple(outputs), conventions, notes)
 
 
 def _check_names(names: Sequence[str], known: Sequence[str], what: str) -> None:
@@ -189,7 +192,7 @@ def _eliminate(stars, rows, chosen, exact, given, conventions, structure) -> tup
     names = [need.name for need in given]
     wanted = np.array([need.monomials[0] for need in given]).reshape(len(given), len(LATENTS))
     kinds = [OUTPUTS[name].kind(conventions) for name in names]
-    binding = stars.binding(conventions.binding, conventions.ionisation).take(rows)
+    binding = stars.binding(conventions.binding, ionisation=conventions.ionisation).take(rows)
     constant = [
         OUTPUTS[name].log_constant(conventions)
         + np.log(OUTPUTS[name].factor(conventions) if binding.constant else OUTPUTS[name].prefactor(conventions))

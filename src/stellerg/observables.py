@@ -19,6 +19,7 @@ __all__ = [
     "MEASURABLE",
     "OBSERVABLES",
     "SELECTION_ORDER",
+    "STRUCTURE_OBSERVABLES",
     "Observable",
     "SolarReferences",
     "unit_conversion",
@@ -178,7 +179,17 @@ COMPOSITION: dict[str, Observable] = {
         ("metal_mass_fraction", "metal mass fraction Z"),
     )
 }
-MEASURABLE: dict[str, Observable] = {**OBSERVABLES, **COMPOSITION}
+# What is measured of a star's inside: it constrains the structure coefficient.
+STRUCTURE_OBSERVABLES: dict[str, Observable] = {
+    name: Observable(name, (0,) * len(LATENTS), 0.0, "", scale, meaning)
+    for name, scale, meaning in (
+        ("log_k2", _DEX, "log10 of the apsidal constant k2, dex"),
+        ("mean_log_k2", _DEX, "log10 of the mean k2 of a system, weighted by mean_log_k2_weight, dex"),
+        ("moment_of_inertia_factor", _LINEAR, "moment of inertia over M R^2"),
+        ("structure_coefficient", _LINEAR, "abs(Omega) R/(G M^2)"),
+    )
+}
+MEASURABLE: dict[str, Observable] = {**OBSERVABLES, **COMPOSITION, **STRUCTURE_OBSERVABLES}
 
 # The order in which the first determining set is taken when the user names none: direct measurements first,
 # temperature before luminosity (which catalogues often compute from it), a distance that was measured before one

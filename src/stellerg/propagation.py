@@ -1,5 +1,6 @@
 """The one question: from what was measured of stars to the posterior of their energies and times."""
 
+import math
 from collections.abc import Sequence
 from dataclasses import fields, replace
 from pathlib import Path
@@ -8,6 +9,7 @@ import numpy as np
 
 from stellerg.assembly import assemble
 from stellerg.checks.budget import budget
+from stellerg.checks.inside import inside
 from stellerg.checks.validity import flags
 from stellerg.energetics import DEFAULT_OUTPUTS, OUTPUTS, Conventions
 from stellerg.engines import AUTO_ORDER, ENGINES, Engine
@@ -24,6 +26,7 @@ from stellerg.status import Flag, Status
 from stellerg.structure.calibration import Calibration
 from stellerg.structure.files import load_prior, main_sequence
 from stellerg.structure.model import StructureModel
+from stellerg.structure.observed import DISCREPANCY
 
 __all__ = ["propagate"]
 
@@ -37,6 +40,7 @@ def propagate(
     conventions: Conventions | None = None,
     use: Sequence[str] | None = None,
     seed: int = 0,
+    discrepancy: float = DISCREPANCY,
 ) -> Posterior:
     """Propagate measurements to posterior distributions.
 
@@ -57,6 +61,8 @@ def propagate(
         set, since redundant columns are not evidence.
     seed : int
         For engines that draw; randomness is keyed by (seed, star).
+    discrepancy : float
+        Standard deviation of the misfit between the index of the energy and that of k2, for structure observables.
 
     Returns
     -------
@@ -70,13 +76,15 @@ def propagate(
     PriorError
         If the structure model does not exist or is not a proper density.
     """
+    if not (math.isfinite(discrepancy) and discrepancy >= 0.0):
+        raise InputError(f"discrepancy: must be a number and not negative, got {discrepancy}; 0 for none")
     if seed < 0:
         raise InputError(f"seed: must not be negative, got {seed}")
     conventions = conventions or Conventions()
     structure = load_prior(prior) if isinstance(prior, str | Path) else prior
     outputs, use = _listed(outputs), None if use is None else _listed(use)
     choices = _choices(engine, seed)
-    assembly = assemble(stars, outputs, conventions, structure, use)
+    assembly = assemble(stars, outputs, conventions, structure, use, discrepancy)
     conventions, notes = assembly.conventions, assembly.notes
     used = np.full(len(stars), -1, np.int8)
     why = np.zeros(len(stars), np.int16)
@@ -84,6 +92,9 @@ def propagate(
     chi2, probability = np.full((2, len(stars)), np.nan)
     freedom = np.zeros(len(stars), int)
     pieces = []
+    ionisation = stars.binding(conventions.binding, ionisation=True).ionisation
+    if structure.training:
+        notes.flags[np.isin(stars.key, np.array(structure.training, np.uint64))] |= int(Flag.USED_IN_TRAINING)
     for problem in assembly.problems:
         for part, number, reason in _assign(problem, choices, engine == "auto", notes):
             if reason not in reasons:
@@ -93,16 +104,17 @@ def propagate(
                 best = fit(part)
                 chi2[part.rows], probability[part.rows] = best.chi2, best.probability
                 freedom[part.rows] = best.degrees_of_freedom
-            notes.flags[part.rows] |= flags(part, answer, probability[part.rows])
+            judged = inside(part, ionisation[part.rows])
+            notes.flags[part.rows] |= flags(part, answer, probability[part.rows]) | judged.flags
             used[part.rows], why[part.rows] = number, reasons.index(reason)
             failed = answer.status != Status.OK
             for star in np.flatnonzero(failed):
                 notes.set(part.rows[star : star + 1], Status.NOT_CONVERGED, answer.failure(int(star)))
             if failed.any():
-                part = part.take(np.flatnonzero(~failed))
-                answer = answer.take(np.flatnonzero(~failed))
+                stands = np.flatnonzero(~failed)
+                part, answer, judged = part.take(stands), answer.take(stands), judged.take(stands)
             if len(part):
-                pieces.append(Piece(part.rows, answer, Linear().solve(part), *budget(answer)))
+                pieces.append(Piece(part.rows, answer, Linear().solve(part), *budget(answer), judged))
     excluded = np.flatnonzero(notes.flags & Flag.PRIOR_EXCLUDES_CALIBRATION)
     return Posterior(
         star=stars.identifier,
@@ -130,17 +142,27 @@ def propagate(
         probability=probability,
         pieces=tuple(pieces),
         sampler=_sampler,
-        calibrated_medians=_calibrated_medians(stars, excluded, outputs, assembly.conventions, use, seed),
+        radiation_counted=conventions.pressure != "gas",
+        ionisation_counted=conventions.ionisation,
+        calibrated_medians=_calibrated_medians(
+            stars.take(excluded), excluded, len(stars), outputs, conventions, use, seed, discrepancy
+        ),
     )
 
 
-def _calibrated_medians(stars: Stars, rows, outputs, conventions, use, seed) -> dict[str, np.ndarray]:
+def _calibrated_medians(stars, rows, count, outputs, conventions, use, seed, discrepancy) -> dict[str, np.ndarray]:
     """Medians under the calibration of the outputs that carry structure, (star,) each; NaN but for some rows."""
     carrying = [name for name in outputs if OUTPUTS[name].carries_structure(conventions)]
-    medians = {name: np.full(len(stars), np.nan) for name in carrying}
+    medians = {name: np.full(count, np.nan) for name in carrying}
     if len(rows) and carrying:
         under = propagate(
-            stars.take(rows), outputs=carrying, prior=main_sequence(), conventions=conventions, use=use, seed=seed
+            stars,
+            outputs=carrying,
+            prior=main_sequence(),
+            conventions=conventions,
+            use=use,
+            seed=seed,
+            discrepancy=discrepancy,
         )
         for name in carrying:
             medians[name][rows] = under.median(name)

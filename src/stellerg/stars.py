@@ -49,6 +49,8 @@ class Stars:
         `EvolutionaryState`.
     solar : SolarReferences
         For the asteroseismic scaling relations.
+    k2_weight : ndarray, (star,)
+        Weight of the star in the mean k2 of its system; 1 where it has none.
     key : ndarray of uint64, (star,)
         Hash of the identifier: what randomness is keyed by.
     """
@@ -58,6 +60,7 @@ class Stars:
     correlation: Mapping[tuple[str, str], np.ndarray] = field(default_factory=dict)
     evolutionary_state: np.ndarray | None = None
     solar: SolarReferences = field(default_factory=SolarReferences)
+    k2_weight: np.ndarray | None = None
     key: np.ndarray | None = None
 
     def __post_init__(self):
@@ -65,6 +68,8 @@ class Stars:
             object.__setattr__(self, "key", hash_identifiers(self.identifier))
         if self.evolutionary_state is None:
             object.__setattr__(self, "evolutionary_state", np.zeros(len(self.identifier), np.uint8))
+        if self.k2_weight is None:
+            object.__setattr__(self, "k2_weight", np.ones(len(self.identifier)))
         if set(COMPOSITION) & set(self.measured):
             object.__setattr__(self, "measured", with_molecular_weight(self.measured))
 
@@ -81,6 +86,7 @@ class Stars:
         unit: Mapping[str, str] | None = None,
         evolutionary_state=None,
         solar: SolarReferences | None = None,
+        mean_log_k2_weight=None,
         **observables,
     ) -> "Stars":
         """Build stars from whatever was measured.
@@ -98,6 +104,8 @@ class Stars:
         evolutionary_state : str or sequence of str, optional
             main-sequence, pre-main-sequence, evolved or unknown.
         solar : SolarReferences, optional
+        mean_log_k2_weight : float or array_like, (star,), optional
+            Weight of the star in the mean k2 of its system, in (0, 1]; needed with `mean_log_k2`.
         **observables
             By name (``mass="1.02 ± 0.03"``, ``radius=(value, error)``, ...): see `measured_from`.
 
@@ -131,6 +139,7 @@ class Stars:
             correlation={pair: _correlation(pair, value, measured, count) for pair, value in correlations.items()},
             evolutionary_state=state_codes(evolutionary_state, count),
             solar=solar or SolarReferences(),
+            k2_weight=_k2_weight(mean_log_k2_weight, "mean_log_k2" in measured, count),
         )
 
     @classmethod
@@ -143,10 +152,11 @@ class Stars:
             measured={name: Measured.joined([p.measured[name] for p in parts]) for name in first.measured},
             correlation={pair: np.concatenate([p.correlation[pair] for p in parts]) for pair in first.correlation},
             evolutionary_state=np.concatenate([p.evolutionary_state for p in parts]),
+            k2_weight=np.concatenate([p.k2_weight for p in parts]),
             key=np.concatenate([p.key for p in parts]),
         )
 
-    def binding(self, binding: Binding, ionisation: bool) -> Binding:
+    def binding(self, binding: Binding, *, ionisation: bool) -> Binding:
         """How the stars are bound, with their energies of ionisation if these count."""
         if not ionisation:
             return binding
@@ -162,6 +172,7 @@ class Stars:
             measured={name: m.take(rows) for name, m in self.measured.items()},
             correlation={pair: c[rows] for pair, c in self.correlation.items()},
             evolutionary_state=self.evolutionary_state[rows],
+            k2_weight=self.k2_weight[rows],
             key=self.key[rows],
         )
 
@@ -202,6 +213,23 @@ def state_codes(states, count: int, *, forgiving: bool = False) -> np.ndarray:
     return codes
 
 
+def _k2_weight(given, needed: bool, count: int) -> np.ndarray:
+    """Weights in the mean k2 of systems, (star,)."""
+    if given is None:
+        if needed:
+            raise InputError(
+                "mean_log_k2: the weight of the star in the mean of its system is missing; give mean_log_k2_weight in "
+                "(0, 1], or log_k2 if the value is of the star alone"
+            )
+        return np.ones(count)
+    weight = np.broadcast_to(np.asarray(given, float), (count,)).copy()
+    weight = np.where(np.isnan(weight), 1.0, weight)
+    wrong = ~((weight > 0.0) & (weight <= 1.0))
+    if wrong.any():
+        raise InputError(f"mean_log_k2_weight: must lie in (0, 1], got {weight[wrong][0]:g}")
+    return weight
+
+
 def _common_length(measured: Mapping[str, Measured], star) -> int:
     lengths = {name: len(m) for name, m in measured.items()}
     if star is not None:
@@ -233,7 +261,7 @@ def _correlation(pair, value, measured: Mapping[str, Measured], count: int) -> n
 def _symmetric(given: Mapping) -> dict:
     """One entry a pair, in the order of the table; what is given both ways and differs is no correlation."""
     found: dict[tuple[str, str], np.ndarray] = {}
-    order = list(OBSERVABLES)
+    order = list(MEASURABLE)
     for pair, values in given.items():
         key = tuple(sorted(pair, key=order.index))
         found[key] = np.where(found[key] == values, values, np.inf) if key in found else values

@@ -146,8 +146,8 @@ STATUS_TEXT: dict[Status, Text] = {
     ),
     Status.NOT_BOUND: Text(
         "not-bound",
-        "with an adiabatic index of 4/3 or less the total energy is not negative; give a larger "
-        "--adiabatic-index or ask for potential_energy",
+        "the total energy is not negative (adiabatic index of 4/3 or less, or more energy of ionisation than binds the "
+        "star); give a larger --adiabatic-index, leave ionisation out, or ask for potential_energy",
     ),
     Status.NOT_CONVERGED: Text(
         "not-converged", "the engine did not reach a usable answer; see its diagnostics or try another engine"

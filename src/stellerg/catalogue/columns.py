@@ -1,21 +1,22 @@
 """What the columns of a table mean: our own names, recognised once, then read part by part."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from stellerg.catalogue.readers import RawColumn, Source
 from stellerg.errors import InputError
 from stellerg.inputs import in_unit_of_value, measured_from_columns
-from stellerg.measured import Measured
+from stellerg.measured import Measured, Shape
 from stellerg.measured.text import TextKind, parse_text
-from stellerg.observables import OBSERVABLES, SolarReferences
+from stellerg.observables import MEASURABLE, OBSERVABLES, SolarReferences
 from stellerg.stars import Stars, state_codes
 from stellerg.status import Status
 
 __all__ = ["Columns", "recognise", "suspicious"]
 
+_WEIGHT = "mean_log_k2_weight"
 _ERRORS = ("_error", "_error_upper", "_error_lower")
 
 
@@ -26,7 +27,7 @@ class Columns:
     Attributes
     ----------
     observables : tuple of str
-        In the order of `OBSERVABLES`.
+        In the order of `MEASURABLE`.
     correlations : dict of (str, str) to str
         Pair of observables to column.
     names : tuple of str
@@ -49,6 +50,7 @@ class Columns:
         correlation: Mapping[tuple[str, str], float] | None = None,
         evolutionary_state: str = "",
         solar: SolarReferences | None = None,
+        k2_weight: float | None = None,
     ) -> Stars:
         """Read one part.
 
@@ -57,7 +59,7 @@ class Columns:
         part : mapping of str to RawColumn
         first_row : int
             Number (from 1) of its first row in the table, for rows without an identifier.
-        shape, correlation, evolutionary_state, solar
+        shape, correlation, evolutionary_state, solar, k2_weight
             For rows that do not say themselves.
         """
         count = _length(part)
@@ -82,6 +84,7 @@ class Columns:
             correlation=correlations,
             evolutionary_state=states,
             solar=solar or SolarReferences(),
+            k2_weight=self._weights(part, measured, count, k2_weight),
         )
 
     def _identifiers(self, part, count: int, first_row: int) -> np.ndarray:
@@ -94,6 +97,23 @@ class Columns:
         else:
             return numbers
         return np.where(names == "", numbers, names)
+
+    def _weights(self, part, measured, count: int, default: float | None) -> np.ndarray:
+        """Weights in the mean k2 of systems; where there is none that can be used, the mean is not used either."""
+        weight = np.full(count, np.nan if default is None else default)
+        if _WEIGHT in self.names:
+            values, bad, units = _numbers(part[_WEIGHT])
+            weight = np.where(np.isnan(values) & ~bad, weight, np.where(bad | (units != ""), np.nan, values))
+        usable = (weight > 0.0) & (weight <= 1.0)
+        if "mean_log_k2" in measured:
+            mean = measured["mean_log_k2"]
+            lacking = mean.usable & ~usable
+            measured["mean_log_k2"] = replace(
+                mean,
+                shape=np.where(lacking, Shape.ABSENT, mean.shape).astype(np.uint8),
+                fault=np.where(lacking, Status.ERROR_MISSING, mean.fault).astype(np.uint8),
+            )
+        return np.where(usable, weight, 1.0)
 
     def _states(self, part, count: int, default: str) -> np.ndarray:
         if "evolutionary_state" not in self.names:
@@ -112,15 +132,15 @@ def recognise(source: Source) -> Columns:
         If no observable is there, or an error or shape column has no value column.
     """
     names = source.names
-    observables = tuple(name for name in OBSERVABLES if name in names)
+    observables = tuple(name for name in MEASURABLE if name in names)
     pairs = {
         f"correlation_{first}_{second}": (first, second)
         for first in OBSERVABLES
         for second in OBSERVABLES
         if first != second
     }
-    known = {"star", "system", "component", "evolutionary_state", *observables}
-    for name in OBSERVABLES:
+    known = {"star", "system", "component", "evolutionary_state", _WEIGHT, *observables}
+    for name in MEASURABLE:
         attached = [name + ending for ending in (*_ERRORS, "_shape") if name + ending in names]
         if attached and name not in observables:
             raise InputError(f"column {attached[0]!r} has no column {name!r} beside it")
@@ -136,9 +156,9 @@ def recognise(source: Source) -> Columns:
         if pair[::-1] in correlations:
             raise InputError(f"column {column!r} and {correlations[pair[::-1]]!r} say the same; keep one")
     known.update(correlations.values())
-    if not observables:
+    if not set(observables) & set(OBSERVABLES):
         hint = ""
-        if any(name.lower() in OBSERVABLES for name in names):
+        if any(name.lower() in MEASURABLE for name in names):
             hint = "; names are in lower case: mass, not Mass"
         elif len(names) == 1 and ";" in names[0]:
             hint = "; cells are separated by commas"
@@ -155,7 +175,7 @@ def recognise(source: Source) -> Columns:
 def suspicious(name: str) -> bool:
     """Whether a column that is not recognised looks as if it were meant to be one of ours."""
     plain = name.lower()
-    return plain.startswith(("correlation", "e_", "evol")) or any(x in plain for x in OBSERVABLES)
+    return plain.startswith(("correlation", "e_", "evol")) or any(x in plain for x in MEASURABLE)
 
 
 def _length(part: Mapping[str, RawColumn]) -> int:
@@ -177,7 +197,7 @@ def _numbers(column: RawColumn) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
 def _measured(name: str, part: Mapping[str, RawColumn], shape: str) -> Measured:
     """Read one observable: the cell's own error counts, else that of the error columns."""
     column = part[name]
-    observable = OBSERVABLES[name]
+    observable = MEASURABLE[name]
     if column.numbers is not None:
         count = len(column.numbers)
         value, upper, lower = column.numbers, np.full(count, np.nan), np.full(count, np.nan)

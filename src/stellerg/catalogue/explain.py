@@ -5,13 +5,14 @@ from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
-from stellerg.assembly import Notes, assemble
+from stellerg.assembly import assemble
 from stellerg.catalogue.columns import Columns, recognise
 from stellerg.catalogue.plan import Run
 from stellerg.catalogue.readers import Source, open_table
 from stellerg.catalogue.run import check_use
 from stellerg.catalogue.tally import aside_words
-from stellerg.observables import OBSERVABLES
+from stellerg.notes import Notes
+from stellerg.observables import MEASURABLE
 from stellerg.status import VALUE
 from stellerg.structure.files import load_prior
 from stellerg.wording import label
@@ -31,7 +32,7 @@ def explain_columns(plan: Run) -> RenderableType:
     for name in columns.observables:
         endings = ("", "_error", "_error_upper", "_error_lower", "_shape")
         attached = [name + e for e in endings if name + e in columns.names]
-        own = OBSERVABLES[name].unit if not OBSERVABLES[name].unit_required else "none: state it"
+        own = MEASURABLE[name].unit if not MEASURABLE[name].unit_required else "none: state it"
         table.add_row(label(name), ", ".join(attached), source.units.get(name, ""), own)
     lines = [f"{pair[0]} and {pair[1]}: column {column}" for pair, column in columns.correlations.items()]
     texts = [Text("How the columns are read", style="bold"), table]

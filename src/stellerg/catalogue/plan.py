@@ -23,7 +23,7 @@ class Run:
         parquet, csv or ecsv.
     overwrite : bool
         Replace the results of an earlier run.
-    shape, correlation, evolutionary_state, solar
+    shape, correlation, evolutionary_state, solar, k2_weight
         For rows that do not say themselves.
     propagation : mapping
         Keyword arguments of `stellerg.propagate`.
@@ -37,6 +37,7 @@ class Run:
     correlation: Mapping[tuple[str, str], float]
     evolutionary_state: str
     solar: SolarReferences
+    k2_weight: float | None
     propagation: Mapping[str, object]
 
     def star_options(self) -> dict:
@@ -46,4 +47,5 @@ class Run:
             "correlation": self.correlation,
             "evolutionary_state": self.evolutionary_state,
             "solar": self.solar,
+            "k2_weight": self.k2_weight,
         }

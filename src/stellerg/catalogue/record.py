@@ -37,6 +37,8 @@ def write_record(folder: Path, plan: Run, source: Source, columns: Columns, prop
             "correlation": {",".join(pair): value for pair, value in plan.correlation.items()},
             "evolutionary_state": plan.evolutionary_state,
             "solar_references": asdict(plan.solar),
+            "mean_log_k2_weight": plan.k2_weight,
+            "discrepancy": propagation["discrepancy"],
         },
         "conventions": asdict(propagation["conventions"]),
         "prior": {"name": prior.name, "text": prior.text},

@@ -23,7 +23,7 @@ def catalogue(
 
     Row count and order are kept; a row that cannot be done has a status, a sentence and a line in rejected.csv.
     Columns: star, and for each quantity X (mass, radius, ...) X, X_error or X_error_upper and X_error_lower,
-    optionally X_shape; correlation_X_Y; evolutionary_state.
+    optionally X_shape; correlation_X_Y; evolutionary_state; mean_log_k2_weight.
     """
     from rich.console import Console
 
@@ -41,6 +41,7 @@ def catalogue(
         correlation=settings.correlations(),
         evolutionary_state=settings.evolutionary_state,
         solar=settings.solar(),
+        k2_weight=settings.k2_weight,
         propagation=settings.propagation(),
     )
     console.print(explain_columns(plan) if explain else run(plan))

@@ -2,6 +2,7 @@
 
 import functools
 import inspect
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Annotated
@@ -13,7 +14,7 @@ from stellerg.errors import InputError
 __all__ = ["OBSERVABLE_OPTIONS", "Settings", "with_options"]
 
 # The observables with a line of help each. They stand here too so that `--help` need not load the physics; a
-# test holds them equal to `stellerg.observables.OBSERVABLES`.
+# test holds them equal to `stellerg.observables.MEASURABLE`.
 OBSERVABLE_OPTIONS = {
     "mass": "mass, nominal solar",
     "radius": "radius, nominal solar",
@@ -33,6 +34,13 @@ OBSERVABLE_OPTIONS = {
     "bolometric_flux": "bolometric flux, unit required (W/m2, erg/(s cm2))",
     "absolute_bolometric_magnitude": "absolute bolometric magnitude, IAU 2015 zero point, mag",
     "apparent_bolometric_magnitude": "apparent bolometric magnitude, IAU 2015 zero point, mag",
+    "mean_molecular_weight": "mean molecular weight, atomic mass constants",
+    "hydrogen_mass_fraction": "hydrogen mass fraction X",
+    "metal_mass_fraction": "metal mass fraction Z",
+    "log_k2": "log10 of the apsidal constant k2, dex",
+    "mean_log_k2": "log10 of the mean k2 of a system, weighted by mean_log_k2_weight, dex",
+    "moment_of_inertia_factor": "moment of inertia over M R^2",
+    "structure_coefficient": "abs(Omega) R/(G M^2)",
 }
 
 _MODEL = "Model and outputs"
@@ -105,6 +113,36 @@ _SHARED: list[tuple[str, object, object]] = [
         str,
         typer.Option("5/3", help="Adiabatic index of the gas, above 4/3.", rich_help_panel=_MODEL),
     ),
+    (
+        "pressure",
+        str,
+        typer.Option("gas", help="gas, or gas+radiation (always under prior main-sequence).", rich_help_panel=_MODEL),
+    ),
+    (
+        "ionisation",
+        bool,
+        typer.Option(False, "--ionisation", help="Count the energy that ionised the star.", rich_help_panel=_MODEL),
+    ),
+    (
+        "discrepancy",
+        float,
+        typer.Option(
+            0.25,
+            help="Misfit of polytropes to real stars, for structure observables: standard deviation of the index of "
+            "the energy less that of k2.",
+            rich_help_panel=_MODEL,
+        ),
+    ),
+    (
+        "mean_log_k2_weight",
+        float,
+        typer.Option(
+            math.nan,
+            help="Weight of the star in --mean-log-k2, in (0, 1].",
+            show_default=False,
+            rich_help_panel=_STARS,
+        ),
+    ),
     ("energy_unit", str, typer.Option("erg", help="erg or J.", rich_help_panel=_MODEL)),
     (
         "nuclear_mass_fraction",
@@ -172,6 +210,10 @@ class Settings:
     outputs: str
     time_convention: str
     adiabatic_index: str
+    pressure: str
+    ionisation: bool
+    discrepancy: float
+    mean_log_k2_weight: float
     energy_unit: str
     nuclear_mass_fraction: float
     nuclear_efficiency: float
@@ -198,7 +240,10 @@ class Settings:
                 energy_unit=self.energy_unit,
                 nuclear_mass_fraction=self.nuclear_mass_fraction,
                 nuclear_efficiency=self.nuclear_efficiency,
+                pressure=self.pressure,
+                ionisation=self.ionisation,
             ),
+            "discrepancy": self.discrepancy,
         }
 
     def _engine(self):
@@ -220,6 +265,11 @@ class Settings:
             if name not in known:
                 raise InputError(f"--{_dashed(name)}: the engine {self.engine} has no such option")
         return ENGINES[self.engine](**given, **({"seed": self.seed} if "seed" in known else {}))
+
+    @property
+    def k2_weight(self) -> float | None:
+        """Weight of the star in the mean k2 of its system, if it was given."""
+        return None if math.isnan(self.mean_log_k2_weight) else self.mean_log_k2_weight
 
     def solar(self):
         """Return the solar references of the scaling relations."""

@@ -37,6 +37,7 @@ def star(
         shape=settings.shape,
         evolutionary_state=settings.evolutionary_state,
         solar=settings.solar(),
+        mean_log_k2_weight=settings.k2_weight,
         **given,
     )
     if plot is not None:

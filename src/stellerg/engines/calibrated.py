@@ -119,7 +119,7 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     counts = len(problem.outputs)
     beside = np.einsum("sff->sf", carried.covariance)[:, :counts]
     scatter = np.minimum(problem.interior.relation.scatter, problem.interior.relation.convective_sd)
-    sd = np.sqrt(beside + scatter[:, None] ** 2)
+    sd = np.sqrt(np.maximum(beside, 0.0) + scatter[:, None] ** 2)
     free = (np.arange(len(problem.inputs)) != carried.through[:, None])[:, None, :]
     # ln R enters with a slope between those with and without the coefficient's
     bare = carried.forms[:, :counts]

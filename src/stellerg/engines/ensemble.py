@@ -75,6 +75,11 @@ class Target:
         """Number of coordinates."""
         return len(self.centre) + 1
 
+    @property
+    def _observes(self) -> bool:
+        """Whether structure observables weigh the structure."""
+        return self.problem.interior.observed is not None and bool(self.problem.structured.any())
+
     def parameters(self, coordinates: np.ndarray) -> np.ndarray:
         """theta of coordinates, (..., dimension) to (..., parameter)."""
         return self.centre + np.einsum("rq,...q->...r", self.root, coordinates[..., :-1])
@@ -82,7 +87,22 @@ class Target:
     def log_probability(self, coordinates: np.ndarray) -> np.ndarray:
         """Logarithm of the density at coordinates (walker, dimension), (walker,); not finite: minus infinity."""
         density = log_target(self.problem, self.parameters(coordinates)[None])[0] - 0.5 * coordinates[:, -1] ** 2
+        if self._observes:
+            density = density + self._log_likelihood(coordinates)
         return np.where(np.isfinite(density), density, -np.inf)
+
+    def _log_likelihood(self, coordinates: np.ndarray) -> np.ndarray:
+        """Log likelihood of the structure observables, averaged over their misfit, (walker,)."""
+        known = self._latents(self.parameters(coordinates)[None])
+        mass, radius = known.get("mass"), known.get("radius")
+        q = self.problem.interior.prior_quantile(ndtr(coordinates[None, :, -1]), mass, radius)
+        return self.problem.interior.log_likelihood(q, mass, radius)[0]
+
+    def _latents(self, theta: np.ndarray) -> dict[str, np.ndarray]:
+        """ln of the latents at theta (1, draw, parameter), (1, draw) each."""
+        problem = self.problem
+        values = np.einsum("lr,sdr->sld", problem.latent_weights, theta) + problem.latent_constant[:1, :, None]
+        return {name: values[:, k] for k, name in enumerate(problem.latents)}
 
     def quantities(self, coordinates: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """u, ln of the latents and ln Y of coordinates.
@@ -107,7 +127,7 @@ class Target:
         if problem.structured.any():
             # one star: its draws along the second axis
             known = {name: values.reshape(1, -1) for name, values in zip(problem.latents, latents, strict=True)}
-            q = problem.interior.quantile(u.reshape(1, -1), known.get("mass"), known.get("radius"))
+            q = problem.interior.prior_quantile(u.reshape(1, -1), known.get("mass"), known.get("radius"))
             outputs = outputs + problem.log_structure(q, known)[0].reshape(outputs.shape)
         return u, latents, outputs
 

@@ -11,6 +11,7 @@ from stellerg.structure.model import Component
 __all__ = ["StructureTerm", "has_derivative", "structure_expectation", "structure_term"]
 
 _STEP = 1e-3  # in the logarithms of mass, radius, molecular weight and coefficient: central differences, error 1e-6
+_PROBABLE = 1024  # equally probable structures over which a posterior mean is taken
 _FOLLOWED = ("mass", "radius", "mean_molecular_weight")
 
 
@@ -85,9 +86,17 @@ def _coefficient(problem: Problem, known: dict) -> tuple[np.ndarray, np.ndarray]
     interior = problem.interior
     if interior.relation is not None:
         centre = interior.relation.centre(known["mass"], known["radius"])[:, 0]
-        return interior.relation.moments(centre)
+        if interior.observed is None:
+            return interior.relation.moments(centre)
+        return _weighed(interior, known["mass"], known["radius"])
     interval = mass_score(problem).interval
     mean, spread = np.full((2, len(problem)), np.nan)
+    if interior.cells:
+        for number, cells in enumerate(interior.cells):
+            rows = np.flatnonzero(interval == number)
+            if rows.size:
+                mean[rows], spread[rows] = cells.take(rows).moments
+        return mean, spread
     for number, piece in enumerate(interior.intervals):
         rows = interval == number
         if rows.any() and len(piece.mixture.components) == 1:
@@ -98,10 +107,24 @@ def _coefficient(problem: Problem, known: dict) -> tuple[np.ndarray, np.ndarray]
     return mean, spread
 
 
+def _weighed(interior, log_mass: np.ndarray, log_radius: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Mean and standard deviation of ln w after structure observables, at given mass and radius, (star,) each."""
+    u = np.broadcast_to((np.arange(_PROBABLE) + 0.5) / _PROBABLE, (len(log_mass), _PROBABLE))
+    mass, radius = (np.broadcast_to(x, u.shape) for x in (log_mass, log_radius))
+    q = interior.quantile(u, mass, radius)
+    weight = interior.log_weight(q, mass, radius)
+    weight = np.exp(weight - weight.max(axis=1, keepdims=True))
+    weight = weight / weight.sum(axis=1, keepdims=True)
+    mean = (weight * q).sum(axis=1)
+    return mean, np.sqrt((weight * np.square(q - mean[:, None])).sum(axis=1))
+
+
 def has_derivative(problem: Problem) -> np.ndarray:
     """Whether structure has a first order: it is no mixture, and does not change within the range of the mass."""
     if problem.interior.relation is not None:
         return problem.interior.relation.single
     interval = mass_score(problem).interval
+    if problem.interior.cells:
+        return interval >= 0
     single = np.array([len(piece.mixture.components) == 1 for piece in problem.interior.intervals])
     return (interval >= 0) & single[np.maximum(interval, 0)]

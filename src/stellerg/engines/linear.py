@@ -166,8 +166,8 @@ class LinearAnswer:
         -------
         dict of str to uncertainties.UFloat
             Inputs in their quoted scale, ``structure`` (in the variable its density is stated on; a normal score
-            under a calibration) where it is not exact, and every output in its unit; the outputs are correlated with
-            the inputs.
+            under a calibration or with structure observables) where it is not exact, and every output in its unit; the
+            outputs are correlated with the inputs.
         """
         import uncertainties
         from uncertainties import umath
@@ -203,7 +203,7 @@ class LinearAnswer:
         if not spread[carrying].any():
             return {int(o): float(term.value[star, o]) for o in carrying}
         mean, sd = 0.0, 1.0
-        if problem.interior.relation is None:
+        if problem.interior.relation is None and not problem.interior.cells:
             number = int(mass_score(problem).interval[star])
             mean, sd, _ = structure_expectation(problem.interior.model.intervals[number].mixture.components[0])
         found["structure"] = uncertainties.ufloat(mean, sd, tag="structure")

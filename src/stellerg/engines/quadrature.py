@@ -18,9 +18,11 @@ from typing import ClassVar
 import numpy as np
 from scipy.special import ndtri
 
+from stellerg.binding import Kind
 from stellerg.engines import smoothing
 from stellerg.engines.answer import Answer
 from stellerg.engines.calibrated import CalibratedAnswer, calibrated_refusal
+from stellerg.engines.cells import CellsAnswer, cells_refusal
 from stellerg.engines.convolution import convolve
 from stellerg.engines.intervals import MassScore, mass_score, moments_of_structure
 from stellerg.engines.joined import JoinedAnswer
@@ -52,7 +54,9 @@ class Quadrature:
         "the structure model changes within the range of a mass that several inputs determine, not all "
         "log-normal: use montecarlo",
         "errors whose upper and lower side differ by more than a factor of two: use montecarlo",
-        "errors too large for the expansion under a calibrated coefficient: use montecarlo",
+        "errors too large for the expansions used with a calibrated coefficient, structure observables or a curved "
+        "binding energy: use montecarlo",
+        "structure observables under a calibrated coefficient weigh mass and radius too: use montecarlo",
     )
 
     def accepts(self, problem: Problem) -> np.ndarray:
@@ -63,6 +67,11 @@ class Quadrature:
         if problem.interior.relation is not None:
             refusal = calibrated_refusal(problem.only(np.flatnonzero(problem.structured)))
 
+            reason = np.where(refusal > 0, np.where(refusal == 1, 3, 5), reason)
+            if problem.interior.observed is not None:
+                reason[:] = 6
+        elif _needs_cells(problem):
+            refusal = cells_refusal(problem)
             reason = np.where(refusal > 0, np.where(refusal == 1, 3, 5), reason)
         else:
             reason[~mass_score(problem).tractable] = 3
@@ -82,13 +91,21 @@ class Quadrature:
         return parts[0][1] if len(parts) == 1 else JoinedAnswer(problem, tuple(parts))
 
 
+def _needs_cells(problem: Problem) -> bool:
+    """Whether the density of ln w is a star's own, or the binding energy no constant share."""
+    follows = np.isin(problem.kinds, (Kind.BINDING, Kind.INTERNAL)).any()
+    return bool(problem.interior.cells) or (follows and not problem.binding.constant)
+
+
 def _sorted_outputs(problem: Problem):
     """Yield the positions of outputs that are treated alike, and how."""
     carrying = problem.structured
-    if problem.interior.relation is None:
-        yield np.arange(len(carrying)), QuadratureAnswer
+    curved = CellsAnswer if _needs_cells(problem) else QuadratureAnswer
+    carried = curved if problem.interior.relation is None else CalibratedAnswer
+    if carried is QuadratureAnswer:
+        yield np.arange(len(carrying)), carried
         return
-    for chosen, kind in ((carrying, CalibratedAnswer), (~carrying, QuadratureAnswer)):
+    for chosen, kind in ((carrying, carried), (~carrying, QuadratureAnswer)):
         positions = np.flatnonzero(chosen)
         if positions.size:
             yield positions, kind

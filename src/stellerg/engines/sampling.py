@@ -121,13 +121,26 @@ class Draws:
             return measured
         return measured + p.log_structure(self.log_coefficient, self._known)
 
+    @cached_property
+    def whole_log_weight(self) -> np.ndarray | None:
+        """Logarithm of all weights, those of structure observables included, (star, draw); None where all are equal."""
+        interior = self.problem.interior
+        if not (interior.weighs and self.problem.structured.any()):
+            return self.log_weight
+        known = self._known
+        weight = interior.log_weight(self.log_coefficient, known["mass"], known.get("radius"))
+        return weight if self.log_weight is None else weight + self.log_weight
+
     @property
     def weight(self) -> np.ndarray | None:
         """Importance weights that sum to one, (star, draw)."""
-        if self.log_weight is None:
+        log_weight = self.whole_log_weight
+        if log_weight is None:
             return None
-        weight = np.exp(self.log_weight - self.log_weight.max(axis=1, keepdims=True))
-        return weight / weight.sum(axis=1, keepdims=True)
+        top = log_weight.max(axis=1, keepdims=True)
+        weight = np.exp(log_weight - np.where(np.isfinite(top), top, 0.0))
+        total = weight.sum(axis=1, keepdims=True)
+        return weight / np.where(total > 0.0, total, 1.0)
 
     def equally_weighted(self) -> np.ndarray:
         """ln Y of draws that all count the same, (star, output, draw): weighted ones are resampled systematically."""
@@ -149,7 +162,8 @@ class Draws:
         weight = self.weight
         if weight is None:
             return np.full(len(self.u), float(self.u.shape[1]))
-        return 1.0 / np.square(weight).sum(axis=1)
+        squares = np.square(weight).sum(axis=1)
+        return np.where(squares > 0.0, 1.0 / np.where(squares > 0.0, squares, 1.0), 0.0)
 
     def log_reference_density(self) -> np.ndarray:
         """ln |J' C^-1 J|^(1/2) of each draw: what a population study divides out, (star, draw)."""

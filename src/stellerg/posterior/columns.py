@@ -69,6 +69,9 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
         values = posterior.quantile(STANDARD_PROBABILITIES, output)
         for k, (end, which) in enumerate(zip(_ENDS, _MEANING, strict=True)):
             columns.append(Column(output + end, values[:, k], unit, f"{meaning}: {which}"))
+        if output in posterior.calibrated_medians:
+            text = f"{meaning}: median under the calibrated coefficient, where the prior excludes it"
+            columns.append(Column(f"{output}_calibrated", posterior.calibrated(output), unit, text))
         logarithm = f"log10 of the {meaning}" + (f" in {unit}" if unit else "")
         columns.append(Column(f"{output}_log10_mean", posterior.log10_mean(output), "", f"mean of {logarithm}"))
         columns.append(
@@ -83,6 +86,7 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
             columns.append(
                 Column(f"{output}_budget_{name}", share, "", f"share of {name} in the variance of ln {output}")
             )
+    columns += _inside(posterior)
     if posterior.use:  # measurements named as independent may be redundant, and then say whether they agree
         freedom = np.where(np.isnan(posterior.probability), np.nan, posterior.degrees_of_freedom)
         columns += [
@@ -90,6 +94,19 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
             Column("degrees_of_freedom", freedom, "", "of chi2"),
             Column("chi2_probability", posterior.probability, "", "probability of a larger chi2"),
         ]
+    return columns
+
+
+def _inside(posterior: Posterior) -> list[Column]:
+    """What a result leaves out or contradicts of the inside of stars."""
+    text = "energy of ionisation over the binding energy, at medians"
+    columns = [
+        Column("radiation_share", posterior.radiation_share(), "", "share of radiation in the pressure, at medians"),
+        Column("ionisation_share", posterior.ionisation_share(), "", text),
+    ]
+    for name, values in posterior.predictive_probabilities().items():
+        text = f"two-sided predictive probability of {name} under the prior"
+        columns.append(Column(f"{name}_predictive_probability", values, "", text))
     return columns
 
 

@@ -147,6 +147,7 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int, use_op
         *_judgement(posterior.diagnostics(row)),
         _first_order(given),
     ]
+    lines += _inside(answer, given)
     if answer["consistency"]:
         c = answer["consistency"]
         lines.append(
@@ -160,6 +161,38 @@ def _sentences(posterior: Posterior, answer: dict, given: dict, row: int, use_op
             lines.append(f"Not named in use, and so not used: {names}.")
         else:
             lines.append(f"Left aside as redundant: {names} ({use_option} names independent measurements).")
+    return lines
+
+
+def _inside(answer: dict, given: dict) -> list[str]:
+    """What is left out of the inside, what contradicts the prior, and what the calibration would give."""
+    lines = []
+    for name, sentence in (
+        ("radiation", "Radiation carries {share} of the pressure ({counted})."),
+        ("ionisation", "The energy of ionisation is {share} of the binding energy ({counted})."),
+    ):
+        part = answer[name]
+        if part["share"] is not None:
+            counted = "counted" if part["counted"] else "not counted"
+            lines.append(sentence.format(share=f"{100.0 * part['share']:.2g} %", counted=counted))
+    weight = answer["structure"]["fully_convective"]
+    if weight is not None:
+        lines.append(
+            f"Structure is a mixture: fully convective with a probability of {percentage(weight)}, else as the "
+            "calibration of stars with a radiative core."
+        )
+    for name, probability in answer["structure"]["predictive_probability"].items():
+        if probability is not None:
+            lines.append(f"{label(name)}: two-sided predictive probability under the prior {probability:.2g}.")
+    calibrated = []
+    for name, output in given.items():
+        value = output["calibrated"]
+        if value is not None:
+            power = power_of_ten(value)
+            text = f"{label(name)} {number(value, power)}"
+            calibrated.append(f"{text} {with_power(output['unit'], power)}".strip())
+    if calibrated:
+        lines.append(f"Medians under the calibrated coefficient: {'; '.join(calibrated)}.")
     return lines
 
 

@@ -46,7 +46,13 @@ def star_document(posterior: Posterior, row: int = 0) -> dict:
         "structure": {
             "coefficient": _quantiles(posterior, COEFFICIENT, row),
             "n_effective": _quantiles(posterior, EFFECTIVE_INDEX, row),
+            "fully_convective": _plain(posterior.convective_share()[row]),
+            "predictive_probability": {
+                name: _plain(values[row]) for name, values in posterior.predictive_probabilities().items()
+            },
         },
+        "radiation": {"share": _plain(posterior.radiation_share()[row]), "counted": posterior.radiation_counted},
+        "ionisation": {"share": _plain(posterior.ionisation_share()[row]), "counted": posterior.ionisation_counted},
         "consistency": {
             "chi2": _plain(posterior.chi2[row]),
             "degrees_of_freedom": int(posterior.degrees_of_freedom[row]),
@@ -72,6 +78,7 @@ def _output(posterior: Posterior, name: str, row: int) -> dict | None:
     return {
         "unit": posterior.units[name],
         **quantiles,
+        "calibrated": _plain(posterior.calibrated(name)[row]),
         "log10_mean": _plain(posterior.log10_mean(name)[row]),
         "log10_standard_deviation": _plain(posterior.log10_sd(name)[row]),
         "linear": {

@@ -33,6 +33,8 @@ class Piece:
     budget_names : tuple of str
     budget : ndarray, (m, output, name)
         Outputs in the order of the answer's problem.
+    inside : checks' Inside
+        Radiation, ionisation, predictions of structure observables.
     """
 
     rows: np.ndarray
@@ -40,6 +42,7 @@ class Piece:
     linear: Any
     budget_names: tuple[str, ...]
     budget: np.ndarray
+    inside: Any
 
     def position(self, output: str) -> int | None:
         """Position of an output in this piece; None where it is not given."""
@@ -94,6 +97,8 @@ class Posterior:
         Of over-determined stars; NaN elsewhere.
     degrees_of_freedom : ndarray of int, (star,)
     pieces : tuple of Piece
+    radiation_counted, ionisation_counted : bool
+        Whether they enter the binding energy.
     calibrated_medians : dict of str to ndarray, (star,)
         By output: see `calibrated`.
     """
@@ -123,6 +128,8 @@ class Posterior:
     probability: np.ndarray
     pieces: tuple[Piece, ...]
     sampler: Callable = field(repr=False)
+    radiation_counted: bool = False
+    ionisation_counted: bool = False
     calibrated_medians: Mapping[str, np.ndarray] = field(default_factory=dict, repr=False)
     _cache: dict = field(default_factory=dict, repr=False, compare=False)
 
@@ -160,8 +167,9 @@ class Posterior:
             if moved.size:
                 order = np.argsort(piece.rows)
                 chosen = order[np.searchsorted(piece.rows, rows[moved], sorter=order)]
-                answer, linear = piece.answer.take(chosen), piece.linear.take(chosen)
-                pieces.append(Piece(moved, answer, linear, piece.budget_names, piece.budget[chosen]))
+                taken = (piece.answer.take(chosen), piece.linear.take(chosen))
+                judged = piece.inside.take(chosen)
+                pieces.append(Piece(moved, *taken, piece.budget_names, piece.budget[chosen], judged))
         return replace(
             self,
             **{name: getattr(self, name)[rows] for name in per_star},
@@ -244,6 +252,30 @@ class Posterior:
     def numerical_error(self, output: str) -> np.ndarray:
         """Estimated error of the cumulative at a reported quantile, (star,)."""
         return self._scatter(output, lambda a, o: a.numerical_error[:, o, None], 1)[:, 0]
+
+    def radiation_share(self) -> np.ndarray:
+        """Share of radiation in the pressure, weighted by pressure, at the medians, (star,); NaN if mass is unknown."""
+        return self._judged(lambda inside: inside.radiation)
+
+    def ionisation_share(self) -> np.ndarray:
+        """Energy of ionisation over the binding energy without it, at the medians, (star,)."""
+        return self._judged(lambda inside: inside.ionisation)
+
+    def convective_share(self) -> np.ndarray:
+        """Weight of a fully convective interior where the calibrated structure is a mixture of two, (star,)."""
+        return self._judged(lambda inside: inside.convective)
+
+    def predictive_probabilities(self) -> dict[str, np.ndarray]:
+        """Two-sided predictive probability of each structure observable, (star,) each; NaN where there is none."""
+        names = dict.fromkeys(name for piece in self.pieces for name in piece.inside.predictive)
+        nothing = np.nan
+        return {name: self._judged(lambda inside, n=name: inside.predictive.get(n, nothing)) for name in names}
+
+    def _judged(self, read: Callable) -> np.ndarray:
+        out = np.full(len(self), np.nan)
+        for piece in self.pieces:
+            out[piece.rows] = read(piece.inside)
+        return out
 
     def linear_value(self, output: str) -> np.ndarray:
         """First-order value, (star,); NaN where it does not exist."""

@@ -5,7 +5,7 @@ from rich.table import Table
 from rich.text import Text
 
 from stellerg.measured import Scale, Shape
-from stellerg.observables import OBSERVABLES
+from stellerg.observables import MEASURABLE
 from stellerg.posterior import Posterior
 from stellerg.stars import Stars
 from stellerg.status import STATUS_TEXT, Status
@@ -39,12 +39,12 @@ def explanation(stars: Stars, posterior: Posterior, row: int = 0) -> RenderableT
             error = "none"
         else:
             error = f"{upper:g}" if upper == lower else f"+{upper:g} -{lower:g}"
-        unit = OBSERVABLES[name].unit
+        unit = MEASURABLE[name].unit
         if measured.scale is not Scale.LINEAR:
             unit = _SCALE_WORDS[measured.scale] + (f" of {unit}" if measured.scale is Scale.DEX else "")
         role = ("not named in use" if posterior.use else "left aside as redundant") if name in aside else "used"
         if not measured.usable[row]:
-            sentence = STATUS_TEXT[Status(measured.fault[row])].about(name, OBSERVABLES[name].unit)
+            sentence = STATUS_TEXT[Status(measured.fault[row])].about(name, MEASURABLE[name].unit)
             role = f"not usable: {sentence}"
         distribution = shape.name.lower().replace("_", "-") if measured.usable[row] else ""
         if measured.scale is not Scale.LINEAR and shape is Shape.LOGNORMAL:

@@ -219,6 +219,7 @@ class Calibration:
             log_convective=np.log(coefficient),
             misfit=self.misfit(log_mass),
             log_mass=log_mass,
+            log_radius=log_radius,
         )
 
     def misfit(self, log_mass: np.ndarray) -> np.ndarray:

@@ -1,14 +1,19 @@
 """The interior of the stars of a problem: S(u | ln M, ln R), star by star, from a model and what was measured."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
 from stellerg.structure.calibration import Calibration
+from stellerg.structure.informed import COMPANIONS, Cells, cells_of, equally_probable
 from stellerg.structure.model import MassInterval, StructureModel
+from stellerg.structure.observed import Observed
 from stellerg.structure.relation import Relation
 
 __all__ = ["Interior"]
+
+_PREDICTIVE = 512  # equally probable structures over which a prediction is averaged
 
 
 @dataclass(frozen=True)
@@ -20,10 +25,23 @@ class Interior:
     model : StructureModel or Calibration
     relation : Relation or None
         Of calibrated stars.
+    observed : Observed or None
+        Structure observables, where a star has any.
+    cells : tuple of Cells
+        Under a density: what prior and observables give, for each interval of mass; empty without observables.
     """
 
     model: StructureModel | Calibration
     relation: Relation | None = None
+    observed: Observed | None = None
+    cells: tuple[Cells, ...] = ()
+
+    @classmethod
+    def of(cls, model, relation: Relation | None, observed: Observed | None, count: int) -> "Interior":
+        """Bring a model and structure observables together, for stars of one kind: all with observables, or none."""
+        if observed is None or relation is not None:
+            return cls(model, relation, observed)
+        return cls(model, None, observed, tuple(cells_of(p.mixture, observed, count) for p in model.intervals))
 
     @property
     def intervals(self) -> tuple[MassInterval, ...]:
@@ -35,17 +53,119 @@ class Interior:
         """Inner boundaries of the intervals in ln M."""
         return np.zeros(0) if isinstance(self.model, Calibration) else self.model.edges
 
-    @property
-    def follows_radius(self) -> bool:
-        """Whether ln w depends on the mass and the radius of a star continuously."""
-        return isinstance(self.model, Calibration)
-
     def take(self, which: np.ndarray) -> "Interior":
         """Return some of the stars."""
-        return self if self.relation is None else replace(self, relation=self.relation.take(which))
+        return Interior(
+            self.model,
+            self.relation and self.relation.take(which),
+            self.observed and self.observed.take(which),
+            tuple(cells.take(which) for cells in self.cells),
+        )
 
-    def quantile(self, u: np.ndarray, log_mass: np.ndarray | None, log_radius: np.ndarray | None) -> np.ndarray:
-        """S(u | ln M, ln R): ln w at cumulative probability u, (star, m) each; None where the model needs none."""
+    def prior_quantile(self, u: np.ndarray, log_mass: np.ndarray | None, log_radius: np.ndarray | None) -> np.ndarray:
+        """ln w at cumulative probability u before anything was measured of the inside, (star, m) each."""
         if self.relation is not None:
             return self.relation.quantile(u, log_mass, log_radius)
         return self.model.quantile(u, log_mass, log_radius)
+
+    def quantile(self, u: np.ndarray, log_mass: np.ndarray | None, log_radius: np.ndarray | None) -> np.ndarray:
+        """S(u | ln M, ln R): ln w at cumulative probability u, (star, m) each; None where the model needs none.
+
+        With structure observables: after them under a density; before them, to be weighed with `log_weight`, under a
+        calibration.
+        """
+        if not self.cells:
+            return self.prior_quantile(u, log_mass, log_radius)
+        found = [cells.quantile(u) for cells in self.cells]
+        if len(found) == 1:
+            return found[0]
+        which = np.searchsorted(self.edges, log_mass, side="right")
+        return np.select([which == number for number in range(len(found))], found)
+
+    @property
+    def weighs(self) -> bool:
+        """Whether draws of mass, radius and structure need the weights of `log_weight`."""
+        return self.observed is not None and (self.relation is not None or len(self.cells) > 1)
+
+    def log_weight(self, q: np.ndarray, log_mass: np.ndarray, log_radius: np.ndarray | None) -> np.ndarray:
+        """Logarithm of the weight that structure observables give to draws of `quantile`, (star, m)."""
+        if self.cells:
+            evidence = [np.broadcast_to(cells.log_evidence[:, None], q.shape) for cells in self.cells]
+            which = np.searchsorted(self.edges, log_mass, side="right")
+            return np.select([which == number for number in range(len(evidence))], evidence)
+        centre = self.relation.centre(log_mass, log_radius)
+        return self._of_both(q, centre, lambda observed: _Tabulated.of(observed, q, self._companions).at(q))
+
+    def log_likelihood(self, q, log_mass, log_radius) -> np.ndarray:
+        """Log likelihood of the structure observables at ln w, averaged over misfit and companion, (star, m)."""
+        if self.relation is None:
+            which = None if len(self.intervals) == 1 else np.searchsorted(self.edges, log_mass, side="right")
+            found = [self.observed.marginal(q, self._companions_of(piece)) for piece in self.intervals]
+            return found[0] if which is None else np.select([which == k for k in range(len(found))], found)
+        centre = self.relation.centre(log_mass, log_radius)
+        return self._of_both(q, centre, lambda observed: observed.marginal(q, self._companions))
+
+    def _companions_of(self, piece: MassInterval) -> np.ndarray | None:
+        """Equally probable ln w of companions under the density of an interval of mass, (star, k)."""
+        if not self.observed.has_companion.any():
+            return None
+        return equally_probable(piece.mixture, len(self.observed.misfit))
+
+    def _of_both(self, q, centre, value):
+        """A log likelihood, averaged over the two kinds of interior a calibrated star may have, given ln w."""
+        if not self.relation.convective.any():
+            return value(self.observed)
+        share = self.relation.log_convective_share(q, centre)
+        with np.errstate(divide="ignore"):
+            rest = np.log(-np.expm1(np.minimum(share, 0.0)))
+        return np.logaddexp(share + value(self.observed.convective()), rest + value(self.observed))
+
+    @cached_property
+    def _companions(self) -> np.ndarray | None:
+        """Equally probable ln w of the companions of calibrated stars: of the same mass and radius, (star, k)."""
+        if not self.observed.has_companion.any():
+            return None
+        u = np.broadcast_to((np.arange(COMPANIONS) + 0.5) / COMPANIONS, (len(self.observed.misfit), COMPANIONS))
+        relation = self.relation
+        return relation.quantile(u, relation.log_mass[:, None], relation.log_radius[:, None])
+
+    def predictive_probability(self, log_mass, log_radius) -> dict[str, np.ndarray]:
+        """Two-sided predictive probability of each structure observable, (star,), at medians of mass and radius."""
+        count = len(self.observed.misfit)
+        u = np.broadcast_to((np.arange(_PREDICTIVE) + 0.5) / _PREDICTIVE, (count, _PREDICTIVE))
+        mass = None if log_mass is None else np.broadcast_to(log_mass[:, None], u.shape)
+        radius = None if log_radius is None else np.broadcast_to(log_radius[:, None], u.shape)
+        q = self.prior_quantile(u, mass, radius)
+        # the companion's structures in an order that has nothing to do with the star's: a step that shares no factor
+        other = q[:, (np.arange(_PREDICTIVE) * 197) % _PREDICTIVE] if self.observed.has_companion.any() else None
+        return {name: self.observed.predictive_probability(name, q, other) for name in self.observed.measured}
+
+
+@dataclass(frozen=True)
+class _Tabulated:
+    """A log likelihood of ln w on an equally spaced grid; cubic between four points."""
+
+    start: np.ndarray
+    step: np.ndarray
+    values: np.ndarray
+
+    @classmethod
+    def of(cls, observed: Observed, q: np.ndarray, companions, points: int = 1024) -> "_Tabulated":
+        low, high = q.min(axis=1), q.max(axis=1)
+        step = (high - low + 1e-9) / (points - 4)
+        start = low - 1.5 * step
+        return cls(start, step, observed.marginal(start[:, None] + step[:, None] * np.arange(points), companions))
+
+    def at(self, q: np.ndarray) -> np.ndarray:
+        place = (q - self.start[:, None]) / self.step[:, None]
+        cell = np.clip(np.floor(place).astype(np.intp), 1, self.values.shape[1] - 3)
+        t = place - cell
+        y = [np.take_along_axis(self.values, cell + k, axis=1) for k in (-1, 0, 1, 2)]
+        cubic = (
+            -t * (t - 1.0) * (t - 2.0) / 6.0 * y[0]
+            + (t + 1.0) * (t - 1.0) * (t - 2.0) / 2.0 * y[1]
+            - (t + 1.0) * t * (t - 2.0) / 2.0 * y[2]
+            + (t + 1.0) * t * (t - 1.0) / 6.0 * y[3]
+        )
+        finite = np.isfinite(cubic)
+        return np.where(finite, cubic, np.minimum(y[1], y[2]))

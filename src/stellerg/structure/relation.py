@@ -10,7 +10,7 @@ from dataclasses import dataclass, fields
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import ndtr, ndtri, owens_t
+from scipy.special import log_ndtr, ndtr, ndtri, owens_t
 
 if TYPE_CHECKING:
     from stellerg.structure.calibration import Calibration
@@ -40,8 +40,8 @@ class Relation:
         Its ln w.
     misfit : ndarray
         Share of the misfit of polytropes that the star has (0: fully convective).
-    log_mass : ndarray
-        Of the median, on which all this was decided.
+    log_mass, log_radius : ndarray
+        Of the medians, on which all this was decided.
     """
 
     calibration: "Calibration"
@@ -53,6 +53,7 @@ class Relation:
     log_convective: np.ndarray
     misfit: np.ndarray
     log_mass: np.ndarray
+    log_radius: np.ndarray
 
     def __len__(self) -> int:
         return len(self.follows)
@@ -113,6 +114,17 @@ class Relation:
             return below
         weight = self.convective[:, None]
         return (1.0 - weight) * below + weight * ndtr((q - self.log_convective[:, None]) / self.convective_sd)
+
+    def log_convective_share(self, q: np.ndarray, centre: np.ndarray) -> np.ndarray:
+        """Logarithm of the probability that a star of ln w = q is fully convective, (star, m)."""
+        width = np.hypot(self.scatter, self.widening)[:, None]
+        score, skew = (q - centre) / width, (self.widening / self.scatter)[:, None]
+        usual = np.log(2.0) + log_ndtr(skew * score) - 0.5 * score**2 - np.log(width)
+        score = (q - self.log_convective[:, None]) / self.convective_sd
+        with np.errstate(divide="ignore"):
+            usual = usual + np.log1p(-self.convective)[:, None]
+            convective = np.log(self.convective)[:, None] - 0.5 * score**2 - np.log(self.convective_sd)
+        return convective - np.logaddexp(usual, convective)
 
     def _solve(self, u, centre):
         """Bisect; the spread of ln w brackets it."""
