@@ -9,13 +9,16 @@ for the expansion of the kernel.
 """
 
 from dataclasses import dataclass, field
-from functools import cached_property
+from functools import cached_property, lru_cache
 
 import numpy as np
+from scipy.special import ndtri
 
-from stellerg.binding import MEAN_MOLECULAR_WEIGHT, Kind
+from stellerg.binding import Kind
 from stellerg.engines.answer import REPORTED
+from stellerg.engines.carried import Carried, along, carried_forms, input_cumulants
 from stellerg.engines.kernels import Kernels, expansion_error
+from stellerg.measured import Shape
 from stellerg.problem import Problem
 from stellerg.status import Status
 
@@ -29,71 +32,9 @@ _VALUES = 2**17  # star-node pairs treated together: bounds memory, changes no b
 _GUARD = 5e-6  # error of the expansion above which an input gets nodes of its own
 _WORST = 5e-5  # and above which the star is refused
 _STEP = 0.05  # in ln w, ln R and ln mu, for derivatives of the share; the share is smooth on this scale
+_ON_A_SIDE = 0.8  # Gauss-Legendre nodes on a side of a kink, for each of a trapezoid over both
 _HALF, _HALF_WEIGHT = np.polynomial.legendre.leggauss(40)
 _HALF_REACH = 6.0  # half-normal scales covered: 2e-9 lies outside
-
-
-@dataclass(frozen=True)
-class _Carried:
-    """How linear forms of the inputs move with the score of the mass, and vary beside it. Each (star, ...).
-
-    A form is a row of weights over the inputs; `forms` holds those of the outputs, ln R and ln mu.
-    """
-
-    forms: np.ndarray  # (star, form, input)
-    mean: np.ndarray  # (star, form)
-    slope: np.ndarray  # (star, form): d mean/dz where the mass is jointly normal
-    covariance: np.ndarray  # (star, form, form): beside the score of the mass, of all other inputs
-    log_mass: np.ndarray  # (star,): its mean
-    mass_slope: np.ndarray  # (star,)
-    through: np.ndarray  # (star,): input that alone carries the mass, -1 where it is jointly normal
-
-    def take(self, rows):
-        """Return some of the stars."""
-        return _Carried(*(getattr(self, name)[rows] for name in self.__dataclass_fields__))
-
-
-def _carried(problem: Problem) -> _Carried:
-    count, inputs = len(problem), len(problem.inputs)
-    latents = np.broadcast_to(problem.latent_input_weights, (count, len(problem.latents), inputs))
-    outputs = np.broadcast_to(problem.input_weights, (count, len(problem.outputs), inputs))
-    molecular = (
-        latents[:, problem.latent("mean_molecular_weight")] if _molecular(problem) else np.zeros((count, inputs))
-    )
-    forms = np.concatenate([outputs, latents[:, [problem.latent("radius")]], molecular[:, None]], axis=1)
-    at_mean = problem.log_latents(problem.log_mean)
-    mean = [problem.log_outputs(problem.log_mean), at_mean[:, [problem.latent("radius")]]]
-    mean.append(
-        at_mean[:, [problem.latent("mean_molecular_weight")]]
-        if _molecular(problem)
-        else np.full((count, 1), np.log(MEAN_MOLECULAR_WEIGHT))
-    )
-    of_mass = latents[:, problem.latent("mass")]
-    normal = problem.log_normal
-    through = np.full(count, -1)
-    if inputs:
-        through = np.where(((of_mass != 0.0) & ~normal).any(axis=1), np.argmax(of_mass != 0.0, axis=1), -1)
-    covariance = problem.log_covariance
-    own = np.eye(inputs, dtype=bool) & (through[:, None] == np.arange(inputs))[:, None, :]
-    covariance = np.where(own, 0.0, covariance)  # what carries the mass is known, given its score
-    along = np.einsum("sjk,sk->sj", covariance, np.where(normal, of_mass, 0.0))
-    sd = np.sqrt(np.maximum(np.einsum("sj,sj->s", along, of_mass), 0.0))
-    safe = np.where(sd > 0.0, sd, 1.0)
-    slope = np.einsum("sfj,sj->sf", forms, along) / safe[:, None]
-    beside = np.einsum("sfj,sjk,sgk->sfg", forms, covariance, forms) - slope[:, :, None] * slope[:, None, :]
-    return _Carried(
-        forms,
-        np.concatenate(mean, axis=1),
-        slope,
-        beside,
-        at_mean[:, problem.latent("mass")],
-        np.where(through < 0, sd, 0.0),
-        through,
-    )
-
-
-def _molecular(problem: Problem) -> bool:
-    return "mean_molecular_weight" in problem.latents
 
 
 def calibrated_refusal(problem: Problem) -> np.ndarray:
@@ -115,7 +56,7 @@ def calibrated_refusal(problem: Problem) -> np.ndarray:
 
 def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     """Input that needs nodes of its own (-1: none), and the error of the expansion that is left, (star, output)."""
-    carried = _carried(problem)
+    carried = carried_forms(problem)
     counts = len(problem.outputs)
     beside = np.einsum("sff->sf", carried.covariance)[:, :counts]
     scatter = np.minimum(problem.interior.relation.scatter, problem.interior.relation.convective_sd)
@@ -125,7 +66,7 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     bare = carried.forms[:, :counts]
     radius = carried.forms[:, [counts]]
     weights = np.maximum(np.abs(bare), np.abs(bare + radius)) * free
-    cumulants = _input_cumulants(problem)
+    cumulants = input_cumulants(problem)
     powers = np.stack([weights**k for k in range(3, 7)])
     standard = sd ** np.arange(3, 7)[:, None, None]
     each = powers * cumulants[:, :, None, :] / standard[..., None]
@@ -138,13 +79,6 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     needs = whole > _GUARD
     left = expansion_error(np.abs(rest).sum(axis=-1))
     return np.where(needs, worst, -1), np.where(needs, left, whole)
-
-
-def _input_cumulants(problem: Problem) -> np.ndarray:
-    """Cumulants 3 to 6 of each ln obs, (4, star, input)."""
-    if not problem.inputs:
-        return np.zeros((4, len(problem), 0))
-    return np.stack([m.log_cumulants for m in problem.measured], axis=2)
 
 
 @dataclass(frozen=True)
@@ -234,9 +168,11 @@ class CalibratedAnswer:
 
 def _sorted(problem: Problem, own: np.ndarray, coarser: int):
     """Yield (rows, output, Kernels) of stars in groups alike."""
-    relation, carried = problem.interior.relation, _carried(problem)
+    relation, carried = problem.interior.relation, carried_forms(problem)
     first, second = _plan(problem, carried, own)
-    sorts = [first, second, own, relation.widening > 0.0, relation.convective > 0.0, carried.through, _curved(problem)]
+    sorts = [first, second, own, relation.widening > 0.0, carried.through, relation.convective > 0.0]
+    sorts += [relation.convective < 1.0, _curved(problem)]
+    sorts += [~np.isnan(_kinks(problem, named)) for named in (carried.through, own)]
     sorts = np.stack(sorts, axis=1).astype(int)
     for sort in np.unique(sorts, axis=0):
         rows = np.flatnonzero((sorts == sort).all(axis=1))
@@ -244,7 +180,7 @@ def _sorted(problem: Problem, own: np.ndarray, coarser: int):
         size = max(1, _VALUES // (counts[0] * counts[1] * (len(_HALF) if sort[3] else 1)))
         for start in range(0, len(rows), size):
             some = rows[start : start + size]
-            work = _Nodes(problem.take(some), carried.take(some), counts, int(sort[2]), bool(sort[6]), coarser)
+            work = _Nodes(problem.take(some), carried.take(some), counts, int(sort[2]), bool(sort[7]), coarser)
             for output in range(len(problem.outputs)):
                 yield some, output, work.kernels(output)
 
@@ -255,12 +191,12 @@ def _curved(problem: Problem) -> np.ndarray:
     return other | (~problem.binding.constant & (problem.interior.relation.log_mass > np.log(3.0)))
 
 
-def _plan(problem: Problem, carried: _Carried, own: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def _plan(problem: Problem, carried: Carried, own: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """How many nodes over the score of the mass and of the input with nodes of its own, (star,) each."""
     relation = problem.interior.relation
     score = np.linspace(-_WHERE_SLOPE_COUNTS, _WHERE_SLOPE_COUNTS, 15)[None, :]
     count, outputs = len(problem), len(problem.outputs)
-    log_mass, shift = _along(problem, carried, score)
+    log_mass, shift = along(problem, carried, score)
     height, slope = relation.line(log_mass)
     radius = carried.mean[:, outputs, None] + shift[:, outputs]
     mean = shift[:, :outputs] + (height + slope * radius)[:, None, :]
@@ -295,53 +231,65 @@ def _count(ratio: np.ndarray) -> np.ndarray:
     return _COUNTS[np.minimum(np.searchsorted(_COUNTS, wanted), len(_COUNTS) - 1)]
 
 
-def _along(problem: Problem, carried: _Carried, score: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """ln M (star, node) and shifts of the forms (star, form, node) at scores of the mass."""
-    log_mass = carried.log_mass[:, None] + carried.mass_slope[:, None] * score
-    shift = carried.slope[:, :, None] * score[:, None, :]
-    position = problem.latent("mass")
-    for j in np.unique(carried.through[carried.through >= 0]):
-        rows = np.flatnonzero(carried.through == j)
-        measured = problem.measured[j].take(rows)
-        moved = measured.log_quantile(score) - measured.log_mean[:, None]
-        weights = np.broadcast_to(problem.latent_input_weights, (len(problem), *problem.latent_input_weights.shape[1:]))
-        log_mass[rows] = carried.log_mass[rows, None] + weights[rows, position, j, None] * moved
-        shift[rows] = carried.forms[rows, :, j, None] * moved[:, None, :]
-    return log_mass, shift
+@lru_cache(maxsize=64)
+def _legendre(count: int) -> tuple[np.ndarray, np.ndarray]:
+    return np.polynomial.legendre.leggauss(count)
 
 
-def _trapezoid(count: int, coarser: int) -> tuple[np.ndarray, np.ndarray]:
-    """Scores and weights; one node for what does not vary."""
+def _rule(count: int, coarser: int, kink: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
+    """Scores and weights, (1, node) or (star, node): one node for what does not vary.
+
+    A trapezoid; where a distribution has a kink (at a score, (star,)), Gauss-Legendre on either side of it.
+    """
     if count == 1:
-        return np.zeros(1), np.ones(1)
-    score = np.linspace(-_REACH, _REACH, count // coarser + (count // coarser == 1))
-    weight = np.exp(-0.5 * score**2)
-    return score, weight / weight.sum()
+        return np.zeros((1, 1)), np.ones((1, 1))
+    if kink is None:
+        score = np.linspace(-_REACH, _REACH, count // coarser)[None, :]
+        weight = np.exp(-0.5 * score**2)
+    else:
+        node, share = _legendre(int(_ON_A_SIDE * count) // coarser)
+        sides = [(-_REACH, kink[:, None]), (kink[:, None], _REACH)]
+        score = np.concatenate([0.5 * (a + b) + 0.5 * (b - a) * node for a, b in sides], axis=1)
+        weight = np.concatenate([0.5 * (b - a) * share for a, b in sides], axis=1) * np.exp(-0.5 * score**2)
+    return score, weight / weight.sum(axis=1, keepdims=True)
+
+
+def _kinks(problem: Problem, through: np.ndarray) -> np.ndarray:
+    """Score of the kink of the input that each star names, (star,); NaN where its distribution is smooth."""
+    kink = np.full(len(problem), np.nan)
+    for j in np.unique(through[through >= 0]):
+        measured = problem.measured[j]
+        rows = np.flatnonzero((through == j) & (measured.shape == Shape.SPLIT_NORMAL))
+        kink[rows] = ndtri(measured.lower[rows] / (measured.lower[rows] + measured.upper[rows]))
+    return kink
 
 
 class _Nodes:
     """The nodes of stars of one sort, shared by their outputs."""
 
-    def __init__(self, problem: Problem, carried: _Carried, counts, own: int, curved: bool, coarser: int):
+    def __init__(self, problem: Problem, carried: Carried, counts, own: int, curved: bool, coarser: int):
         self.problem, self.carried, self.curved, self.own = problem, carried, curved, own
         relation = problem.interior.relation
-        score, weight = _trapezoid(counts[0], coarser)
-        second, second_weight = _trapezoid(counts[1], coarser)
-        log_mass, shift = _along(problem, carried, score[None, :])
+        kinks = [_kinks(problem, named) for named in (carried.through, np.full(len(problem), own))]
+        kinks = [None if np.isnan(kink).any() else kink for kink in kinks]
+        score, weight = _rule(counts[0], coarser, kinks[0])
+        second, second_weight = _rule(counts[1], coarser, kinks[1])
+        log_mass, shift = along(problem, carried, score)
         height, slope = relation.line(log_mass)
-        repeat = len(second)
+        repeat = second.shape[1]
         # the node axis: score of the mass, then score of the input with nodes of its own
         self.log_mass, self.height, self.slope = (np.repeat(v, repeat, axis=1) for v in (log_mass, height, slope))
-        self.weight = np.broadcast_to((weight[:, None] * second_weight).ravel(), self.log_mass.shape)
+        both = (weight[:, :, None] * second_weight[:, None, :]).reshape(max(len(weight), len(second_weight)), -1)
+        self.weight = np.broadcast_to(both, self.log_mass.shape)
         self.mean = carried.mean[:, :, None] + np.repeat(shift, repeat, axis=2)
         self.covariance = carried.covariance
-        self.cumulants = _input_cumulants(problem)
+        self.cumulants = input_cumulants(problem)
         free = (np.arange(len(problem.inputs)) != carried.through[:, None]) & (np.arange(len(problem.inputs)) != own)
         self.cumulants = np.where(free[None], self.cumulants, 0.0)
         if own >= 0:
             measured = problem.measured[own]
-            moved = measured.log_quantile(second[None, :]) - measured.log_mean[:, None]
-            moved = np.tile(moved, (1, len(score)))
+            moved = measured.log_quantile(second) - measured.log_mean[:, None]
+            moved = np.tile(moved, (1, score.shape[1]))
             self.mean = self.mean + carried.forms[:, :, own, None] * moved[:, None, :]
             form = carried.forms[:, :, own]
             variance = problem.log_sd[:, own] ** 2
@@ -400,8 +348,8 @@ class _Nodes:
             weights = weights + np.asarray(gm)[..., None] * forms[:, m, None, :]
         cumulants = self._higher(weights, sd)
         if cumulants is not None:
-            along = slope * (v[one, r] + on_radius * v[r, r] + gm * v[r, m]) + (1.0 + gq) * scatter**2
-            cumulants[0] = cumulants[0] + 3.0 * gqq * along**2
+            shared = slope * (v[one, r] + on_radius * v[r, r] + gm * v[r, m]) + (1.0 + gq) * scatter**2
+            cumulants[0] = cumulants[0] + 3.0 * gqq * shared**2
         return mean, sd, cumulants
 
     def _higher(self, weights, sd):

@@ -12,11 +12,13 @@ from functools import cached_property
 
 import numpy as np
 from numpy.polynomial import hermite_e
-from scipy.special import ndtr, ndtri
+from scipy.special import ndtr
 
 from stellerg.binding import MEAN_MOLECULAR_WEIGHT, Kind
 from stellerg.engines.answer import REPORTED
+from stellerg.engines.carried import input_cumulants
 from stellerg.engines.intervals import mass_score
+from stellerg.engines.inversion import invert
 from stellerg.engines.kernels import expansion_error
 from stellerg.problem import Problem
 from stellerg.status import Status
@@ -26,20 +28,19 @@ __all__ = ["CellsAnswer", "cells_refusal"]
 
 _ROOT_2PI = np.sqrt(2.0 * np.pi)
 _STARS = 128  # treated together: bounds memory, changes no bit
-_STEPS = 100
-_TOLERANCE = 1e-11
+_REACH = 9.0  # normal scores of a kernel that a bracket covers
 _NARROWEST = 1e-7  # of a kernel, in ln Y: an exact one is taken for this wide
 _STEP = 0.02  # in the logarithms of mass, radius and molecular weight: for derivatives of the share
 _WORST = 2e-4  # bound on the error of the cumulative above which a star is refused; the error is some times smaller
+_HOPELESS = 0.1  # and where a look at the first term left out is not worth it
 _FOLLOWED = ("mass", "radius", "mean_molecular_weight")
-_ORDERS = (2, 3, 4, 5, 6, 8)
 
 
 def _polynomial(order: int) -> np.ndarray:
-    return np.pad(hermite_e.herme2poly([0.0] * order + [1.0]), (0, 8 - order))
+    return hermite_e.herme2poly([0.0] * order + [1.0])
 
 
-_HE = {order: _polynomial(order) for order in range(9)}
+_HE = {order: _polynomial(order) for order in range(12)}
 
 
 @dataclass(frozen=True)
@@ -84,7 +85,9 @@ class CellsAnswer:
         """Estimated error of the cumulative, (star, output): of the cells (against half as many) and the expansions."""
         p = np.array(REPORTED)
         quantiles = self.quantile(p)
-        error = _expansion_error(self.problem)
+        error = _expansion_error(self.problem)[1]
+        for rows, output, sums in self._sums():
+            error[rows, output] += np.abs(sums.left_out(quantiles[rows, output])).max(axis=1)
         for rows, output, sums in self._sums(coarser=True):
             below, _ = sums.evaluate(quantiles[rows, output])
             # a rule of second order: half as many cells have four times the error
@@ -140,8 +143,21 @@ def _densities(problem: Problem):
 def cells_refusal(problem: Problem) -> np.ndarray:
     """Why stars are refused, (star,): 0 not, 1 the mass lies in several intervals, 2 the expansions are too coarse."""
     straddles = mass_score(problem).interval < 0
-    coarse = (_expansion_error(problem) > _WORST).any(axis=1)
-    return np.where(straddles, 1, np.where(coarse, 2, 0))
+    bound, curved = _expansion_error(problem)
+    error = (bound + curved).max(axis=1)
+    # the bound exceeds the error by far where the density of ln w is wide: there the first term left out decides
+    unsure = np.flatnonzero(~straddles & (error > _WORST) & (error < _HOPELESS))
+    if unsure.size:
+        error[unsure] = _first_left_out(problem.take(unsure)) + curved[unsure].max(axis=1)
+    return np.where(straddles, 1, np.where(error > _WORST, 2, 0))
+
+
+def _first_left_out(problem: Problem) -> np.ndarray:
+    """Largest of the fourth order of the expansion at the reported quantiles of all outputs, (star,)."""
+    p, found = np.array(REPORTED), np.zeros(len(problem))
+    for rows, _, sums in CellsAnswer(problem)._sums():
+        found[rows] = np.maximum(found[rows], np.abs(sums.left_out(sums.quantile(p))).max(axis=1))
+    return found
 
 
 @dataclass(frozen=True)
@@ -196,34 +212,25 @@ def _share(problem: Problem, output: int, q: np.ndarray) -> _Share:
     return _Share(value, slope, mean, skew)
 
 
-def _cumulants(problem: Problem) -> np.ndarray:
-    if not problem.inputs:
-        return np.zeros((4, len(problem), 0))
-    return np.stack([m.log_cumulants for m in problem.measured], axis=2)
-
-
 def _expansion_error(problem: Problem) -> np.ndarray:
-    """Bound on the error of the expansions, (star, output)."""
-    cumulants = _cumulants(problem)
-    error = np.zeros((len(problem), len(problem.outputs)))
+    """Bounds on the errors of the expansion of the kernel, and of ln f, (2, star, output)."""
+    cumulants = input_cumulants(problem)
+    error = np.zeros((2, len(problem), len(problem.outputs)))
+    widest = np.abs(problem.log_sd).max(axis=1, initial=0.0)
     for output in range(len(problem.outputs)):
-        q = np.full((len(problem), 1), 0.25)
-        share = _share(problem, output, q)
+        share = _share(problem, output, np.full((len(problem), 1), 0.25))
         weight = share.slope[:, 0]
-        variance = np.maximum(problem.variance_of(weight), 1e-30)
-        powers = np.stack([weight**k for k in range(3, 7)])
-        whole = (powers * cumulants).sum(axis=-1)
+        sd = np.sqrt(np.maximum(problem.variance_of(weight), 1e-30))
+        whole = (np.stack([weight**k for k in range(3, 7)]) * cumulants).sum(axis=-1)
         whole[0] += share.skew[:, 0]
-        narrow = np.sqrt(variance) < _NARROWEST
-        standard = whole / np.sqrt(variance) ** np.arange(3, 7)[:, None]
-        sd = np.sqrt(variance)
         # a density of ln w wider than the kernel damps what is left out, most at its sharp ends by this
         width = np.hypot(sd, _spread(problem) if problem.structured[output] else 0.0)
+        moves = sd >= _NARROWEST
+        bound = expansion_error(whole / sd ** np.arange(3, 7)[:, None]) * sd / width
+        error[0, :, output] = np.where(moves, bound, 0.0)
         # third derivatives of ln f: the second order changes by about a third of itself within one relative error of
         # what it follows; 0.4 is the height of a normal density
-        widest = np.abs(problem.log_sd).max(axis=1, initial=0.0)
-        left_out = expansion_error(standard) * sd / width + 0.4 * np.abs(share.curved[:, 0]) * widest / (3.0 * width)
-        error[:, output] = np.where(narrow, 0.0, left_out)
+        error[1, :, output] = np.where(moves, 0.4 * np.abs(share.curved[:, 0]) * widest / (3.0 * width), 0.0)
     return error
 
 
@@ -239,15 +246,18 @@ def _spread(problem: Problem) -> np.ndarray:
 
 @dataclass(frozen=True)
 class _Sums:
-    """Kernels smeared over cells of y = q + ln f, (star, cell) each; `series` (star, 9) of the kernel's expansion."""
+    """Kernels smeared over cells of y = q + ln f, (star, cell) each.
+
+    `series` and `following` hold the coefficients of He_k in the expansion of the kernel, and in its next order.
+    """
 
     low: np.ndarray
     high: np.ndarray
     at_low: np.ndarray
     at_high: np.ndarray
     sd: np.ndarray
-    skew: np.ndarray
     series: dict[int, np.ndarray]
+    following: dict[int, np.ndarray]
 
     @classmethod
     def of(cls, problem: Problem, output: int, cells: Cells) -> "_Sums":
@@ -267,12 +277,12 @@ class _Sums:
         sd = np.sqrt(np.maximum(variance, _NARROWEST**2))
         # cumulants of the inputs at the middle of the density: they vary with ln w by less than ln f does
         middle = share.slope[:, share.slope.shape[1] // 2]
-        three, four, five = (
-            (middle ** (k + 3) * _cumulants(problem)[k]).sum(axis=-1)[:, None] / sd ** (k + 3) for k in range(3)
+        three, four, five, six = (
+            (middle ** (k + 3) * input_cumulants(problem)[k]).sum(axis=-1)[:, None] / sd ** (k + 3) for k in range(4)
         )
         three = three + share.skew / sd**3
-        series = {}
-        if np.abs(np.stack([three, four + 0.0 * three, five + 0.0 * three])).max() > 0.0:
+        series, following = {}, {}
+        if max(np.abs(x).max() for x in (three, four, five, six)) > 0.0:
             series = {
                 2: three / 6.0,
                 3: four / 24.0,
@@ -281,15 +291,20 @@ class _Sums:
                 6: three * four / 144.0,
                 8: three**3 / 1296.0,
             }
-        return cls(
-            mean + ends[0], mean + ends[1], cells.at_low * stretch, cells.at_high * stretch, sd, share.skew, series
-        )
+            following = {
+                5: six / 720.0,
+                7: four**2 / 1152.0 + three * five / 720.0,
+                9: three**2 * four / 1728.0,
+                11: three**4 / 31104.0,
+            }
+        heights = (cells.at_low * stretch, cells.at_high * stretch)
+        return cls(mean + ends[0], mean + ends[1], *heights, sd, series, following)
 
     def take(self, rows):
         """Return some of the stars."""
         parts = {name: getattr(self, name) for name in self.__dataclass_fields__}
-        series = {k: v[rows] for k, v in parts.pop("series").items()}
-        return _Sums(**{name: value[rows] for name, value in parts.items()}, series=series)
+        orders = [{k: v[rows] for k, v in parts.pop(name).items()} for name in ("series", "following")]
+        return _Sums(*(value[rows] for value in parts.values()), *orders)
 
     @property
     def moments(self) -> tuple[np.ndarray, np.ndarray]:
@@ -304,59 +319,53 @@ class _Sums:
 
     def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Cumulative and density at t, (star, m) each."""
+        cumulative, density = self._sum(t, self._integrals)
+        return np.clip(cumulative, 0.0, 1.0), np.maximum(density, 0.0)
+
+    def left_out(self, t: np.ndarray) -> np.ndarray:
+        """What the next order of the expansion would add to the cumulative at t, (star, m)."""
+        if not self.following:
+            return np.zeros(t.shape)
+        return self._sum(t, lambda x: self._terms(x, self.following))[0]
+
+    def _sum(self, t, integrals):
         cumulative, density = np.empty(t.shape), np.empty(t.shape)
-        width = self.high - self.low
+        width, sd = self.high - self.low, self.sd
         slope = (self.at_high - self.at_low) / width
         for m in range(t.shape[1]):
-            upper = self._integrals((t[:, m, None] - self.low) / self.sd)
-            lower = self._integrals((t[:, m, None] - self.high) / self.sd)
-            sd = self.sd
+            upper = integrals((t[:, m, None] - self.low) / sd)
+            lower = integrals((t[:, m, None] - self.high) / sd)
             # integrals over a cell of K and of (y - low) K, y rising as the score falls
             flat = sd * (upper[1] - lower[1])
             tilted = sd**2 * (upper[2] - lower[2]) - width * sd * lower[1]
             cumulative[:, m] = (self.at_low * flat + slope * tilted).sum(axis=-1)
             here = self.at_low * (upper[0] - lower[0]) + slope * (sd * (upper[1] - lower[1]) - width * lower[0])
             density[:, m] = here.sum(axis=-1)
-        return np.clip(cumulative, 0.0, 1.0), np.maximum(density, 0.0)
+        return cumulative, density
+
+    @staticmethod
+    def _terms(x: np.ndarray, series: dict[int, np.ndarray]) -> tuple:
+        """-phi sum_k c_k He_k at a score, and its first and second integrals."""
+        bell = np.exp(-0.5 * x * x) / _ROOT_2PI
+        # the integral of phi He_k is -phi He_(k-1)
+        return tuple(
+            sign * bell * sum(size * _value(order - less, x) for order, size in series.items())
+            for less, sign in ((0, -1.0), (1, 1.0), (2, -1.0))
+        )
 
     def _integrals(self, x: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """The kernel's cumulative at a score, and its first and second integrals from minus infinity."""
         below, bell = ndtr(x), np.exp(-0.5 * x * x) / _ROOT_2PI
         once = x * below + bell
         twice = 0.5 * ((x * x + 1.0) * below + x * bell)
-        for order, size in self.series.items():
-            # the integral of phi He_k is -phi He_(k-1)
-            below = below - size * bell * _value(order, x)
-            once = once + size * bell * _value(order - 1, x)
-            twice = twice - size * bell * _value(order - 2, x)
-        return below, once, twice
+        if not self.series:
+            return below, once, twice
+        return tuple(a + b for a, b in zip((below, once, twice), self._terms(x, self.series), strict=True))
 
     def quantile(self, p: np.ndarray) -> np.ndarray:
-        """Values at cumulative probabilities p (m,): (star, m), by Newton's method kept inside a bracket."""
-        mean, sd = self.moments
-        low = np.repeat((self.low - 9.0 * self.sd).min(axis=1)[:, None], len(p), axis=1)
-        high = np.repeat((self.high + 9.0 * self.sd).max(axis=1)[:, None], len(p), axis=1)
-        t = np.clip(mean[:, None] + sd[:, None] * ndtri(p), low, high)
-        active = np.arange(len(t))
-        miss = np.full(t.shape, np.inf)
-        for _ in range(_STEPS):
-            here = self if len(active) == len(t) else self.take(active)
-            cumulative, density = here.evaluate(t[active])
-            error = cumulative - p
-            low[active] = np.where(error < 0.0, t[active], low[active])
-            high[active] = np.where(error >= 0.0, t[active], high[active])
-            with np.errstate(divide="ignore", invalid="ignore"):
-                newton = t[active] - error / density
-            good = (newton > low[active]) & (newton < high[active]) & (np.abs(error) < 0.5 * miss[active])
-            following = np.where(good, newton, 0.5 * (low[active] + high[active]))
-            done = (np.abs(error) <= _TOLERANCE) | (high[active] - low[active] <= 1e-13 * (1.0 + np.abs(t[active])))
-            near = good & (np.abs(error) <= 1e-7)
-            miss[active] = np.abs(error)
-            t[active] = np.where(done, t[active], following)
-            active = active[~(done | near).all(axis=1)]
-            if not active.size:
-                break
-        return t
+        """Values at cumulative probabilities p (m,): (star, m)."""
+        reach = _REACH * self.sd
+        return invert(self, p, (self.low - reach).min(axis=1), (self.high + reach).max(axis=1))
 
 
 def _value(order: int, x: np.ndarray) -> np.ndarray:

@@ -10,13 +10,13 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.polynomial import hermite_e
-from scipy.special import ndtr, ndtri
+from scipy.special import ndtr
+
+from stellerg.engines.inversion import invert
 
 __all__ = ["Kernels", "expansion_error"]
 
 _ROOT_2PI = np.sqrt(2.0 * np.pi)
-_STEPS = 100  # bracketed Newton steps; bisection alone needs 50
-_TOLERANCE = 1e-12  # in probability
 _REACH = 8.3  # normal scores: 1e-16 lies beyond
 _ORDERS = 9  # powers of x in the expansion of the cumulative
 
@@ -118,31 +118,6 @@ class Kernels:
         return np.clip(cumulative, 0.0, 1.0), np.maximum(density, 0.0)
 
     def quantile(self, p: np.ndarray) -> np.ndarray:
-        """Values at cumulative probabilities p (m,): (star, m), by Newton's method kept inside a bracket."""
-        mean, sd = self.moments
-        t = mean[:, None] + sd[:, None] * ndtri(p)
-        low = np.repeat((self.mean - _REACH * self.sd).min(axis=1)[:, None], len(p), axis=1)
-        high = np.repeat((self.mean + _REACH * self.sd).max(axis=1)[:, None], len(p), axis=1)
-        t = np.clip(t, low, high)
-        active = np.arange(len(t))
-        miss = np.full(t.shape, np.inf)
-        for _ in range(_STEPS):
-            here = self if len(active) == len(t) else self.take(active)
-            cumulative, density = here.evaluate(t[active])
-            error = cumulative - p
-            low[active] = np.where(error < 0.0, t[active], low[active])
-            high[active] = np.where(error >= 0.0, t[active], high[active])
-            with np.errstate(divide="ignore", invalid="ignore"):
-                newton = t[active] - error / density
-            good = (newton > low[active]) & (newton < high[active]) & (np.abs(error) < 0.5 * miss[active])
-            following = np.where(good, newton, 0.5 * (low[active] + high[active]))
-            width = high[active] - low[active]
-            done = (np.abs(error) <= _TOLERANCE) | (width <= 1e-13 * (1.0 + np.abs(t[active])))
-            # one more Newton step from an error of 1e-5 reaches 1e-10: it needs no evaluation to confirm it
-            near = good & (np.abs(error) <= 1e-6)
-            miss[active] = np.abs(error)
-            t[active] = np.where(done, t[active], following)
-            active = active[~(done | near).all(axis=1)]
-            if not active.size:
-                break
-        return t
+        """Values at cumulative probabilities p (m,): (star, m)."""
+        reach = _REACH * self.sd
+        return invert(self, p, (self.mean - reach).min(axis=1), (self.mean + reach).max(axis=1))

@@ -37,7 +37,9 @@ MISFIT_SD = 0.25
 # which the intervals of a normal sample's standard deviation have the right coverage.
 _SPREAD_SCALE = 0.3
 _SLOPE_SD = 1.0  # of n in ln M: judgement; main-sequence stars of 1 to 40 solar masses change by less than 1 in all
-_LN_SPREAD = (float(np.log(1e-4)), float(np.log(100.0)))  # beyond: n as good as equal, or as good as uniform
+# Limits of the spread: n as good as equal for all; nearly uniform over [0, 4.95], which no population of stars is. Without
+# the upper one the half-Cauchy tail would decide the mean square of the spread for a handful of stars.
+_LN_SPREAD = (float(np.log(1e-4)), float(np.log(2.5)))
 _ROUNDS = 8  # of the approximation that the walkers start from
 _STEP = 0.005  # in n, of the tables; they are interpolated linearly, which is good to 1e-4 of an error of 1 %
 _FARTHEST = 1000.0  # normal scores that far have no probability; hard ends are infinite
@@ -53,9 +55,9 @@ _PLACE = 0.5 * (_NODE + 1.0)
 _SIDES = np.array([-1.0, 0.0, 1.0])
 _REACH, _FIRST_REACH = 5.0, 3.0  # the first is where the form of the integrand is looked at
 _STRETCH = (0.4, 4.0)  # in one round: beyond a hard end the score is infinite, on a plateau zero
-# Difference of a star's distances to the scores -4 and 4, over their sum, beyond which the window is looked for in one
-# round, and in two: by trial, for the accuracy above.
-_SKEWED = (0.1, 0.25)
+# Difference of a star's distances to the scores -4 and 4, over their sum, beyond which its window is looked for in two
+# rounds: by trial, for the accuracy above.
+_SKEWED = 0.25
 _LEAST_KEPT = 1e-300  # probability within the range below which a population is impossible
 _HALF_LOG_8PI = 0.5 * float(np.log(8.0 * np.pi))
 
@@ -122,8 +124,8 @@ class _Group:
     def _window(self, mean, spread, misfit, entries) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Mode of the integrand, and how far below and above it reaches; all within [0, 4.95].
 
-        Without rounds they are those of a normal. A round is a Gauss-Newton step of the mode, and a look at the scores
-        at the ends, with which the reach is changed in proportion.
+        Both are those of normals at first. A round is a Gauss-Newton step of the mode, and a look at the scores at the
+        ends, with which the reach is changed in proportion.
         """
         shared = spread**-2
         precision = self.precision[:, None] + shared
@@ -143,16 +145,14 @@ class _Group:
                 precision[table.rows] += slope * slope
                 pull[table.rows] += place * slope
             centre = _within(centre - pull / precision)
-        if self.rounds == 0:
-            reach = _REACH / np.sqrt(precision)
-            return centre, np.minimum(reach, centre), np.minimum(reach, TOP - centre)
         reach = (_FIRST_REACH / np.sqrt(precision))[..., None] * _SIDES
         for _ in range(self.rounds):
             ends = _within(centre[..., None] + reach)
             reach = ends - centre[..., None]
             square = self._square(ends, mean, spread, entries)
             square -= square[..., 1:2]
-            reach *= np.clip(_REACH / np.sqrt(np.maximum(square, 1e-9)), *_STRETCH)
+            stretch = _REACH / np.sqrt(np.maximum(square, 1e-9))
+            reach *= np.maximum(np.minimum(stretch, _STRETCH[1]), _STRETCH[0])
         ends = _within(centre[..., None] + reach)
         return centre, centre - ends[..., 0], ends[..., 2] - centre
 
@@ -180,7 +180,7 @@ class ObservedStructures:
     def __init__(self, measured: Mapping[str, Measured], misfit_scale: np.ndarray):
         stars = len(misfit_scale)
         self.precision, self.centre, self.share = np.zeros(stars), np.zeros(stars), np.zeros(stars)
-        rounds, seen = np.zeros(stars, int), []
+        rounds, seen = np.ones(stars, int), []
         for name, values in measured.items():
             rows = np.flatnonzero(values.usable)
             part, logarithm = LEARNED_FROM[name]
@@ -190,7 +190,7 @@ class ObservedStructures:
             rising = score if part == 0.0 else -score
             ends = np.array([np.interp([-4.0, -1.0, 0.0, 1.0, 4.0], row, _GRID) for row in rising]).T
             skewness = np.abs(ends[0] + ends[4] - 2.0 * ends[2]) / np.maximum(ends[4] - ends[0], _LEAST_SD)
-            rounds[rows] = np.maximum(rounds[rows], np.searchsorted(_SKEWED, skewness))
+            rounds[rows] = np.where(skewness > _SKEWED, 2, rounds[rows])
             precision = np.maximum(0.5 * (ends[3] - ends[1]), _LEAST_SD) ** -2
             seen.append((rows, score, part * misfit_scale[rows], np.clip(ends[2], 0.0, TOP), precision))
         for rows, _, share, centre, precision in seen:
@@ -240,7 +240,9 @@ class ObservedStructures:
         ndarray, (star, walker)
             Minus infinity where the population has no probability within [0, 4.95].
         """
-        misfit = np.clip(misfit, -_MARGIN, _MARGIN)
+        misfit = np.maximum(np.minimum(misfit, _MARGIN), -_MARGIN)
+        if len(self._groups) == 1:
+            return self._groups[0].log_marginal(mean, spread, misfit)
         found = np.empty(misfit.shape)
         for group in self._groups:
             own = mean if len(mean) == 1 else mean[group.rows]

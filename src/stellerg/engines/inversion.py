@@ -1,0 +1,69 @@
+"""Quantiles of distributions that are evaluated: Newton's method kept inside a bracket, all stars together."""
+
+from typing import Protocol
+
+import numpy as np
+from scipy.special import ndtri
+
+__all__ = ["Evaluated", "invert"]
+
+_STEPS = 100  # bisection alone needs 50
+_TOLERANCE = 1e-11  # in probability
+_NEAR = 1e-6  # after a Newton step from an error as small, another evaluation would only confirm it
+
+
+class Evaluated(Protocol):
+    """A distribution of stars."""
+
+    @property
+    def moments(self) -> tuple[np.ndarray, np.ndarray]:
+        """Mean and standard deviation, (star,) each."""
+        ...
+
+    def take(self, rows: np.ndarray) -> "Evaluated":
+        """Return some of the stars."""
+        ...
+
+    def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Cumulative and density at t, (star, m) each."""
+        ...
+
+
+def invert(found: Evaluated, p: np.ndarray, low: np.ndarray, high: np.ndarray) -> np.ndarray:
+    """Values at cumulative probabilities.
+
+    Parameters
+    ----------
+    found : Evaluated
+    p : ndarray, (m,)
+    low, high : ndarray, (star,)
+        Ends between which all probability lies but for rounding.
+
+    Returns
+    -------
+    ndarray, (star, m)
+    """
+    mean, sd = found.moments
+    low, high = (np.repeat(end[:, None], len(p), axis=1) for end in (low, high))
+    t = np.clip(mean[:, None] + sd[:, None] * ndtri(p), low, high)
+    active = np.arange(len(t))
+    miss = np.full(t.shape, np.inf)
+    for _ in range(_STEPS):
+        here = found if len(active) == len(t) else found.take(active)
+        cumulative, density = here.evaluate(t[active])
+        error = cumulative - p
+        low[active] = np.where(error < 0.0, t[active], low[active])
+        high[active] = np.where(error >= 0.0, t[active], high[active])
+        with np.errstate(divide="ignore", invalid="ignore"):
+            newton = t[active] - error / density
+        good = (newton > low[active]) & (newton < high[active]) & (np.abs(error) < 0.5 * miss[active])
+        following = np.where(good, newton, 0.5 * (low[active] + high[active]))
+        narrow = high[active] - low[active] <= 1e-13 * (1.0 + np.abs(t[active]))
+        done = (np.abs(error) <= _TOLERANCE) | narrow
+        near = good & (np.abs(error) <= _NEAR)
+        miss[active] = np.abs(error)
+        t[active] = np.where(done, t[active], following)
+        active = active[~(done | near).all(axis=1)]
+        if not active.size:
+            break
+    return t
