@@ -24,13 +24,19 @@ from stellerg.status import Status
 
 __all__ = ["CalibratedAnswer", "calibrated_refusal"]
 
-_SPACING = 1.1  # of the nodes in normal scores, for a kernel much wider than the slope: exp(-2 pi^2/1.1^2) = 8e-8
-_REACH = 5.2  # normal scores covered: 2e-7 lies outside
+_SPACING = 1.2  # of the nodes in normal scores, for a kernel much wider than the slope: exp(-2 pi^2/1.2^2) = 1e-6
+_REACH = 4.7  # normal scores covered: 3e-6 lies outside
 _WHERE_SLOPE_COUNTS = 3.5  # normal scores within which the slope sets the spacing
-_COUNTS = np.array([12, 16, 20, 24, 32, 40, 48, 64, 96, 128, 192, 256, 384, 512])
+_COUNTS = np.array([8, 10, 12, 14, 16, 20, 24, 28, 32, 40, 48, 56, 64, 80, 96, 128, 160, 192, 256, 320, 384, 512])
 _VALUES = 2**17  # star-node pairs treated together: bounds memory, changes no bit
-_GUARD = 5e-6  # error of the expansion above which an input gets nodes of its own
-_WORST = 5e-5  # and above which the star is refused
+# The bound on what the expansion leaves out exceeds the error 16 times or more (normal errors of 5 to 10 %, against
+# nodes for every input): above the first an input gets nodes of its own (errors of the mass up to 5.5 %, and beyond),
+# above the second the star is refused.
+_GUARD = (3e-4, 1.6e-3)
+_SMALL = 0.055
+_WORST = 1.6e-3
+_BOUND_OVER_ERROR = 16.0
+_CURVED_ABOVE = np.log(6.0)  # ln M: below, the curvature of ln f moves the cumulative by less than 1e-5
 _STEP = 0.05  # in ln w, ln R and ln mu, for derivatives of the share; the share is smooth on this scale
 _ON_A_SIDE = 0.8  # Gauss-Legendre nodes on a side of a kink, for each of a trapezoid over both
 _HALF, _HALF_WEIGHT = np.polynomial.legendre.leggauss(40)
@@ -56,6 +62,8 @@ def calibrated_refusal(problem: Problem) -> np.ndarray:
 
 def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     """Input that needs nodes of its own (-1: none), and the error of the expansion that is left, (star, output)."""
+    if problem.log_normal.all():
+        return np.full((len(problem), len(problem.outputs)), -1), np.zeros((len(problem), len(problem.outputs)))
     carried = carried_forms(problem)
     counts = len(problem.outputs)
     beside = np.einsum("sff->sf", carried.covariance)[:, :counts]
@@ -76,7 +84,9 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     single = expansion_error(np.abs(each))
     worst = np.argmax(single, axis=2)
     rest = np.where(np.arange(len(problem.inputs)) == worst[:, :, None], 0.0, each)
-    needs = whole > _GUARD
+    of_mass = problem.latent_input_weights[:, problem.latent("mass")]
+    small = np.sqrt(problem.variance_of(np.broadcast_to(of_mass, (len(problem), len(problem.inputs))))) <= _SMALL
+    needs = whole > np.where(small, *_GUARD)[:, None]
     left = expansion_error(np.abs(rest).sum(axis=-1))
     return np.where(needs, worst, -1), np.where(needs, left, whole)
 
@@ -122,7 +132,7 @@ class CalibratedAnswer:
     def numerical_error(self) -> np.ndarray:
         """Estimated error of the cumulative, (star, output): against half as many nodes, and of the expansion."""
         p = np.array(REPORTED)
-        error = _own_nodes(self.problem)[1]
+        error = _own_nodes(self.problem)[1] / _BOUND_OVER_ERROR
         quantiles = self.quantile(p)
         for rows, output, kernels in self._kernels(coarser=2):
             below, _ = kernels.evaluate(quantiles[rows, output])
@@ -170,31 +180,41 @@ def _sorted(problem: Problem, own: np.ndarray, coarser: int):
     """Yield (rows, output, Kernels) of stars in groups alike."""
     relation, carried = problem.interior.relation, carried_forms(problem)
     first, second = _plan(problem, carried, own)
-    sorts = [first, second, own, relation.widening > 0.0, carried.through, relation.convective > 0.0]
+    sorts = [first, second, own + 1, relation.widening > 0.0, carried.through + 1, relation.convective > 0.0]
     sorts += [relation.convective < 1.0, _curved(problem)]
     sorts += [~np.isnan(_kinks(problem, named)) for named in (carried.through, own)]
-    sorts = np.stack(sorts, axis=1).astype(int)
-    for sort in np.unique(sorts, axis=0):
-        rows = np.flatnonzero((sorts == sort).all(axis=1))
+    for rows, sort in _alike(sorts):
         counts = (int(sort[0]), int(sort[1]))
         size = max(1, _VALUES // (counts[0] * counts[1] * (len(_HALF) if sort[3] else 1)))
         for start in range(0, len(rows), size):
             some = rows[start : start + size]
-            work = _Nodes(problem.take(some), carried.take(some), counts, int(sort[2]), bool(sort[7]), coarser)
+            work = _Nodes(problem.take(some), carried.take(some), counts, int(sort[2]) - 1, bool(sort[7]), coarser)
             for output in range(len(problem.outputs)):
                 yield some, output, work.kernels(output)
+
+
+def _alike(sorts: list[np.ndarray]):
+    """Yield (rows, values) of stars that agree in several small whole numbers, (star,) each."""
+    code, scale = np.zeros(len(sorts[0]), np.int64), 1
+    for values in sorts:
+        code += scale * values
+        scale *= int(values.max(initial=0)) + 1
+    order = np.argsort(code, kind="stable")
+    starts = np.flatnonzero(np.diff(code[order], prepend=-1))
+    for rows in np.split(order, starts[1:]):
+        yield rows, [int(values[rows[0]]) for values in sorts]
 
 
 def _curved(problem: Problem) -> np.ndarray:
     """Whether a kernel of a star is not normal, (star,): inputs that are not log-normal, or a curved share."""
     other = (~problem.log_normal).any(axis=1)
-    return other | (~problem.binding.constant & (problem.interior.relation.log_mass > np.log(3.0)))
+    return other | (~problem.binding.constant & (problem.interior.relation.log_mass > _CURVED_ABOVE))
 
 
 def _plan(problem: Problem, carried: Carried, own: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """How many nodes over the score of the mass and of the input with nodes of its own, (star,) each."""
     relation = problem.interior.relation
-    score = np.linspace(-_WHERE_SLOPE_COUNTS, _WHERE_SLOPE_COUNTS, 15)[None, :]
+    score = np.linspace(-_WHERE_SLOPE_COUNTS, _WHERE_SLOPE_COUNTS, 11)[None, :]
     count, outputs = len(problem), len(problem.outputs)
     log_mass, shift = along(problem, carried, score)
     height, slope = relation.line(log_mass)
@@ -341,24 +361,18 @@ class _Nodes:
         variance = variance + 2.0 * gm * (v[one, m] + on_radius * v[r, m]) + gm**2 * v[m, m]
         sd = np.sqrt(variance)
         mean = mean + q + g + 0.5 * gqq * (slope**2 * v[r, r] + scatter**2)
-        weights = None
-        if self.curved:
-            forms = self.carried.forms
-            weights = forms[:, one, None, :] + on_radius[..., None] * forms[:, r, None, :]
-            weights = weights + np.asarray(gm)[..., None] * forms[:, m, None, :]
-        cumulants = self._higher(weights, sd)
-        if cumulants is not None:
-            shared = slope * (v[one, r] + on_radius * v[r, r] + gm * v[r, m]) + (1.0 + gq) * scatter**2
-            cumulants[0] = cumulants[0] + 3.0 * gqq * shared**2
-        return mean, sd, cumulants
-
-    def _higher(self, weights, sd):
-        """Cumulants 3 to 5 of the inputs beside those with nodes, (3, star, kernel)."""
         if not self.curved:
-            return None
-        return np.stack(
-            [(weights ** (k + 3) * self.cumulants[k][:, None, :]).sum(axis=-1) + 0.0 * sd for k in range(3)]
-        )
+            return mean, sd, None
+        shared = slope * (v[one, r] + on_radius * v[r, r] + gm * v[r, m]) + (1.0 + gq) * scatter**2
+        cumulants = [3.0 * gqq * shared**2 + 0.0 * sd, 0.0 * sd, 0.0 * sd]
+        forms = self.carried.forms
+        for j in np.flatnonzero((self.cumulants[0] != 0.0).any(axis=0)):
+            weight = forms[:, one, j, None] + on_radius * forms[:, r, j, None] + gm * forms[:, m, j, None]
+            power = weight * weight
+            for k in range(3):
+                power = power * weight
+                cumulants[k] = cumulants[k] + power * self.cumulants[k][:, j, None]
+        return mean, sd, np.stack(cumulants)
 
     def _share(self, kind: Kind, q, log_mass, log_radius, log_molecular):
         """ln f with its derivatives in q (two), ln R and ln mu."""

@@ -18,7 +18,6 @@ __all__ = ["Kernels", "expansion_error"]
 
 _ROOT_2PI = np.sqrt(2.0 * np.pi)
 _REACH = 8.3  # normal scores: 1e-16 lies beyond
-_ORDERS = 9  # powers of x in the expansion of the cumulative
 
 
 def _hermite(order: int) -> np.ndarray:
@@ -32,7 +31,6 @@ def _largest(order: int) -> float:
 
 
 _LARGEST = {order: _largest(order) for order in (5, 7, 9, 11)}
-_POWERS = {order: np.pad(_hermite(order), (0, _ORDERS - order - 1)) for order in (2, 3, 4, 5, 6, 8)}
 
 
 def expansion_error(standardised: np.ndarray) -> np.ndarray:
@@ -54,38 +52,46 @@ class Kernels:
     ----------
     weight, mean, sd : ndarray, (star, kernel)
         Weights sum to one over the kernels; sd is positive.
-    series : ndarray or None, (star, kernel, 9)
-        Coefficients over powers of x of the bracket of the expansion; None where all inputs are normal.
+    series : tuple of ndarray, (star, kernel) each
+        Coefficients over powers of x of the bracket of the expansion; empty where all inputs are normal.
     """
 
     weight: np.ndarray
     mean: np.ndarray
     sd: np.ndarray
-    series: np.ndarray | None = None
+    series: tuple[np.ndarray, ...] = ()
 
     @classmethod
     def of(cls, weight, mean, sd, cumulants: np.ndarray | None) -> "Kernels":
         """Make kernels; `cumulants` 3 to 5, (3, star, kernel), or None."""
         if cumulants is None:
             return cls(weight, mean, sd)
-        three, four, five = (cumulants[k] / sd ** (k + 3) for k in range(3))
-        terms = {
-            2: three / 6.0,
-            3: four / 24.0,
-            5: three**2 / 72.0,
-            4: five / 120.0,
-            6: three * four / 144.0,
-            8: three**3 / 1296.0,
-        }
-        series = np.zeros((*sd.shape, _ORDERS))
-        for order, size in terms.items():
-            series += size[..., None] * _POWERS[order]
+        inverse = 1.0 / sd
+        cube = inverse * inverse * inverse
+        three = cumulants[0] * cube
+        four = cumulants[1] * (cube * inverse)
+        five = cumulants[2] * (cube * inverse * inverse)
+        square = three * three
+        he2, he3, he5 = three * (1.0 / 6.0), four * (1.0 / 24.0), square * (1.0 / 72.0)
+        he4, he6, he8 = five * (1.0 / 120.0), three * four * (1.0 / 144.0), square * three * (1.0 / 1296.0)
+        # He2 = x^2 - 1, He3 = x^3 - 3x, He4 = x^4 - 6x^2 + 3, He5 = x^5 - 10x^3 + 15x,
+        # He6 = x^6 - 15x^4 + 45x^2 - 15, He8 = x^8 - 28x^6 + 210x^4 - 420x^2 + 105
+        series = (
+            3.0 * he4 - he2 - 15.0 * he6 + 105.0 * he8,
+            15.0 * he5 - 3.0 * he3,
+            he2 - 6.0 * he4 + 45.0 * he6 - 420.0 * he8,
+            he3 - 10.0 * he5,
+            he4 - 15.0 * he6 + 210.0 * he8,
+            he5,
+            he6 - 28.0 * he8,
+            0.0 * he8,
+            he8,
+        )
         return cls(weight, mean, sd, series)
 
     def take(self, rows) -> "Kernels":
         """Return some of the stars."""
-        series = None if self.series is None else self.series[rows]
-        return Kernels(self.weight[rows], self.mean[rows], self.sd[rows], series)
+        return Kernels(self.weight[rows], self.mean[rows], self.sd[rows], tuple(c[rows] for c in self.series))
 
     @property
     def moments(self) -> tuple[np.ndarray, np.ndarray]:
@@ -97,25 +103,28 @@ class Kernels:
     def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Cumulative and density at t, (star, m) each."""
         cumulative, density = np.empty(t.shape), np.empty(t.shape)
-        share = self.weight / (_ROOT_2PI * self.sd)
-        slopes = None
-        if self.series is not None:
-            slopes = self.series[..., 1:] * np.arange(1, _ORDERS)
+        inverse = 1.0 / self.sd
+        share = self.weight * inverse / _ROOT_2PI
         for m in range(t.shape[1]):  # a few quantiles; the arrays of kernels stay in the cache
-            x = (t[:, m, None] - self.mean) / self.sd
+            x = (t[:, m, None] - self.mean) * inverse
             bell = np.exp(-0.5 * x * x)
-            below, at = ndtr(x), 1.0
-            if self.series is not None:
-                bracket, slope = self.series[..., -1], slopes[..., -1]
-                for power in range(_ORDERS - 2, -1, -1):
-                    bracket = bracket * x + self.series[..., power]
-                for power in range(_ORDERS - 3, -1, -1):
-                    slope = slope * x + slopes[..., power]
-                below = below - bell / _ROOT_2PI * bracket
-                at = 1.0 + x * bracket - slope
+            below = ndtr(x)
+            if self.series:
+                bracket, slope = self._bracket(x)
+                below = below - bell * bracket / _ROOT_2PI
+                density[:, m] = (share * bell * (1.0 + x * bracket - slope)).sum(axis=-1)
+            else:
+                density[:, m] = (share * bell).sum(axis=-1)
             cumulative[:, m] = (self.weight * below).sum(axis=-1)
-            density[:, m] = (share * bell * at).sum(axis=-1)
         return np.clip(cumulative, 0.0, 1.0), np.maximum(density, 0.0)
+
+    def _bracket(self, x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """The bracket of the expansion and its slope at x, by Horner's rule."""
+        value, slope = self.series[-1], 0.0
+        for coefficient in self.series[-2::-1]:
+            slope = slope * x + value
+            value = value * x + coefficient
+        return value, slope
 
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """Values at cumulative probabilities p (m,): (star, m)."""

@@ -126,8 +126,12 @@ class Measured:
                 continue
             for start in range(0, len(rows), _CHUNK):
                 some = rows[start : start + _CHUNK]
-                deviation = self.log_quantile_of(some, _SCORE[None, :]) - self.log_mean[some, None]
-                two, three, four, five, six = ((deviation**k * _WEIGHT).sum(axis=-1) for k in range(2, 7))
+                deviation = self.take(some).log_quantile(_SCORE[None, :]) - self.log_mean[some, None]
+                power, moments = deviation * _WEIGHT, []
+                for _ in range(5):
+                    power = power * deviation
+                    moments.append(power.sum(axis=-1))
+                two, three, four, five, six = moments
                 cumulants[:, some] = (
                     three,
                     four - 3.0 * two**2,
@@ -135,10 +139,6 @@ class Measured:
                     six - 15.0 * four * two - 10.0 * three**2 + 30.0 * two**3,
                 )
         return cumulants
-
-    def log_quantile_of(self, rows: np.ndarray, score: np.ndarray) -> np.ndarray:
-        """`log_quantile` of some rows, (m, k)."""
-        return self.take(rows).log_quantile(score)
 
     @cached_property
     def expectation(self) -> np.ndarray:
