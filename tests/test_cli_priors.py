@@ -2,6 +2,7 @@
 
 import math
 import re
+from pathlib import Path
 
 import matplotlib.image
 import numpy as np
@@ -10,10 +11,14 @@ from scipy import stats
 
 from command_line import assert_one_message, stellerg
 from stellerg.errors import PriorError
+from stellerg.structure.calibration import Place
 from stellerg.structure.files import available_priors, load_prior, parse_prior
+from test_calibration import table
 from test_prior_files import GOOD, HEAD, MIXTURE, REFUSED, UNIFORM, component
 
 SHIPPED = list(available_priors())
+CALIBRATION = "main-sequence"
+DENSITIES = [name for name in SHIPPED if name != CALIBRATION]
 
 # The line at which each fault of REFUSED stands, compared with its text one by one: that of the key, or of the
 # header of the table that lacks one (line 1 for the whole file).
@@ -93,10 +98,27 @@ LINES = {
     "fraction above 1": 8,
     "no within": 7,
     "within no text": 9,
+    "training no table": 1,
+    "unknown key in training": 11,
+    "no keys": 7,
+    "keys no list": 9,
+    "an empty list of keys": 9,
+    "a number for a key": 9,
+    "a short key": 9,
+    "a key that is no number": 9,
+    "a key in capitals": 9,
+    "a key twice": 9,
+    "no number of stars": 7,
+    "another number of stars": 8,
+    "a boolean number of stars": 8,
+    "no observables": 7,
+    "no observable": 10,
+    "an unknown observable": 10,
+    "observables no list": 10,
 }
 OF_THE_WHOLE_FILE = ("empty", "no summary", "no source", "no density")
 
-DOCUMENT = {"name", "summary", "source", "applies_to", "common", "intervals"}
+ABOUT = {"name", "summary", "source", "applies_to", "common"}
 INTERVAL = {
     "mass",
     "mass_in_words",
@@ -128,8 +150,13 @@ def test_the_list_has_every_shipped_model_with_its_summary():
         assert model.summary in result.words
     for words in ("uniform in n from 1.5 to 3", "below 0.35 solar masses: normal in n, 1.5 ± 0.05", "n = 0"):
         assert words in result.words
-    assert result.words.count("any star not stated evolved") == len(SHIPPED) - 1
+    assert result.words.count("any star not stated evolved") == len(SHIPPED) - 2
     assert "stars of 0.98 to 1.02 solar masses, whose evolutionary state, if stated, is main-sequence" in result.words
+    assert (
+        "stars of 0.1 to 40 solar masses, whose evolutionary state, if stated, is main-sequence or pre" in result.words
+    )
+    low, high = min(column("alpha_zams")), max(column("alpha_zams"))
+    assert f"w from mass and radius: {low:g} to {high:g} at age zero" in result.words
 
 
 def test_the_list_as_json_is_what_show_gives():
@@ -142,7 +169,7 @@ def test_the_list_as_json_is_what_show_gives():
 # --- show ---
 
 
-@pytest.mark.parametrize("name", SHIPPED)
+@pytest.mark.parametrize("name", DENSITIES)
 def test_show(name):
     model = load_prior(name)
     result = stellerg("priors", "show", name)
@@ -175,10 +202,10 @@ def test_show_of_a_point_says_that_it_has_no_width():
     assert "adds nothing" in words
 
 
-@pytest.mark.parametrize("name", SHIPPED)
+@pytest.mark.parametrize("name", DENSITIES)
 def test_json_keys(name):
     document = stellerg("priors", "show", name, "--json").json
-    assert set(document) == DOCUMENT
+    assert set(document) == {*ABOUT, "intervals"}
     assert set(document["applies_to"]) == {"mass", "evolutionary_state"}
     assert len(document["intervals"]) == len(load_prior(name).intervals)
     for interval in document["intervals"]:
@@ -189,6 +216,54 @@ def test_json_keys(name):
             assert low <= interval[coordinate]["median"] <= high
         assert set(interval["excluded"]) == {"index", "coefficient"}
         assert len(interval["landmarks"]) == 4
+
+
+def column(name, file="structure_nodes.csv"):
+    return [float(row[name]) for row in table(file) if row[name]]
+
+
+def test_show_of_the_calibration():
+    """The numbers of the text are those of the nodes and boundaries, and every region is named."""
+    result = stellerg("priors", "show", CALIBRATION)
+    model, bounds = load_prior(CALIBRATION), "structure_branches.csv"
+    assert (result.code, result.err) == (0, "")
+    for words in (model.summary, model.source, "applies to", "0.1 to 40 solar masses", "Covered", "Refused"):
+        assert words in result.words
+    assert "common part 1.5 % of w (standard deviation of ln w), shared by stars of like mass" in result.words
+    shown = [line.split() for line in result.out.splitlines() if re.match(r" *[\d.]+( +[\d.]+){4} ", line)]
+    assert [float(line[0]) for line in shown] == [0.2, 0.5, 1.0, 2.0, 5.0, 10.0, 30.0]
+    for mass, *cells in shown:
+        (node,) = (row for row in table("structure_nodes.csv") if float(row["mass"]) == float(mass))
+        radius, w, gamma, scatter = (float(node[x]) for x in ("radius_zams", "alpha_zams", "gamma", "scatter"))
+        end = radius * np.interp(math.log(float(mass)), np.log(column("mass", bounds)), column("x_end", bounds))
+        numbers = [radius, w, 5.0 - 3.0 / w, gamma, 100.0 * scatter, end]
+        written = [float(cell) for cell in cells if cell != "%"]
+        assert [*written[:5], written[-1]] == pytest.approx(numbers, rel=5e-4)  # four digits are written
+    for name in ("x_end", "radius_limit", "hayashi_above"):
+        values = column(name, bounds)
+        assert f"{min(values):g} to {max(values):g} R_zams" in result.words
+    for place in stellerg("priors", "show", CALIBRATION, "--json").json["calibration"]["places"]:
+        assert f"{place['name']} {place['words']}" in result.words
+
+
+def test_json_of_the_calibration():
+    document = stellerg("priors", "show", CALIBRATION, "--json").json
+    assert set(document) == {*ABOUT, "calibration"}
+    assert document["common"] == {"fraction": None, "within": "mass", "standard_deviation": 0.015, "scale": 0.5}
+    assert document["calibration"]["nodes"]["gamma"] == column("gamma")
+    assert document["calibration"]["boundaries"]["radius_limit"][-1] is None
+    places = {place["name"]: place["covered"] for place in document["calibration"]["places"]}
+    assert len(places) == len(Place) + 1  # every place there is, and stars stated evolved
+    assert sum(places.values()) == sum(place.covered for place in Place)
+
+
+def test_check_shows_what_the_file_says(tmp_path):
+    good, text = load_prior(CALIBRATION).text, "    [2.0, 1.63, 1.966, 0.5, 0.03],"
+    assert text in good
+    mine = written(tmp_path, good.replace(text, text.replace("1.63", "1.7").replace("0.03", "0.0125")))
+    assert re.search(r"\n +2 +1\.700 +1\.966 .* 1\.2 % ", stellerg("priors", "check", mine).out)
+    wrong = written(tmp_path, good.replace(text, text.replace("1.63", "-1.63")))
+    assert_one_message(stellerg("priors", "check", wrong), "[calibration]: 'radius_zams' must be positive", "-1.63")
 
 
 def test_masses_are_as_written():
@@ -250,6 +325,51 @@ def test_plot_of_a_file_with_any_name(tmp_path):
     drawn = figure.read_text(encoding="utf-8")
     for words in ("polytropic index n", "structure coefficient w", "ln w", "n = 3/2", "n = 3", "50 %", "my $"):
         assert words in drawn
+
+
+SURVEY = Path(__file__).resolve().parents[1] / "examples" / "survey.csv"
+
+
+def test_stars_in_the_plane_of_the_calibration(tmp_path):
+    """Drawn and counted by place: of the survey's 24 stars, 14 have both a mass and a radius with errors."""
+    figure = tmp_path / "plane.svg"
+    arguments = ("priors", "show", CALIBRATION, "--plot", figure, "--stars", SURVEY)
+    result = stellerg(*arguments)
+    assert (result.code, result.err) == (0, "")
+    count = "24 stars: 11 covered; 1 inflated; 1 stated pre-main-sequence; 1 refused (stated evolved); 10 not drawn"
+    assert count in result.words
+    image = figure.read_text(encoding="utf-8")
+    for words in (
+        "main sequence",
+        "inflated",
+        "taken as contracting",
+        "too small: refused",
+        "covered: 11",
+        "refused: 1",
+    ):
+        assert words in image
+    stars = stellerg(*arguments, "--json").json["stars"]
+    assert stars.pop("table") == str(SURVEY)
+    assert stars["places"] == {"main sequence": 11, "inflated": 1, "stated pre-main-sequence": 1, "stated evolved": 1}
+    assert (stars["stars"], stars["without_mass_and_radius"]) == (24, 10)
+    assert "stars" not in stellerg("priors", "show", CALIBRATION, "--json").json
+
+
+@pytest.mark.parametrize(
+    ("arguments", "wanted"),
+    [
+        ([CALIBRATION, "--stars", SURVEY], ("--stars", "add --plot FILE")),
+        (["wide-index", "--stars", SURVEY, "--plot", "x.png"], ("--stars", "'wide-index'", "show main-sequence")),
+        ([CALIBRATION, "--stars", "none.csv", "--plot", "x.png"], ("none.csv", "no such file")),
+        ([CALIBRATION, "--stars", "masses.csv", "--plot", "x.png"], ("masses.csv", "'radius' or 'log_radius'")),
+        ([CALIBRATION, "--stars", SURVEY, "--plot", "x.gif"], ("plot", "use .png, .pdf or .svg")),
+    ],
+)
+def test_stars_that_cannot_be_drawn(arguments, wanted, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    written(tmp_path, "star,mass,mass_error\na,1,0.1\n", "masses.csv")
+    assert_one_message(stellerg("priors", "show", *arguments), *wanted)
+    assert not list(tmp_path.glob("x.*"))
 
 
 @pytest.mark.parametrize("name", ["prior.docx", "nowhere/prior.png"])

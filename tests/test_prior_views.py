@@ -2,17 +2,23 @@
 
 import itertools
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from scipy import integrate, stats
 
+from stellerg import Stars, propagate, read_stars
+from stellerg.report.domain_figure import domain_figure
 from stellerg.report.prior_document import LANDMARKS, density_words, prior_document
+from stellerg.report.prior_domain import place_stars
 from stellerg.report.prior_figure import prior_figure
 from stellerg.report.prior_view import View
+from stellerg.structure.calibration import Calibration, Place
 from stellerg.structure.files import available_priors, load_prior, parse_prior
 from stellerg.structure.model import Coordinate
+from test_calibration import table
 from test_prior_files import HEAD, UNIFORM, component
 
 INDEX, COEFFICIENT, LOG = Coordinate
@@ -26,7 +32,9 @@ DENSITIES = {
     "table": 'distribution = "tabulated"\npoints = [1, 1.5, 2, 2.5, 3]\ndensity = [0, 1, 0, 0, 1]\n',
     "uniform": UNIFORM,
 }
-MODELS = {name: load_prior(name) for name in available_priors()}
+SHIPPED = {name: load_prior(name) for name in available_priors()}
+CALIBRATION = SHIPPED["main-sequence"]
+MODELS = {name: model for name, model in SHIPPED.items() if not isinstance(model, Calibration)}
 MODELS |= {
     f"{name} on {c.value}": parse_prior(f"{HEAD}[{c.value}]\n{text}")
     for name, text in DENSITIES.items()
@@ -41,6 +49,13 @@ MIXTURE = parse_prior(
     + component(0.25, 'distribution = "uniform"\nlower = 2.5\nupper = 4\n')
 )
 MODELS["mixture with a point"] = MIXTURE
+
+
+def test_all_shipped_models_but_the_calibration_have_views():
+    assert set(SHIPPED) - set(MODELS) == {"main-sequence"}
+    assert isinstance(CALIBRATION, Calibration)
+    assert "intervals" not in prior_document(CALIBRATION)
+    assert all("calibration" not in prior_document(model) for model in MODELS.values())
 
 
 def views(coordinate):
@@ -214,17 +229,25 @@ def test_points_are_upright_lines_as_high_as_their_probability():
 @pytest.mark.parametrize("name", ["by-mass", "uniform-index", "constant-density", "mixture with a point"])
 def test_no_text_is_cut_or_overlaps(name):
     figure = prior_figure(MODELS[name])
+    titles = [t for axis in figure.axes for t in (axis.title, axis._left_title)]
+    assert_whole_and_apart(figure, titles, least=15)
+
+
+def assert_whole_and_apart(figure, more, least):
+    """No text is cut or overlaps another: titles, ticks, axes, legend and `more`."""
     canvas = FigureCanvasAgg(figure)
     canvas.draw()
     renderer = canvas.get_renderer()
-    texts = [t for axis in figure.axes for t in (axis.title, axis.yaxis.label, axis._left_title)]
+    texts = [*more, *(line.label for axis in figure.axes for line in (axis.xaxis, axis.yaxis))]
     for axis in figure.axes:
         for line, (low, high) in ((axis.xaxis, axis.get_xlim()), (axis.yaxis, axis.get_ylim())):
             texts += [tick.label1 for tick in line.get_major_ticks() if low <= tick.get_loc() <= high]
+            texts += [tick.label2 for tick in line.get_major_ticks() if low <= tick.get_loc() <= high]
     texts += [*figure.legends[0].get_texts(), figure._suptitle]
-    boxes = [t.get_window_extent(renderer) for t in texts if t.get_text() and t.get_visible()]
+    texts = [t for t in texts if t.get_text() and t.get_visible()]
+    boxes = [t.get_window_extent(renderer) for t in texts]
     width, height = canvas.get_width_height()
-    assert len(boxes) > 15
+    assert len(boxes) > least
     for box in boxes:
         assert box.x0 >= 0
         assert box.y0 >= 0
@@ -232,8 +255,138 @@ def test_no_text_is_cut_or_overlaps(name):
         assert box.y1 <= height
     for one, other in itertools.combinations(boxes, 2):
         assert not one.overlaps(other)
+    return texts
 
 
 def test_mass_intervals_are_labelled_curves():
     legend = [text.get_text() for text in prior_figure(MODELS["by-mass"]).legends[0].get_texts()]
     assert legend[:2] == ["below 0.35 solar masses", "from 0.35 solar masses up"]
+
+
+# --- the calibration: its tables, its plane of mass and radius, and stars in it ---
+
+NODES, BOUNDARIES = table("structure_nodes.csv"), table("structure_branches.csv")
+STATES = ("unknown", "main-sequence", "pre-main-sequence", "evolved")
+
+
+def published(rows, column):
+    return np.array([float(row[column] or "nan") for row in rows])
+
+
+def boundary(column, mass):
+    """Linear in ln M between the given values, constant beyond them."""
+    at, values = published(BOUNDARIES, "mass"), published(BOUNDARIES, column)
+    given = np.isfinite(values)
+    return np.interp(np.log(mass), np.log(at[given]), values[given])
+
+
+def line_of(figure, name):
+    (line,) = drawn(figure.axes[0], name)
+    return line.get_data()
+
+
+@pytest.mark.parametrize(
+    ("name", "column", "last"),
+    [
+        ("zero age", None, 40.0),
+        ("end", "x_end", 40.0),
+        ("radius limit", "radius_limit", 1.0),
+        ("full convection", "hayashi_above", 5.0),
+        ("smallest", 0.8, 40.0),
+    ],
+)
+def test_the_lines_of_the_figure_are_the_boundaries(name, column, last):
+    mass, radius = line_of(domain_figure(CALIBRATION), name)
+    assert (mass[0], mass[-1]) == (0.1, last)
+    at = published(NODES, "mass")
+    here = np.isin(mass, at)
+    assert here.sum() == (at <= last).sum()  # every node that it passes is on the line
+    ratio = boundary(column, mass[here]) if isinstance(column, str) else column or 1.0
+    wanted = ratio * published(NODES, "radius_zams")[at <= last]
+    assert radius[here] == pytest.approx(wanted, rel=1e-9)
+    assert radius[here] != pytest.approx(1.001 * wanted, rel=1e-9)  # a control: the comparison sees a thousandth
+
+
+def test_the_colours_are_the_median_coefficients_of_the_stars_there():
+    axis = domain_figure(CALIBRATION).axes[0]
+    meshes = [mesh for mesh in axis.collections if mesh.__class__.__name__ == "QuadMesh"]
+    places = set()
+    for mesh in meshes:
+        corners = np.log(mesh.get_coordinates())
+        middle = 0.25 * (corners[1:, 1:] + corners[1:, :-1] + corners[:-1, 1:] + corners[:-1, :-1])
+        log_mass, log_radius = middle[::40, ::15].reshape(-1, 2).T
+        places |= set(CALIBRATION.place(log_mass, log_radius, np.zeros(len(log_mass), bool)).tolist())
+        stars = Stars.of(
+            **{
+                name: [f"{value!r} exact" for value in np.exp(values).tolist()]
+                for name, values in (("mass", log_mass), ("radius", log_radius))
+            }
+        )
+        found = propagate(stars, outputs="potential_energy", prior="main-sequence").median("structure_coefficient")
+        assert np.asarray(mesh.get_array())[::40, ::15].ravel() == pytest.approx(found, rel=1e-6)
+    assert places == {Place.MAIN_SEQUENCE, Place.INFLATED, Place.CONTRACTING}  # nothing that is refused
+
+
+REGIONS = {
+    "main sequence": (Place.MAIN_SEQUENCE, Place.STATED_CONTRACTING),
+    "inflated": (Place.INFLATED, Place.STATED_CONTRACTING),
+    "taken as contracting": (Place.CONTRACTING, Place.STATED_CONTRACTING),
+    "too large: refused unless\nstated pre-main-sequence": (Place.BEYOND, Place.STATED_CONTRACTING),
+    "too large: refused": (Place.BEYOND, Place.CONTRACTING_OUTSIDE),
+    "too small: refused": (Place.TOO_SMALL, Place.TOO_SMALL),
+    "mass outside: refused": (Place.MASS_OUTSIDE, Place.MASS_OUTSIDE),
+}
+
+
+def test_the_name_of_a_region_stands_in_it():
+    """All four corners of each name, turned as it is drawn."""
+    figure = domain_figure(CALIBRATION)
+    (axis, _), canvas = figure.axes, FigureCanvasAgg(figure)
+    canvas.draw()
+    names = [text for text in axis.texts if text.get_gid() == "region"]
+    assert sorted(text.get_text() for text in names) == sorted([*REGIONS, "mass outside: refused"])
+    for text in names:
+        lines = text.get_text().split("\n")
+        sizes = [
+            canvas.get_renderer().get_text_width_height_descent(t, text.get_fontproperties(), False) for t in lines
+        ]
+        half = 0.5 * np.array([max(width for width, *_ in sizes), sum(height for _, height, _ in sizes)])
+        angle = np.radians(text.get_rotation())
+        turn = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
+        centre = axis.transData.transform(text.get_position())
+        corners = [centre + turn @ (half * sign) for sign in itertools.product((-1, 1), repeat=2)]
+        log_mass, log_radius = np.log(axis.transData.inverted().transform([centre, *corners])).T
+        for stated, wanted in zip((False, True), REGIONS[text.get_text()], strict=True):
+            assert set(CALIBRATION.place(log_mass, log_radius, np.full(5, stated)).tolist()) == {wanted}, text
+
+
+@pytest.mark.parametrize("file", [None, "survey.csv"])
+def test_the_texts_of_the_plane_can_be_read(file, examples):
+    stars = None if file is None else place_stars(read_stars(examples / file), CALIBRATION, file)
+    figure = domain_figure(CALIBRATION, stars)
+    assert figure.get_facecolor() == (1.0, 1.0, 1.0, 1.0)
+    texts = assert_whole_and_apart(figure, figure.axes[0].texts, least=25)
+    assert min(text.get_fontsize() for text in texts) >= 9.0
+
+
+@pytest.fixture
+def examples():
+    return Path(__file__).resolve().parents[1] / "examples"
+
+
+def test_stars_are_drawn_at_their_medians_with_their_intervals():
+    table = {
+        "mass": ["1.0 ± 0.05", "0.5 exact", "", "3.0 ± 0.1"],
+        "radius": ["1.1 +0.2 -0.1", "0.45 exact", "1(1)", "9"],
+    }
+    placed = place_stars(Stars.of(**table), CALIBRATION, "mine")
+    assert (placed.without, placed.place) == (2, ("main sequence", "main sequence"))
+    container = domain_figure(CALIBRATION, placed).axes[0].containers[0]
+    line, _, (across, up) = container.lines
+    assert line.get_gid() == "covered"
+    mass, radius = line.get_data()
+    assert mass == pytest.approx([1.0, 0.5], rel=1e-9)
+    assert radius == pytest.approx([1.1, 0.45], rel=1e-9)
+    assert across.get_segments()[0][:, 0] == pytest.approx([0.95, 1.05], rel=1e-9)
+    assert up.get_segments()[0][:, 1] == pytest.approx([1.0, 1.3], rel=1e-9)
+    assert up.get_segments()[1][:, 1] == pytest.approx([0.45, 0.45], rel=1e-9)

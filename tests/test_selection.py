@@ -24,7 +24,7 @@ from reference_star import (
 )
 from stellerg.errors import InputError
 from stellerg.inputs import Exact
-from stellerg.observables import LATENTS
+from stellerg.observables import LATENTS, OBSERVABLES
 from stellerg.selection import Need, determined, select
 from stellerg.stars import Stars
 from stellerg.status import Flag, Status
@@ -60,10 +60,16 @@ def test_redundant_columns_are_left_aside_by_name():
             ("radius", "effective_temperature"),
             ("log_luminosity",),
         ),
+        # nothing else says what a star is made of
+        (
+            ("mean_molecular_weight", "mass", "log_mass", "radius"),
+            ("mass", "radius", "mean_molecular_weight"),
+            ("log_mass",),
+        ),
     ],
 )
 def test_order_of_selection(names, chosen, left):
-    need = Need("anything", ((2.0, -1.0, -1.0, 0.0),))
+    need = Need("anything", ((2.0, -1.0, -1.0, 0.0, 0.0),))
     for order in (names, names[::-1]):
         selection = select(order, {}, [need], None)
         assert (selection.chosen, selection.aside) == (chosen, left)
@@ -74,7 +80,11 @@ def test_determined():
     assert determined(unit[1], ["luminosity", "effective_temperature"])
     assert not determined(unit[1], ["luminosity", "parallax"])
     assert not determined(unit[0], [])
-    assert determined(np.zeros(4), [])
+    assert determined(np.zeros(len(LATENTS)), [])
+    assert determined(unit[4], ["mass", "mean_molecular_weight"])
+    others = [name for name in OBSERVABLES if name != "mean_molecular_weight"]
+    assert not determined(unit[4], others)
+    assert all(determined(unit[k], others) for k in range(4))
 
 
 def test_use_names_what_is_independent():

@@ -9,9 +9,16 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import integrate, stats
 
+from stellerg import Stars, propagate
+from stellerg.report.domain_figure import domain_figure
+from stellerg.report.prior_document import prior_document
+from stellerg.report.prior_domain import MARKS, place_stars
+from stellerg.status import Flag, Status
+from stellerg.structure.calibration import Calibration
 from stellerg.structure.distributions import Beta, Normal, Point, Tabulated, Uniform
 from stellerg.structure.files import available_priors, load_prior, parse_prior
-from stellerg.structure.model import Component, Coordinate, Mixture
+from stellerg.structure.model import Component, Coordinate, Mixture, StructureModel
+from test_calibration import table
 
 # Tolerances: rounding; scipy's own special functions; the tail of 1e-12 that the moments leave out.
 ROUNDING, SCIPY, TAIL = 1e-13, 1e-10, 1e-8
@@ -215,7 +222,35 @@ SHIPPED = {
 }
 
 
-@pytest.mark.parametrize("name", sorted(available_priors()))
+def test_every_shipped_model_is_checked_as_a_density_or_as_a_calibration():
+    kinds = {name: type(load_prior(name)) for name in available_priors()}
+    assert [name for name, kind in kinds.items() if kind is Calibration] == ["main-sequence"]
+    assert {kind for name, kind in kinds.items() if name != "main-sequence"} == {StructureModel}
+    assert {*SHIPPED, "by-mass", "main-sequence"} == set(kinds)
+
+
+def test_the_shipped_calibration_is_documented_and_proper():
+    model, again = load_prior("main-sequence"), parse_prior(load_prior("main-sequence").text, "main-sequence")
+    assert (again.name, again.summary, again.source) == (model.name, model.summary, model.source)
+    assert "\n" not in model.summary
+    assert prior_document(again) == prior_document(model)
+    assert model.needs == ("mass", "radius")
+    mass, ratio, stated = (
+        x.ravel() for x in np.meshgrid([0.2, 0.69, 0.8, 1.2, 3.0, 30.0], [0.85, 1.1, 1.34], [False, True])
+    )
+    log_mass, log_radius = np.log(mass), np.log(ratio) + model.relation_at(np.log(mass))[:, 0]
+    relation = model.relation(log_mass, log_radius, stated)
+    q = relation.quantile(np.tile(P, (len(mass), 1)), log_mass[:, None], log_radius[:, None])
+    centre = relation.centre(log_mass[:, None], log_radius[:, None])
+    assert relation.cumulative(q, centre) == pytest.approx(np.tile(P, (len(mass), 1)), abs=1e-9)
+    assert np.all(np.diff(q, axis=1) > 0.0)
+    assert np.all(q >= math.log(0.6))
+    assert np.any(relation.convective > 0.0)  # all three kinds of law are among them
+    assert np.any(relation.widening > 0.0)
+    assert np.any(relation.follows < 1.0)
+
+
+@pytest.mark.parametrize("name", [name for name in available_priors() if name != "main-sequence"])
 def test_shipped_model_loads_and_is_documented(name):
     model = load_prior(name)
     assert model.name == name
@@ -268,3 +303,56 @@ def test_index_models_do_not_look_at_the_mass():
     model = load_prior("uniform-index")
     assert model.needs == ()
     assert model.quantile(P).tolist() == model.quantile(P, np.full(len(P), 5.0), np.zeros(len(P))).tolist()
+
+
+# --- the calibration as data, and stars in it ---
+
+NODES, BOUNDARIES = table("structure_nodes.csv"), table("structure_branches.csv")
+STATES = ("unknown", "main-sequence", "pre-main-sequence", "evolved")
+
+
+def test_the_document_of_the_calibration_holds_the_published_tables():
+    document = prior_document(load_prior("main-sequence"))["calibration"]
+    for own, column in (("mass", "mass"), ("radius_zams", "radius_zams"), ("coefficient_zams", "alpha_zams")):
+        assert document["nodes"][own] == [float(node[column]) for node in NODES]
+    for own, column in (("end", "x_end"), ("convective_above", "hayashi_above"), ("radius_limit", "radius_limit")):
+        assert document["boundaries"][own] == [float(row[column]) if row[column] else None for row in BOUNDARIES]
+    log_mass = np.log([float(row["mass"]) for row in BOUNDARIES])
+    for row in document["by_mass"]:
+        (node,) = (node for node in NODES if float(node["mass"]) == row["mass"])
+        assert row["radius_zams"] == pytest.approx(float(node["radius_zams"]), rel=ROUNDING)
+        assert row["n_effective"] == pytest.approx(5.0 - 3.0 / float(node["alpha_zams"]), rel=ROUNDING)
+        assert row["gamma"] == pytest.approx(float(node["gamma"]), abs=ROUNDING)
+        end = np.interp(math.log(row["mass"]), log_mass, [float(row["x_end"]) for row in BOUNDARIES])
+        assert row["radius_at_end"] == pytest.approx(row["radius_zams"] * end, rel=ROUNDING)
+    assert [row["mass"] for row in document["by_mass"] if row["radius_limit"]] == [0.5]  # 0.2: the end is the limit
+
+
+def test_a_calibration_of_few_masses_shows_its_nodes_and_is_drawn():
+    text = load_prior("main-sequence").text
+    head, rows, tail = text.partition("nodes = [\n")[0], *text.partition("nodes = [\n")[2].split("\n]\n", 1)
+    kept = [row for row in rows.splitlines() if row.startswith(("    [2.5,", "    [3.0,", "    [4.0,"))]
+    few = parse_prior("\n".join([head + "nodes = [", *kept, "]", tail]), "few")
+    assert few.nodes.mass.tolist() == [2.5, 3.0, 4.0]
+    assert [row["mass"] for row in prior_document(few)["calibration"]["by_mass"]] == [2.5, 3.0, 4.0]
+    lines = {line.get_gid(): len(line.get_xdata()) for line in domain_figure(few).axes[0].lines}
+    assert lines["radius limit"] == 0  # it ends at 1 solar mass
+    assert min(lines[name] for name in ("zero age", "end", "full convection", "smallest")) > 300
+
+
+def test_the_marks_are_what_the_engines_make_of_the_stars():
+    """A table over the plane, in every state: refusals and flags of `propagate` against the marks."""
+    calibration = load_prior("main-sequence")
+    mass, ratio, state = (
+        x.ravel() for x in np.meshgrid([0.08, 0.3, 0.6, 0.8, 1.2, 8.0, 50.0], [0.7, 1.1, 1.32, 3], STATES)
+    )
+    radius = ratio.astype(float) * np.exp(calibration.relation_at(np.log(mass.astype(float)))[:, 0])
+    stars = Stars.of(mass=(mass, 1e-4 * mass), radius=(radius, 1e-4 * radius), evolutionary_state=state.tolist())
+    placed = place_stars(stars, calibration, "grid")
+    marks = np.array(placed.mark)
+    posterior = propagate(stars, outputs="potential_energy", prior="main-sequence")
+    assert ((marks == "refused") == (posterior.status != Status.OK)).all()
+    for mark, flag in (("inflated", Flag.RADIUS_INFLATED), ("taken as contracting", Flag.TAKEN_AS_CONTRACTING)):
+        assert ((marks == mark) == ((posterior.flags & flag) != 0)).all()
+    assert set(marks) == set(MARKS)
+    assert [c.lines[0].get_gid() for c in domain_figure(calibration, placed).axes[0].containers] == list(MARKS)

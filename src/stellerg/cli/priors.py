@@ -5,6 +5,8 @@ from typing import Annotated
 
 import typer
 
+from stellerg.errors import InputError
+
 __all__ = ["priors"]
 
 priors = typer.Typer(no_args_is_help=True, help="Structure models: list them, show one, check a file of your own.")
@@ -33,22 +35,35 @@ def show(
     model: Annotated[str, typer.Argument(help="Name of a structure model, or a .toml file.", show_default=False)],
     *,
     plot: Annotated[
-        Path | None, typer.Option(help="Write a figure (PNG, PDF or SVG) of its density.", show_default=False)
+        Path | None,
+        typer.Option(
+            help="Write a figure (PNG, PDF or SVG): its density, or the plane of mass and radius of a calibration.",
+            show_default=False,
+        ),
+    ] = None,
+    stars: Annotated[
+        Path | None,
+        typer.Option(
+            help="With --plot, of a calibration: a table of stars (CSV or ECSV) to draw in it and to count by place.",
+            show_default=False,
+        ),
     ] = None,
     as_json: Annotated[bool, _JSON] = False,
 ) -> None:
-    """Show a structure model: its density, in numbers and as a figure, and what it excludes."""
+    """Show a structure model: its density or its calibration, in numbers and as a figure, and what it excludes."""
     from stellerg.structure.files import load_prior
 
     if plot is not None:
         from stellerg.report.figures import check_ending, write
-        from stellerg.report.prior_figure import prior_figure
 
         check_ending(plot)
+    elif stars is not None:
+        raise InputError("--stars: the stars are drawn in a figure, and none was asked for; add --plot FILE")
     found = load_prior(model)
-    _answer(found, as_json)
+    placed = None if stars is None else _placed(stars, found)
+    _answer(found, as_json, placed)
     if plot is not None:
-        write(prior_figure(found), plot)
+        write(_figure(found, placed), plot)
 
 
 @priors.command("check", no_args_is_help=True)
@@ -66,15 +81,45 @@ def check(
     _answer(found, as_json)
 
 
-def _answer(model, as_json: bool) -> None:
+def _answer(model, as_json: bool, placed=None) -> None:
     if as_json:
         from stellerg.report.prior_document import prior_document
 
-        _print_json(prior_document(model))
+        _print_json(prior_document(model) | ({} if placed is None else {"stars": placed.document()}))
         return
     from stellerg.report.prior_text import prior_text
 
     _print(prior_text(model))
+    if placed is not None:
+        from rich.text import Text
+
+        _print(Text("\n" + placed.words()))
+
+
+def _placed(table: Path, model):
+    """The stars of a table in the plane of a calibration."""
+    from stellerg.catalogue.read import read_stars
+    from stellerg.report.prior_domain import place_stars
+    from stellerg.structure.calibration import Calibration
+
+    if not isinstance(model, Calibration):
+        raise InputError(
+            f"--stars: stars are drawn in the plane of mass and radius of a calibration, and {model.name!r} is a "
+            "density of structure; show main-sequence, or leave --stars out"
+        )
+    return place_stars(read_stars(table), model, str(table))
+
+
+def _figure(model, placed):
+    from stellerg.structure.calibration import Calibration
+
+    if isinstance(model, Calibration):
+        from stellerg.report.domain_figure import domain_figure
+
+        return domain_figure(model, placed)
+    from stellerg.report.prior_figure import prior_figure
+
+    return prior_figure(model)
 
 
 def _print(text) -> None:

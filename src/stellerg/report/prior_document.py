@@ -1,10 +1,13 @@
 """A structure model as plain data: what ``stellerg priors show --json`` prints, and the words of its parts."""
 
 import math
+from dataclasses import asdict
 
 import numpy as np
 
+from stellerg.report.prior_domain import domain_document
 from stellerg.report.prior_view import View
+from stellerg.structure.calibration import Calibration
 from stellerg.structure.distributions import Beta, Normal, Point, Tabulated
 from stellerg.structure.model import Component, Coordinate, MassInterval, Mixture, StructureModel
 from stellerg.structure.polytrope import gravitational_coefficient, index_of_coefficient
@@ -28,20 +31,21 @@ _PROBABILITIES = {"interval68": 0.6826894921370859, "interval95": 0.954499736103
 _CLOSE = 1e-9  # values of n that differ by less are the same but for rounding
 
 
-def prior_document(model: StructureModel) -> dict:
+def prior_document(model: StructureModel | Calibration) -> dict:
     """Return a structure model, its numbers and what it excludes.
 
     Parameters
     ----------
-    model : StructureModel
+    model : StructureModel or Calibration
 
     Returns
     -------
     dict
-        Numbers, texts, lists and None only; None for an end at infinity and for a mean that does not exist.
+        Numbers, texts, lists and None only; None for an end at infinity and for a mean that does not exist. A
+        calibration has an entry `calibration` where a density has `intervals`.
     """
     limits, common = model.applies_to, model.common
-    return {
+    about = {
         "name": model.name,
         "summary": model.summary,
         "source": model.source,
@@ -49,9 +53,11 @@ def prior_document(model: StructureModel) -> dict:
             "mass": list(limits.mass) if limits.mass else None,
             "evolutionary_state": list(limits.evolutionary_state),
         },
-        "common": {"fraction": common.fraction, "within": common.within} if common else None,
-        "intervals": [_interval(piece) for piece in model.intervals],
+        "common": asdict(common) if common else None,
     }
+    if isinstance(model, Calibration):
+        return {**about, "calibration": domain_document(model)}
+    return {**about, "intervals": [_interval(piece) for piece in model.intervals]}
 
 
 def mass_words(piece: MassInterval) -> str:

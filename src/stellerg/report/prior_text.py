@@ -7,6 +7,7 @@ from rich.text import Text
 
 from stellerg.posterior.text import number
 from stellerg.report.prior_document import prior_document
+from stellerg.structure.calibration import Calibration
 from stellerg.structure.model import StructureModel
 
 __all__ = ["prior_text", "priors_text"]
@@ -14,23 +15,28 @@ __all__ = ["prior_text", "priors_text"]
 _ROWS = {"index": "polytropic index n", "coefficient": "structure coefficient w", "log_coefficient": "ln w"}
 
 
-def priors_text(models: list[StructureModel]) -> RenderableType:
+def priors_text(models: list[StructureModel | Calibration]) -> RenderableType:
     """Return a list of structure models, a block each, ready to print."""
     blocks: list[RenderableType] = []
     for model in models:
         answer = prior_document(model)
-        facts = _facts(answer, {"density": "; ".join(map(_density, answer["intervals"]))})
+        if "calibration" in answer:
+            facts = _facts(answer, {"relation": _relation(answer["calibration"])})
+        else:
+            facts = _facts(answer, {"density": "; ".join(map(_density, answer["intervals"]))})
         blocks += [Text(answer["name"], style="bold"), Padding(Text(_line(answer["summary"])), (0, 0, 0, 2))]
         blocks += [Padding(facts, (0, 0, 0, 2)), Text()]
     return Group(*blocks[:-1])
 
 
-def prior_text(model: StructureModel) -> RenderableType:
-    """Return one structure model with its numbers and what it excludes, ready to print."""
+def prior_text(model: StructureModel | Calibration) -> RenderableType:
+    """Return one structure model with its numbers and what it excludes or refuses, ready to print."""
     answer = prior_document(model)
     parts: list[RenderableType] = [Text(answer["name"], style="bold"), Text(_line(answer["summary"])), Text()]
     parts.append(_facts(answer, {"source": _line(answer["source"])}))
-    for interval in answer["intervals"]:
+    if "calibration" in answer:
+        parts += [Text(), *_calibration(answer["calibration"])]
+    for interval in answer.get("intervals", ()):
         parts += [Text(), Text(_density(interval), style="bold"), _values(interval), Text()]
         parts += [Text(_excluded(interval)), *_spread(interval), _landmarks(interval)]
     return Group(*parts)
@@ -67,7 +73,12 @@ def _common(common: dict | None) -> str:
     if common is None:
         return "how much is common to all stars is not stated"
     who = {"all": "all stars", "mass": "stars of like mass"}.get(common["within"])
-    return f"{100.0 * common['fraction']:.4g} %, shared by {who or 'stars of one ' + repr(common['within'])}"
+    who = who or f"stars of one {common['within']!r}"
+    if common["scale"] is not None:
+        who += f" (Gaussian kernel of scale {common['scale']:.4g} in ln M)"
+    if common["fraction"] is None:
+        return f"{100.0 * common['standard_deviation']:.4g} % of w (standard deviation of ln w), shared by {who}"
+    return f"{100.0 * common['fraction']:.4g} %, shared by {who}"
 
 
 def _number(value: float | None, digits: int = 4) -> str:
@@ -139,3 +150,58 @@ def _landmarks(interval: dict) -> Table:
     for mark in interval["landmarks"]:
         table.add_row(mark["name"], f"{mark['index']:.2f}", f"{mark['coefficient']:.3f}", mark["place"])
     return table
+
+
+def _relation(domain: dict) -> str:
+    """What a calibration makes of mass and radius, in one line."""
+    nodes = domain["nodes"]
+    low, high = (f"{end(nodes['coefficient_zams']):.4g}" for end in (min, max))
+    return (
+        f"w from mass and radius: {low} to {high} at age zero, growing with the radius as R^gamma, gamma "
+        f"{min(nodes['gamma']):.4g} to {max(nodes['gamma']):.4g}, scatter {_scatter(nodes['scatter'])}"
+    )
+
+
+def _scatter(values: list[float]) -> str:
+    low, high = (f"{100.0 * end(values):.4g}" for end in (min, max))
+    return f"{low} %" if low == high else f"{low} to {high} %"
+
+
+def _calibration(domain: dict) -> list[RenderableType]:
+    """The relation at some masses, and the regions of the plane of mass and radius."""
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="dim")
+    headings = ("mass", "R_zams", "w_zams", "effective\nindex n", "gamma", "scatter\nof w", "inflated\nabove R")
+    for heading in (*headings, "R at end of\nmain sequence"):
+        table.add_column(heading, justify="right", no_wrap=True, vertical="bottom")
+    for row in domain["by_mass"]:
+        limit = row["radius_limit"]
+        table.add_row(
+            f"{row['mass']:.4g}",
+            *(_number(row[name]) for name in ("radius_zams", "coefficient_zams", "n_effective")),
+            f"{row['gamma']:.3f}",
+            f"{100.0 * row['scatter']:.1f} %",
+            "" if limit is None else _number(limit),
+            _number(row["radius_at_end"]),
+        )
+    count, scatter = len(domain["nodes"]["mass"]), _scatter(domain["nodes"]["scatter"])
+    return [
+        Text("ln w = ln w_zams(M) + gamma(M) ln(R/R_zams(M)) + scatter", style="bold"),
+        table,
+        Text(),
+        Text(
+            "Mass and radius in nominal solar units; R_zams and w_zams: radius and structure coefficient at age zero; "
+            f"n = 5 - 3/w. Cubic splines in ln M through {count} nodes, which --json gives. By itself the scatter "
+            f"spreads the potential energy by {scatter} (standard deviation of the logarithm)."
+        ),
+        *_regions("Covered", [place for place in domain["places"] if place["covered"]]),
+        *_regions("Refused", [place for place in domain["places"] if not place["covered"]]),
+    ]
+
+
+def _regions(heading: str, places: list[dict]) -> list[RenderableType]:
+    table = Table.grid(padding=(0, 2, 0, 0))
+    table.add_column(no_wrap=True, style="dim")
+    table.add_column()
+    for place in places:
+        table.add_row(place["name"], Text(place["words"]))
+    return [Text(), Text(heading, style="bold"), table]

@@ -79,6 +79,9 @@ class ChainSettings:
 class PredictiveCheck:
     """One statistic of the observed indices against data replicated under the posterior.
 
+    The spread of the indices is what was fitted, and so rarely stands out; the largest deviation shows a star that is
+    not of the population, the disagreement within stars a misfit that is not common, or errors quoted too small.
+
     Attributes
     ----------
     name : str

@@ -36,13 +36,13 @@ MISFIT_SD = 0.25
 # Half-Cauchy scale of the spread: judgement. Around 0.3, where main-sequence stars lie, it is level in ln spread, for
 # which the intervals of a normal sample's standard deviation have the right coverage.
 _SPREAD_SCALE = 0.3
-_SLOPE_SD = 1.0  # of n in ln M: judgement; main-sequence stars of 1 to 40 solar masses change by less than 1 in all
-# Limits of the spread: n as good as equal for all; nearly uniform over [0, 4.95], which no population of stars is. Without
-# the upper one the half-Cauchy tail would decide the mean square of the spread for a handful of stars.
+_SLOPE_SD = 1.0  # of dn/d ln M: judgement; wide, as n itself spans about 2 among stars
+# Limits of the spread: n as good as equal for all; nearly uniform over [0, 4.95], which no population of stars is.
+# Without the upper one the half-Cauchy tail would decide the mean square of the spread for a handful of stars.
 _LN_SPREAD = (float(np.log(1e-4)), float(np.log(2.5)))
 _ROUNDS = 8  # of the approximation that the walkers start from
 _STEP = 0.005  # in n, of the tables; they are interpolated linearly, which is good to 1e-4 of an error of 1 %
-_FARTHEST = 1000.0  # normal scores that far have no probability; hard ends are infinite
+_FARTHEST = 1000.0  # of normal scores: as good as impossible, but finite where a hard end makes them infinite
 _MARGIN = 2.5  # in n, of the tables at both ends: ten standard deviations of the misfit, which is clipped to it
 _GRID = np.linspace(-_MARGIN, TOP + _MARGIN, round((TOP + 2.0 * _MARGIN) / _STEP) + 1)
 _PER_INDEX = 1.0 / (_GRID[1] - _GRID[0])
