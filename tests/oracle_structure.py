@@ -134,9 +134,10 @@ def log_coefficient(y, log_mass):
     """Return ln alpha where ln(alpha f) = y; the table is polished where it is coarse (small n, much radiation)."""
     y, log_mass = np.broadcast_arrays(y, log_mass)
     root = np.where(np.abs(y + 0.75) < 5.25, _tables()[3].ev(y, log_mass), y + _LOG2)
-    coarse = (root < -0.25) | (root > 3.9) | (log_mass > 1.5)
+    coarse = (root < -0.25) | (root > 3.9) | (log_mass > 2.5)
     for _ in range(3):
-        root[coarse] = y[coarse] - log_energy_factor(root[coarse], log_mass[coarse])
+        a, k = root[coarse], log_mass[coarse]
+        root[coarse] = a - (a + log_energy_factor(a, k) - y[coarse]) / (1.0 + _tables()[2].ev(a, k, dx=1))
     return root
 
 
@@ -455,7 +456,8 @@ class _Distribution:
                 self.logs[name] = 0.0 if source is None else np.log(source.value)
             elif matters[name]:
                 self.coupled[name] = source
-                edges = np.interp(np.linspace(0.0, 4.0, 4 * refine + 1), np.arange(5.0), _PANELS)
+                panels = _PANELS[::2] if name == "mu" else _PANELS
+                edges = np.interp(np.arange(0.0, len(panels) - 1 + 1e-9, 1.0 / refine), np.arange(len(panels)), panels)
                 kink = ndtri(source.tails(0.0)[0]) if source.shape == "split-normal" else 0.0
                 self.edges.append(np.unique(np.append(edges, kink)))
             elif self.exponents.get(name):
@@ -493,8 +495,8 @@ class _Distribution:
         trial, offsets = np.linspace(-40.0, 40.0, 4001), 0.05 * 1.6 ** np.arange(15.0)
         at_medians = self._conditional(trial.reshape([-1] + [1] * len(self.edges)), *[np.zeros(1)] * len(self.edges))
         middle = trial[np.searchsorted(at_medians.ravel(), 0.5 * at_medians.max())]
-        low = middle - offsets[np.argmax(function(middle - offsets, 1e-5) < 1e-9)]
-        high = middle + offsets[np.argmax(function(middle + offsets, 1e-5) > 1.0 - 1e-9)]
+        low = middle - offsets[np.append(function(middle - offsets[:-1], 1e-5) < 1e-9, True).argmax()]
+        high = middle + offsets[np.append(function(middle + offsets[:-1], 1e-5) > 1.0 - 1e-9, True).argmax()]
         tolerance = 2e-7 / self.refine
         self.curve = _Curve(function, np.linspace(low, high, 8), tolerance, np.inf)
         for part in self.parts[:-1]:

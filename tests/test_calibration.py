@@ -216,7 +216,8 @@ def distribution(stars):
 def assert_no_step(values_of, log_places, largest):
     """Where values change by more than `largest` between places, they change less at 16 times the resolution.
 
-    A step does not shrink; the upper quantile of a mixture falls steeply through the space between its parts (0.69 Msun). `values_of` takes places and gives (place, value).
+    A step does not shrink; the upper quantile of a mixture falls steeply through the space between its parts (0.69 Msun).
+    `values_of` takes places and gives (place, value).
     """
     change = np.abs(np.diff(values_of(np.exp(log_places)), axis=0))
     change = np.where(np.isnan(change), 0.0, change).max(axis=1)
@@ -245,7 +246,7 @@ def test_a_sweep_in_radius_through_every_boundary_has_no_step(mass):
 
 @pytest.mark.parametrize("mass", SWEPT)
 def test_a_sweep_of_contracting_stars_has_no_step(mass):
-    """Their two branches lie apart: a quantile crosses the empty space between them at once, the distribution does not."""
+    """Their branches lie apart: a quantile crosses the empty space between at once, the distribution does not."""
     log_ratio = np.linspace(np.log(0.81), np.log(6.0), 3_001)
     assert_no_step(lambda ratio: distribution(star_at(mass, ratio, "pre-main-sequence")), log_ratio, 0.05)
 

@@ -22,6 +22,8 @@ from stellerg.status import STATUS_TEXT, Status
 BOTH = ("binding_energy", "kelvin_helmholtz_time")
 ENDS = ("", "_lower68", "_upper68", "_lower95", "_upper95")
 MOMENTS = ("_log10_mean", "_log10_sd", "_linear", "_linear_u")
+INSIDE = ("radiation_share", "ionisation_share")
+WITHOUT_STRUCTURE = ("free_fall_time", "nuclear_time")
 ROUNDING = 1e-9  # medians of inputs that differ by rounding in their units
 UNREADABLE = "cannot be read as a finite number"
 
@@ -109,14 +111,19 @@ def measurements(row):
 # --- what is written ---
 def expected_columns(outputs, observables):
     shares = (*observables, "correlations", "structure")
-    tail = [*ENDS, *MOMENTS, *(f"_budget_{share}" for share in shares)]
+    tail = [*MOMENTS, *(f"_budget_{share}" for share in shares)]
     return [
         "star",
         "status",
         "status_text",
         "flags",
         "engine",
-        *(name + end for name in outputs for end in tail),
+        *(
+            name + end
+            for name in outputs
+            for end in (*ENDS, *(["_calibrated"] if name not in WITHOUT_STRUCTURE else []), *tail)
+        ),
+        *INSIDE,
     ]
 
 
@@ -154,8 +161,56 @@ def test_a_row_equals_the_api(tmp_path, number):
         assert summary[name + "_log10_sd"][number] == posterior.log10_sd(name)[0]
         assert summary[name + "_linear"][number] == posterior.linear_value(name)[0]
         assert summary[name + "_linear_u"][number] == posterior.linear_uncertainty(name)[0]
+        assert summary[name + "_calibrated"][number] == number_or_none(posterior.calibrated(name))
         for quantity, share in posterior.budget(name).items():
             assert summary[f"{name}_budget_{quantity}"][number] == share[0]
+    assert summary["radiation_share"][number] == posterior.radiation_share()[0] > 0.0
+    assert summary["ionisation_share"][number] == posterior.ionisation_share()[0] > 0.0
+
+
+def number_or_none(values):
+    return None if np.isnan(values[0]) else values[0]
+
+
+def test_calibrated_medians_stand_where_the_prior_excludes_them(tmp_path):
+    """They are the medians of the same table under the calibrated prior, and stand beside the flag only."""
+    summary, calibrated = done(tmp_path, TEN), done(tmp_path, TEN, "--prior", "main-sequence")
+    excluded = ["prior-excludes-calibration" in flags for flags in summary["flags"]]
+    assert {True, False} == set(excluded[:8])  # some stars of each kind
+    for name in BOTH:
+        expected = [value if flagged else None for value, flagged in zip(calibrated[name], excluded, strict=True)]
+        assert summary[name + "_calibrated"] == expected
+    assert not any("prior-excludes-calibration" in flags for flags in calibrated["flags"])
+    assert set(calibrated["binding_energy_calibrated"]) == {None}
+
+
+def test_structure_observables_of_a_table(tmp_path):
+    """Cells of the inside reach the star, and what the prior predicted has a column for each."""
+    names = ("star", "mass", "radius", "log_k2", "mean_log_k2", "mean_log_k2_weight")
+    rows = [
+        ("a", "1.0(1)", "1.0(1)", "-1.80 ± 0.05", "", ""),
+        ("b", "1.0(1)", "1.0(1)", "", "-1.80 ± 0.05", "0.6"),
+        ("c", "1.0(1)", "1.0(1)", "", "-1.80 ± 0.05", ""),  # neither the row nor the call says whose it is
+    ]
+    text = csv_text(names, rows)
+    summary = done(tmp_path, text, "--outputs", BOTH[0])
+    assert summary["status"] == ["ok"] * 3
+    assert ["measurement-unusable" in flags for flags in summary["flags"]] == [False, False, True]
+    star = {"mass": "1.0(1)", "radius": "1.0(1)"}
+    own = propagate(Stars.of("a", **star, log_k2="-1.80 ± 0.05"), outputs=BOTH[:1])
+    mean = {"mean_log_k2": "-1.80 ± 0.05", "mean_log_k2_weight": 0.6}
+    of_system = propagate(Stars.of("b", **star, **mean), outputs=BOTH[:1])
+    plain = propagate(Stars.of("c", **star), outputs=BOTH[:1])
+    assert summary[BOTH[0]] == [p.median(BOTH[0])[0] for p in (own, of_system, plain)]
+    assert len(set(summary[BOTH[0]])) == 3
+    for name, expected in (
+        ("log_k2", [own.predictive_probabilities()["log_k2"][0], None, None]),
+        ("mean_log_k2", [None, of_system.predictive_probabilities()["mean_log_k2"][0], None]),
+    ):
+        assert summary[f"{name}_predictive_probability"] == expected
+    # the option fills empty cells only
+    filled = done(tmp_path, text, "--outputs", BOTH[0], "--mean-log-k2-weight", "0.6")
+    assert filled[BOTH[0]] == [summary[BOTH[0]][k] for k in (0, 1, 1)]
 
 
 # Phi(-1), Phi(1), Phi(-2), Phi(2)
@@ -205,6 +260,11 @@ def test_units_and_descriptions(tmp_path):
             assert schema.field(name + end).metadata[b"unit"].decode() == unit
             assert table[name + end].unit == units.Unit(unit)
             assert schema.field(name + end).metadata[b"description"].decode() == table[name + end].info.description
+        assert schema.field(name + "_calibrated").metadata[b"unit"].decode() == unit
+        assert table[name + "_calibrated"].unit == units.Unit(unit)
+    for name in INSIDE:
+        assert b"unit" not in schema.field(name).metadata  # a share
+        assert table[name].unit is None
     assert all(field.metadata[b"description"] for field in schema)
     assert schema.metadata[b"energy_convention"].decode() == "abs(E) = abs(Omega)/2 (monatomic ideal gas)"
     assert schema.metadata[b"time_convention"].decode() == table.meta["time_convention"] == "t_KH = abs(E)/L"
@@ -408,7 +468,7 @@ def test_evolutionary_state_column(tmp_path):
 
 
 def test_an_evolutionary_state_that_is_not_understood_is_flagged(tmp_path):
-    summary = done(tmp_path, states_table("main-sequence", "dead"))
+    summary = done(tmp_path, states_table("main-sequence", "dead"), "--prior", "wide-index")
     assert summary["status"] == ["ok", "ok"]
     assert summary["flags"] == ["", "state-not-understood"]
 

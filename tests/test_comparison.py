@@ -212,6 +212,11 @@ def test_an_output_that_one_prior_does_not_give(tmp_path):
     assert row.split()[2:4] == ["not", "given"]
     assert "mine: no binding energy: prior mine applies only to 2 to 3 solar masses" in result.words
     assert "free fall time: the same under each prior" in result.words
+    outputs = ("binding_energy", "free_fall_time")
+    _, panels = drawn(compare(Stars.of("star", **GIVEN), prior=path, outputs=outputs))
+    assert [[text.get_text() for text in axis.texts] for axis in panels.values()] == [["not given"], []]
+    bars = [len(axis.containers[0].patches) for axis in panels.values()]
+    assert bars == [len(SPREAD) + len(LIMITS), 1 + len(SPREAD) + len(LIMITS)]
 
 
 @pytest.mark.xfail(
@@ -467,6 +472,12 @@ def test_a_wide_range_is_drawn_on_a_logarithmic_axis(tmp_path):
     scale = 10.0 ** comparison.power("binding_energy") / 1e48
     assert bar.get_x() * scale == pytest.approx(low, rel=ROUNDING)
     assert (bar.get_x() + bar.get_width()) * scale == pytest.approx(high, rel=ROUNDING)
+    # a coefficient uniform in the logarithm: a plateau per logarithm, where a density per erg would fall as 1/E
+    hill = next(line for line in axis.lines if len(line.get_xdata()) > 10)
+    at, heights = hill.get_xdata(), -hill.get_ydata()
+    low, high = bar.get_x(), bar.get_x() + bar.get_width()
+    inner = heights[(at > 1.2 * low) & (at < high / 1.2)]
+    assert np.ptp(inner) < 1e-3
     _, plain = drawn(sun_like())
     assert plain["binding energy"].get_xscale() == "linear"
 

@@ -114,16 +114,17 @@ def test_luminosities_of_the_binaries_are_computed_and_recognised_when_used(surv
 
 
 def test_using_all_of_the_over_determined_star_narrows_its_answer(survey, results, tmp_path):
-    """Six measurements of four unknowns, which agree: no flag is raised."""
+    """Six measurements of four unknowns, which agree: the one flag raised is about the prior, with or without them."""
     names = "effective_temperature", "large_frequency_separation", "frequency_of_maximum_power"
     names += "angular_diameter", "parallax", "bolometric_flux"
     assert all(survey["Causeway 8"][name] for name in names)
     rows, _, _ = run("survey.csv", tmp_path, "--use", ",".join(names))
     star = next(row for row in rows if row["star"] == "Causeway 8")
-    assert (star["status"], star["flags"]) == ("ok", "")
+    assert (star["status"], star["flags"]) == ("ok", "prior-excludes-calibration")
     assert float(star["kelvin_helmholtz_time_budget_bolometric_flux"]) > 0.0
     before = next(row for row in results["survey.csv"][0] if row["star"] == "Causeway 8")
     assert before["kelvin_helmholtz_time_budget_bolometric_flux"] == ""
+    assert before["flags"] == "prior-excludes-calibration"
     widths = [float(row["kelvin_helmholtz_time_log10_sd"]) for row in (star, before)]
     assert widths[0] < widths[1], widths
 

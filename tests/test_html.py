@@ -291,7 +291,7 @@ def test_statuses_are_counted_and_explained_once():
         radius=["1.0(1)", "1.0(1)", "1.0(1)", "1.0(1)"],
         luminosity=["1.0(1)", "1.0(1)", "1.0(1)", ""],
     )
-    posterior = propagate(stars)
+    posterior = propagate(stars, prior="wide-index")
     page = Page(posterior_html(posterior))
     assert "4 stars: 1 ok, 1 partial, 2 error-missing" in page.text
     rows = page.tables[0][2:]
@@ -304,6 +304,12 @@ def test_statuses_are_counted_and_explained_once():
     assert "Cove 4: no Kelvin-Helmholtz time" in page.text
     assert rows[0][8] == "positivity-restricted"
     assert "positivity-restricted (1 star): More than 0.1 %" in page.text
+    assert "prior-excludes-calibration" not in page.text
+    default = Page(posterior_html(propagate(stars)))  # under which the calibrated coefficient lies far out
+    two, one = "positivity-restrictedprior-excludes-calibration", "prior-excludes-calibration"  # one word a line
+    assert [row[8] for row in default.tables[0][2:]] == [two, "", "", one]
+    assert "prior-excludes-calibration (2 stars): The coefficient calibrated for" in default.text
+    assert "positivity-restricted (1 star): More than 0.1 %" in default.text
 
 
 def test_values_far_apart_carry_their_own_powers():

@@ -174,7 +174,7 @@ def test_with_radiation_it_enters_through_mu_squared_times_the_mass(row, mu):
 
 
 def quartic(mass_mu2):
-    """Gas pressure fraction beta of the standard model, (1 - beta)/beta^4 = k (mu^2 M)^2, as the table's heading says."""
+    """Gas pressure fraction beta of the standard model: (1 - beta)/beta^4 = k (mu^2 M)^2, as published."""
     low, high = 0.0, 1.0
     for _ in range(200):
         beta = 0.5 * (low + high)

@@ -143,7 +143,7 @@ REFUSED = {
     # intervals
     "interval no tables": ("interval = 3\n" + HEAD, ["[[interval]]"]),
     "no intervals": ("interval = []\n" + HEAD, ["[[interval]]"]),
-    "interval and density": (GOOD + interval("0.0", "inf"), ["not both"]),
+    "interval and density": (GOOD + interval("0.0", "inf"), ["not two of them"]),
     "no mass": (HEAD + "[[interval]]\n[interval.index]\n" + UNIFORM, ["interval 1", "'mass'", "missing"]),
     "one mass": (
         HEAD + "[[interval]]\nmass = [1]\n[interval.index]\n" + UNIFORM,
@@ -177,7 +177,7 @@ REFUSED = {
         ["'evolutionary_state'", "'evolved'"],
     ),
     "common no table": ("common = 3\n" + GOOD, ["[common]", "3"]),
-    "no fraction": (GOOD + '[common]\nwithin = "all"\n', ["[common]", "'fraction'", "missing"]),
+    "no fraction": (GOOD + '[common]\nwithin = "all"\n', ["[common]", "'fraction'", "'standard_deviation'"]),
     "fraction above 1": (GOOD + '[common]\nfraction = 1.1\nwithin = "all"\n', ["'fraction'", "1.1"]),
     "no within": (GOOD + "[common]\nfraction = 0.5\n", ["[common]", "'within'", "missing"]),
     "within no text": (GOOD + "[common]\nfraction = 0.5\nwithin = 3\n", ["'within'", "3"]),

@@ -5,7 +5,7 @@ import pytest
 
 from stellerg import Exact, Stars, propagate
 from stellerg.engines.montecarlo import MonteCarlo
-from stellerg.status import Status
+from stellerg.status import Flag, Status
 
 STAR = {"mass": (1.0, 0.1), "radius": (1.0, 0.1), "luminosity": (1.0, 0.1)}
 
@@ -81,5 +81,7 @@ def test_values_that_no_star_has_are_no_numbers():
 
 
 def test_a_parallax_that_moves_no_output_raises_no_flag():
-    posterior = propagate(Stars.of(parallax=(1.0, 0.5), **STAR))
-    assert posterior.flags[0] == 0
+    stars = Stars.of(parallax=(1.0, 0.5), **STAR)
+    assert propagate(stars, prior="wide-index").flags[0] == 0
+    # under the default prior there is one flag, and it is not about the parallax
+    assert propagate(stars).flags[0] == propagate(Stars.of(**STAR)).flags[0] == Flag.PRIOR_EXCLUDES_CALIBRATION

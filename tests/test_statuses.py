@@ -1,15 +1,20 @@
 """Every status has a row that raises it, with a sentence; a bad row does not disturb its neighbours."""
 
+import csv
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
 
 from stellerg.energetics import Conventions
 from stellerg.inputs import Exact
+from stellerg.keyed_random import hash_identifiers
+from stellerg.posterior.content import star_content
 from stellerg.propagation import propagate
 from stellerg.stars import Stars
-from stellerg.status import STATUS_TEXT, Status, carries_results, flag_words, status_word
+from stellerg.status import FLAG_TEXT, STATUS_TEXT, Flag, Status, carries_results, flag_words, status_word
+from stellerg.structure.files import parse_prior
 
 NAN = math.nan
 GOOD = {"mass": "1.10 ± 0.03", "radius": "1.20 +0.04 -0.03", "luminosity": "1.7 ± 0.1"}
@@ -242,7 +247,8 @@ def test_measurements_that_disagree_are_flagged_not_refused():
         radius=Exact([1.0, 1.0]),
         shape="lognormal",
     )
-    posterior = propagate(stars, outputs=["binding_energy"], use=["mass", "log_mass", "radius"])
+    use = ["mass", "log_mass", "radius"]
+    posterior = propagate(stars, outputs=["binding_energy"], use=use, prior="wide-index")
     assert posterior.status.tolist() == [Status.OK, Status.OK]
     assert posterior.chi2 == pytest.approx([4.0, 100.0], rel=1e-8)
     assert [flag_words(f) for f in posterior.flags] == [(), ("inconsistent-observables",)]
@@ -266,3 +272,133 @@ def test_every_status_has_a_word_and_a_sentence():
     assert all(text.sentence for text in STATUS_TEXT.values())
     with_results = [word for word, has in zip(words, carries_results(np.array(list(Status))), strict=True) if has]
     assert with_results == ["ok", "partial", "doubtful"]
+
+
+# --- flags about structure: a row that raises each, and one just inside its limit that does not ---
+
+
+def reference(name, mass):
+    """The row of a published table at a mass that stands in it."""
+    text = (Path(__file__).parent / "published" / name).read_text(encoding="utf-8").splitlines()
+    rows = csv.DictReader(line for line in text if not line.startswith("#"))
+    return next({key: float(cell) for key, cell in row.items() if cell} for row in rows if float(row["mass"]) == mass)
+
+
+def exactly(mass, radius, **more):
+    return Stars.of("star", mass=Exact(mass), radius=Exact(radius), **more)
+
+
+def uniform_coefficient(share_below, value):
+    """A prior of which a share lies below a value of the coefficient."""
+    lower = value - 0.5 * share_below
+    return parse_prior(
+        f"summary='x'\nsource='test'\n[coefficient]\ndistribution='uniform'\nlower={lower}\nupper={lower + 0.5}\n"
+    )
+
+
+SUN = reference("structure_nodes.csv", 1.0)
+AT_AGE_ZERO = exactly(1.0, SUN["radius_zams"])
+CALIBRATED = {"prior": "main-sequence"}
+
+
+def excluded(share_below):
+    return AT_AGE_ZERO, {"prior": uniform_coefficient(share_below, SUN["alpha_zams"])}
+
+
+def inflated(factor):
+    """0.9 Msun, at a factor times the radius that a single star of this mass reaches at the age of the Universe."""
+    star, limits = (reference(f"structure_{name}.csv", 0.9) for name in ("nodes", "branches"))
+    return exactly(0.9, factor * limits["radius_limit"] * star["radius_zams"]), CALIBRATED
+
+
+def near_the_end(sigmas):
+    """1.2 Msun, so many standard deviations below the radius at the end of the main sequence."""
+    star, limits = (reference(f"structure_{name}.csv", 1.2) for name in ("nodes", "branches"))
+    radius = limits["x_end"] * star["radius_zams"] * math.exp(-0.01 * sigmas)
+    return Stars.of("star", mass=Exact(1.2), radius=(radius, 0.01 * radius), shape="lognormal"), CALIBRATED
+
+
+def with_radiation(share):
+    """Mass at which radiation carries a share of the pressure of the standard model: (1-b)/b^4 = k (mu^2 M)^2."""
+    mass = math.sqrt(share / (1.0 - share) ** 4 / 0.0029902537)  # k as in published/eddington_quartic.csv
+    return exactly(mass, 2.0, mean_molecular_weight=Exact(1.0)), {"prior": "polytrope-3"}
+
+
+def contradicting(sigmas):
+    """A measured coefficient off the one value, 3/2, that the prior allows."""
+    return exactly(1.0, 1.0, structure_coefficient=(1.5 + 0.01 * sigmas, 0.01)), {"prior": "polytrope-3"}
+
+
+# word: rows that do not raise it, rows that do
+FLAGGED = {
+    # outside the central 95.45 %: a share of 0.02275 below or above
+    "prior-excludes-calibration": ([excluded(0.024), excluded(0.976)], [excluded(0.022), excluded(0.978)]),
+    "radius-inflated": ([inflated(0.99)], [inflated(1.01)]),
+    # a probability of 0.05 is 1.6449 standard deviations
+    "near-boundary": ([near_the_end(1.67)], [near_the_end(1.62)]),
+    "radiation-neglected": ([with_radiation(0.0297)], [with_radiation(0.0303)]),
+    # a two-sided probability of 0.01 is 2.5758 standard deviations
+    "prior-data-conflict": ([contradicting(2.55), contradicting(-2.55)], [contradicting(2.6), contradicting(-2.6)]),
+}
+
+
+@pytest.mark.parametrize("word", FLAGGED)
+def test_flag_and_its_limit(word):
+    """Rows on both sides of the limit differ by this flag alone."""
+    sides = []
+    for rows in FLAGGED[word]:
+        answers = [propagate(stars, outputs=["binding_energy"], **options) for stars, options in rows]
+        assert all(answer.status.tolist() == [Status.OK] for answer in answers)
+        assert all(np.isfinite(answer.median("binding_energy")[0]) for answer in answers)
+        sides.append({frozenset(flag_words(answer.flags[0])) for answer in answers})
+    (without,), (raised,) = sides  # rows of one side raise the same flags
+    assert raised - without == {word}
+    assert without - raised == set()
+    sentence = next(text.sentence for text in FLAG_TEXT.values() if text.word == word)
+    assert star_content(answers[0]).flags[word] == sentence
+
+
+def test_radiation_that_is_counted_is_not_neglected():
+    stars, options = with_radiation(0.3)
+    flags = [
+        propagate(stars, conventions=Conventions(pressure=p), **options).flags[0] for p in ("gas", "gas+radiation")
+    ]
+    assert flags[0] - flags[1] == Flag.RADIATION_NEGLECTED
+
+
+TRAINED = """summary = "learned from two stars"
+source = "test"
+[index]
+distribution = "normal"
+mean = 3.0
+standard_deviation = 0.3
+[training]
+stars = 2
+keys = {keys}
+observables = ["log_k2"]
+"""
+
+
+def test_a_star_that_the_prior_was_learned_from_is_flagged(tmp_path):
+    """By its name, wherever it stands and whatever was measured of it; another star of the same numbers is not."""
+    path = tmp_path / "learned.toml"
+    keys = [f"{int(key):016x}" for key in hash_identifiers(["Alder", "Birch"])]
+    path.write_text(TRAINED.format(keys=keys).replace("'", '"'), encoding="utf-8")
+    names = ["Cedar", "Birch", "alder", "Alder"]
+    stars = Stars.of(names, mass=([1.0] * 4, [0.1] * 4), radius=([1.0] * 4, [0.1] * 4))
+    posterior = propagate(stars, outputs=["binding_energy"], prior=path)
+    assert [flag_words(f) for f in posterior.flags] == [(), ("used-in-training",), (), ("used-in-training",)]
+    medians = posterior.median("binding_energy")
+    assert len(set(medians.tolist())) == 1  # a flag moves no number
+    untrained = path.with_name("plain.toml")
+    untrained.write_text(path.read_text(encoding="utf-8").partition("[training]")[0], encoding="utf-8")
+    assert propagate(stars, outputs=["binding_energy"], prior=untrained).flags.tolist() == [0] * 4
+
+
+def test_every_flag_has_a_word_and_a_sentence():
+    assert set(FLAG_TEXT) == set(Flag) - {Flag.NONE}
+    assert {flag: text.word for flag, text in FLAG_TEXT.items()} == {
+        flag: flag.name.lower().replace("_", "-") for flag in FLAG_TEXT
+    }
+    assert all(text.sentence.endswith(".") for text in FLAG_TEXT.values())
+    assert flag_words(sum(Flag)) == tuple(text.word for text in FLAG_TEXT.values())

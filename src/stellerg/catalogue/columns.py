@@ -156,7 +156,7 @@ def recognise(source: Source) -> Columns:
         if pair[::-1] in correlations:
             raise InputError(f"column {column!r} and {correlations[pair[::-1]]!r} say the same; keep one")
     known.update(correlations.values())
-    if not set(observables) & set(OBSERVABLES):
+    if not observables:
         hint = ""
         if any(name.lower() in MEASURABLE for name in names):
             hint = "; names are in lower case: mass, not Mass"

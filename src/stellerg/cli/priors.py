@@ -1,4 +1,4 @@
-"""``stellerg priors``: the structure models, one of them, or a check of a user's own file."""
+"""``stellerg priors``: the structure models, one of them, a check of a user's own file, or one learned from stars."""
 
 from pathlib import Path
 from typing import Annotated
@@ -9,7 +9,7 @@ from stellerg.errors import InputError
 
 __all__ = ["priors"]
 
-priors = typer.Typer(no_args_is_help=True, help="Structure models: list them, show one, check a file of your own.")
+priors = typer.Typer(no_args_is_help=True, help="Structure models: list them, show one, check or learn one.")
 
 _JSON = typer.Option("--json", help="Print JSON.")
 
@@ -79,6 +79,61 @@ def check(
     if not as_json:
         print(f"{file}: no fault found.\n")
     _answer(found, as_json)
+
+
+@priors.command("learn", no_args_is_help=True)
+def learn(
+    table: Annotated[
+        Path, typer.Argument(help="Stars with log_k2, moment_of_inertia_factor or structure_coefficient.")
+    ],
+    *,
+    out: Annotated[Path, typer.Option(help="Model file to write (.toml).", show_default=False)],
+    slope: Annotated[bool, typer.Option("--slope", help="Let the mean index change with ln M.")] = False,
+    stage: Annotated[
+        str, typer.Option(help="Column that names the stage whose stars share one misfit.", show_default=False)
+    ] = "",
+    seed: Annotated[int, typer.Option(help="Seed of the chains.")] = 0,
+    plot: Annotated[
+        Path | None, typer.Option(help="Write a figure (PNG, PDF or SVG) of the predictive check.", show_default=False)
+    ] = None,
+    overwrite: Annotated[bool, typer.Option("--overwrite", help="Replace the file if it exists.")] = False,
+) -> None:
+    """Learn a structure model from stars whose inside was observed: mean and spread of the index, as a file."""
+    import numpy as np
+
+    from stellerg.catalogue.training import read_training_stars
+    from stellerg.report.learned_text import learned_text
+    from stellerg.structure.files import main_sequence
+    from stellerg.structure.learned_file import learned_file_text
+    from stellerg.structure.learning import LEARNED_FROM, ChainSettings, learn_prior
+
+    if out.suffix != ".toml":
+        raise InputError(f"--out: {out} must end in .toml, as every structure model does")
+    if out.exists() and not overwrite:
+        raise InputError(f"--out: {out} exists; name another file or add --overwrite")
+    if plot is not None:
+        from stellerg.report.figures import check_ending
+
+        check_ending(plot)
+    training = read_training_stars(table, stage)
+    stars, log_mass = training.stars, training.log_mass()
+    learned = learn_prior(
+        {name: stars.measured[name] for name in LEARNED_FROM if name in stars.measured},
+        stars.key,
+        stages=training.stages,
+        log_mass=log_mass if slope else None,
+        misfit_scale=np.where(np.isnan(log_mass), 1.0, main_sequence().misfit(np.nan_to_num(log_mass))),
+        settings=ChainSettings(seed=seed),
+    )
+    try:
+        out.write_text(learned_file_text(learned), encoding="utf-8")
+    except OSError as problem:
+        raise InputError(f"--out: {out} cannot be written: {problem.strerror}") from None
+    _print(learned_text(learned, str(out)))
+    if plot is not None:
+        from stellerg.report.learned_figure import predictive_figure
+
+        predictive_figure(learned, plot)
 
 
 def _answer(model, as_json: bool, placed=None) -> None:

@@ -9,38 +9,32 @@ for the expansion of the kernel.
 """
 
 from dataclasses import dataclass, field
-from functools import cached_property, lru_cache
+from functools import cached_property
 
 import numpy as np
-from scipy.special import ndtri
 
-from stellerg.binding import Kind
 from stellerg.engines.answer import REPORTED
 from stellerg.engines.carried import Carried, along, carried_forms, input_cumulants
-from stellerg.engines.kernels import Kernels, expansion_error
-from stellerg.measured import Shape
+from stellerg.engines.kernels import expansion_error
+from stellerg.engines.nodes import GAIN_NODES, REACH, Nodes, kinks
 from stellerg.problem import Problem
 from stellerg.status import Status
 
 __all__ = ["CalibratedAnswer", "calibrated_refusal"]
 
 _SPACING = 1.2  # of the nodes in normal scores, for a kernel much wider than the slope: exp(-2 pi^2/1.2^2) = 1e-6
-_REACH = 4.7  # normal scores covered: 3e-6 lies outside
 _WHERE_SLOPE_COUNTS = 3.5  # normal scores within which the slope sets the spacing
 _COUNTS = np.array([8, 10, 12, 14, 16, 20, 24, 28, 32, 40, 48, 56, 64, 80, 96, 128, 160, 192, 256, 320, 384, 512])
 _VALUES = 2**17  # star-node pairs treated together: bounds memory, changes no bit
 # The bound on what the expansion leaves out exceeds the error 16 times or more (normal errors of 5 to 10 %, against
 # nodes for every input): above the first an input gets nodes of its own (errors of the mass up to 5.5 %, and beyond),
-# above the second the star is refused.
+# above the second the first term left out decides whether the star is refused.
 _GUARD = (3e-4, 1.6e-3)
 _SMALL = 0.055
 _WORST = 1.6e-3
-_BOUND_OVER_ERROR = 16.0
+_HOPELESS = 0.3  # a bound above which a look at that term is not worth it
+_LEFT_OUT = (1.5e-5, 8e-5)  # of the cumulative
 _CURVED_ABOVE = np.log(6.0)  # ln M: below, the curvature of ln f moves the cumulative by less than 1e-5
-_STEP = 0.05  # in ln w, ln R and ln mu, for derivatives of the share; the share is smooth on this scale
-_ON_A_SIDE = 0.8  # Gauss-Legendre nodes on a side of a kink, for each of a trapezoid over both
-_HALF, _HALF_WEIGHT = np.polynomial.legendre.leggauss(40)
-_HALF_REACH = 6.0  # half-normal scales covered: 2e-9 lies outside
 
 
 def calibrated_refusal(problem: Problem) -> np.ndarray:
@@ -55,9 +49,20 @@ def calibrated_refusal(problem: Problem) -> np.ndarray:
     refusal = np.where(other.any(axis=1) & ((of_mass != 0.0).sum(axis=1) > 1), 1, 0)
     left = np.flatnonzero(refusal == 0)
     if left.size and not problem.log_normal.all():
-        _, error = _own_nodes(problem.take(left))
-        refusal[left] = np.where((error > _WORST).any(axis=1), 2, 0)
+        bound = _own_nodes(problem.take(left))[1].max(axis=1)
+        unsure = np.flatnonzero((bound > _WORST) & (bound < _HOPELESS))
+        refusal[left[bound >= _HOPELESS]] = 2
+        if unsure.size:  # the bound exceeds the error by far: the first term left out decides
+            here = problem.take(left[unsure])
+            error = CalibratedAnswer(here).first_left_out()
+            refusal[left[unsure]] = np.where(error > np.where(_small(here), *_LEFT_OUT), 2, 0)
     return refusal
+
+
+def _small(problem: Problem) -> np.ndarray:
+    """Whether the error of the mass is small, (star,)."""
+    of_mass = problem.latent_input_weights[:, problem.latent("mass")]
+    return np.sqrt(problem.variance_of(np.broadcast_to(of_mass, (len(problem), len(problem.inputs))))) <= _SMALL
 
 
 def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
@@ -84,9 +89,7 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     single = expansion_error(np.abs(each))
     worst = np.argmax(single, axis=2)
     rest = np.where(np.arange(len(problem.inputs)) == worst[:, :, None], 0.0, each)
-    of_mass = problem.latent_input_weights[:, problem.latent("mass")]
-    small = np.sqrt(problem.variance_of(np.broadcast_to(of_mass, (len(problem), len(problem.inputs))))) <= _SMALL
-    needs = whole > np.where(small, *_GUARD)[:, None]
+    needs = whole > np.where(_small(problem), *_GUARD)[:, None]
     left = expansion_error(np.abs(rest).sum(axis=-1))
     return np.where(needs, worst, -1), np.where(needs, left, whole)
 
@@ -131,14 +134,23 @@ class CalibratedAnswer:
     @cached_property
     def numerical_error(self) -> np.ndarray:
         """Estimated error of the cumulative, (star, output): against half as many nodes, and of the expansion."""
-        p = np.array(REPORTED)
-        error = _own_nodes(self.problem)[1] / _BOUND_OVER_ERROR
-        quantiles = self.quantile(p)
+        p, quantiles = np.array(REPORTED), self.quantile(np.array(REPORTED))
+        error = np.full((len(self.problem), len(self.problem.outputs)), 1e-6)
+        for rows, output, kernels in self._kernels():
+            error[rows, output] += np.abs(kernels.left_out(quantiles[rows, output])).max(axis=1)
         for rows, output, kernels in self._kernels(coarser=2):
             below, _ = kernels.evaluate(quantiles[rows, output])
             # the error of a spectral rule falls with the square of the number of nodes in the exponent
-            error[rows, output] += np.abs(below - p).max(axis=1) ** 2 + 1e-7
+            error[rows, output] += np.abs(below - p).max(axis=1) ** 2
         return error
+
+    def first_left_out(self) -> np.ndarray:
+        """Largest of the first term the expansions leave out, at the reported quantiles of all outputs, (star,)."""
+        found = np.zeros(len(self.problem))
+        for rows, _, kernels in self._kernels():
+            term = np.abs(kernels.left_out(kernels.quantile(np.array(REPORTED)))).max(axis=1)
+            found[rows] = np.maximum(found[rows], term)
+        return found
 
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """ln Y at cumulative probabilities p (m,): (star, output, m)."""
@@ -182,13 +194,13 @@ def _sorted(problem: Problem, own: np.ndarray, coarser: int):
     first, second = _plan(problem, carried, own)
     sorts = [first, second, own + 1, relation.widening > 0.0, carried.through + 1, relation.convective > 0.0]
     sorts += [relation.convective < 1.0, _curved(problem)]
-    sorts += [~np.isnan(_kinks(problem, named)) for named in (carried.through, own)]
+    sorts += [~np.isnan(kinks(problem, named)) for named in (carried.through, own)]
     for rows, sort in _alike(sorts):
         counts = (int(sort[0]), int(sort[1]))
-        size = max(1, _VALUES // (counts[0] * counts[1] * (len(_HALF) if sort[3] else 1)))
+        size = max(1, _VALUES // (counts[0] * counts[1] * (GAIN_NODES if sort[3] else 1)))
         for start in range(0, len(rows), size):
             some = rows[start : start + size]
-            work = _Nodes(problem.take(some), carried.take(some), counts, int(sort[2]) - 1, bool(sort[7]), coarser)
+            work = Nodes(problem.take(some), carried.take(some), counts, int(sort[2]) - 1, bool(sort[7]), coarser)
             for output in range(len(problem.outputs)):
                 yield some, output, work.kernels(output)
 
@@ -247,147 +259,5 @@ def _plan(problem: Problem, carried: Carried, own: np.ndarray) -> tuple[np.ndarr
 
 
 def _count(ratio: np.ndarray) -> np.ndarray:
-    wanted = 2.0 * _REACH / _SPACING * np.hypot(1.0, ratio)
+    wanted = 2.0 * REACH / _SPACING * np.hypot(1.0, ratio)
     return _COUNTS[np.minimum(np.searchsorted(_COUNTS, wanted), len(_COUNTS) - 1)]
-
-
-@lru_cache(maxsize=64)
-def _legendre(count: int) -> tuple[np.ndarray, np.ndarray]:
-    return np.polynomial.legendre.leggauss(count)
-
-
-def _rule(count: int, coarser: int, kink: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
-    """Scores and weights, (1, node) or (star, node): one node for what does not vary.
-
-    A trapezoid; where a distribution has a kink (at a score, (star,)), Gauss-Legendre on either side of it.
-    """
-    if count == 1:
-        return np.zeros((1, 1)), np.ones((1, 1))
-    if kink is None:
-        score = np.linspace(-_REACH, _REACH, count // coarser)[None, :]
-        weight = np.exp(-0.5 * score**2)
-    else:
-        node, share = _legendre(int(_ON_A_SIDE * count) // coarser)
-        sides = [(-_REACH, kink[:, None]), (kink[:, None], _REACH)]
-        score = np.concatenate([0.5 * (a + b) + 0.5 * (b - a) * node for a, b in sides], axis=1)
-        weight = np.concatenate([0.5 * (b - a) * share for a, b in sides], axis=1) * np.exp(-0.5 * score**2)
-    return score, weight / weight.sum(axis=1, keepdims=True)
-
-
-def _kinks(problem: Problem, through: np.ndarray) -> np.ndarray:
-    """Score of the kink of the input that each star names, (star,); NaN where its distribution is smooth."""
-    kink = np.full(len(problem), np.nan)
-    for j in np.unique(through[through >= 0]):
-        measured = problem.measured[j]
-        rows = np.flatnonzero((through == j) & (measured.shape == Shape.SPLIT_NORMAL))
-        kink[rows] = ndtri(measured.lower[rows] / (measured.lower[rows] + measured.upper[rows]))
-    return kink
-
-
-class _Nodes:
-    """The nodes of stars of one sort, shared by their outputs."""
-
-    def __init__(self, problem: Problem, carried: Carried, counts, own: int, curved: bool, coarser: int):
-        self.problem, self.carried, self.curved, self.own = problem, carried, curved, own
-        relation = problem.interior.relation
-        kinks = [_kinks(problem, named) for named in (carried.through, np.full(len(problem), own))]
-        kinks = [None if np.isnan(kink).any() else kink for kink in kinks]
-        score, weight = _rule(counts[0], coarser, kinks[0])
-        second, second_weight = _rule(counts[1], coarser, kinks[1])
-        log_mass, shift = along(problem, carried, score)
-        height, slope = relation.line(log_mass)
-        repeat = second.shape[1]
-        # the node axis: score of the mass, then score of the input with nodes of its own
-        self.log_mass, self.height, self.slope = (np.repeat(v, repeat, axis=1) for v in (log_mass, height, slope))
-        both = (weight[:, :, None] * second_weight[:, None, :]).reshape(max(len(weight), len(second_weight)), -1)
-        self.weight = np.broadcast_to(both, self.log_mass.shape)
-        self.mean = carried.mean[:, :, None] + np.repeat(shift, repeat, axis=2)
-        self.covariance = carried.covariance
-        self.cumulants = input_cumulants(problem)
-        free = (np.arange(len(problem.inputs)) != carried.through[:, None]) & (np.arange(len(problem.inputs)) != own)
-        self.cumulants = np.where(free[None], self.cumulants, 0.0)
-        if own >= 0:
-            measured = problem.measured[own]
-            moved = measured.log_quantile(second) - measured.log_mean[:, None]
-            moved = np.tile(moved, (1, score.shape[1]))
-            self.mean = self.mean + carried.forms[:, :, own, None] * moved[:, None, :]
-            form = carried.forms[:, :, own]
-            variance = problem.log_sd[:, own] ** 2
-            self.covariance = self.covariance - variance[:, None, None] * form[:, :, None] * form[:, None, :]
-        self.gain, self.gain_weight = None, None
-        if (relation.widening > 0.0).any():
-            x = 0.5 * _HALF_REACH * (_HALF + 1.0)
-            share = np.exp(-0.5 * x**2) * _HALF_WEIGHT
-            self.gain, self.gain_weight = relation.widening[:, None] * x, share / share.sum()
-
-    def kernels(self, output: int) -> Kernels:
-        """Kernels of one output."""
-        relation = self.problem.interior.relation
-        share = relation.convective[:, None]
-        parts = []
-        if (relation.convective < 1.0).any():
-            weight, gain = self.weight, 0.0
-            nodes = [self.log_mass, self.height, self.slope, self.mean]
-            if self.gain is not None:
-                more = self.gain.shape[1]
-                nodes = [np.repeat(v, more, axis=-1) for v in nodes]
-                weight = (weight[:, :, None] * self.gain_weight).reshape(len(weight), -1)
-                gain = np.tile(self.gain, (1, self.log_mass.shape[1]))
-            part = self._part(output, *nodes, relation.scatter[:, None], gain)
-            parts.append(((1.0 - share) * weight, *part))
-        if (relation.convective > 0.0).any():
-            height = np.broadcast_to(relation.log_convective[:, None], self.log_mass.shape)
-            part = self._part(output, self.log_mass, height, 0.0 * height, self.mean, relation.convective_sd, 0.0)
-            parts.append((share * self.weight, *part))
-        if len(parts) == 1:
-            return Kernels.of(*parts[0])
-        weight, mean, sd = (np.concatenate([part[k] for part in parts], axis=1) for k in range(3))
-        cumulants = None if parts[0][3] is None else np.concatenate([part[3] for part in parts], axis=2)
-        return Kernels.of(weight, mean, sd, cumulants)
-
-    def _part(self, output, log_mass, height, slope, means, scatter, gain):
-        """Mean, standard deviation and cumulants of the kernels of one component."""
-        problem, radius = self.problem, len(self.problem.outputs)
-        kind = Kind(int(problem.kinds[output]))
-        one, r, m = output, radius, radius + 1
-        cov = self.covariance[..., None, None]
-        v = {pair: cov[:, pair[0], pair[1], :, 0] for pair in ((one, one), (one, r), (one, m), (r, r), (r, m), (m, m))}
-        mean = means[:, one]
-        q = height + slope * means[:, r] + gain
-        g, gq, gqq, gr, gm = self._share(kind, q, log_mass, means[:, r], means[:, m])
-        on_radius = (1.0 + gq) * slope + gr
-        own = ((1.0 + gq) * scatter) ** 2
-        variance = v[one, one] + 2.0 * on_radius * v[one, r] + on_radius**2 * v[r, r] + own
-        variance = variance + 2.0 * gm * (v[one, m] + on_radius * v[r, m]) + gm**2 * v[m, m]
-        sd = np.sqrt(variance)
-        mean = mean + q + g + 0.5 * gqq * (slope**2 * v[r, r] + scatter**2)
-        if not self.curved:
-            return mean, sd, None
-        shared = slope * (v[one, r] + on_radius * v[r, r] + gm * v[r, m]) + (1.0 + gq) * scatter**2
-        cumulants = [3.0 * gqq * shared**2 + 0.0 * sd, 0.0 * sd, 0.0 * sd]
-        forms = self.carried.forms
-        for j in np.flatnonzero((self.cumulants[0] != 0.0).any(axis=0)):
-            weight = forms[:, one, j, None] + on_radius * forms[:, r, j, None] + gm * forms[:, m, j, None]
-            power = weight * weight
-            for k in range(3):
-                power = power * weight
-                cumulants[k] = cumulants[k] + power * self.cumulants[k][:, j, None]
-        return mean, sd, np.stack(cumulants)
-
-    def _share(self, kind: Kind, q, log_mass, log_radius, log_molecular):
-        """ln f with its derivatives in q (two), ln R and ln mu."""
-        if kind == Kind.COEFFICIENT or self.problem.binding.constant:
-            return 0.0, 0.0, 0.0, 0.0, 0.0
-
-        def at(dq=0.0, dr=0.0, dm=0.0):
-            here = (q + dq, log_mass, log_radius + dr, log_molecular + dm)
-            return self.problem.binding.log_share(kind, *here)
-
-        centre, up, down = at(), at(dq=_STEP), at(dq=-_STEP)
-        slope_radius = 0.0
-        if self.problem.binding.ionisation is not None:
-            slope_radius = (at(dr=_STEP) - at(dr=-_STEP)) / (2.0 * _STEP)
-        slope_molecular = 0.0
-        if self.covariance[:, -1, -1].any():
-            slope_molecular = (at(dm=_STEP) - at(dm=-_STEP)) / (2.0 * _STEP)
-        return centre, (up - down) / (2.0 * _STEP), (up - 2.0 * centre + down) / _STEP**2, slope_radius, slope_molecular

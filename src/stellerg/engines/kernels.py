@@ -54,16 +54,19 @@ class Kernels:
         Weights sum to one over the kernels; sd is positive.
     series : tuple of ndarray, (star, kernel) each
         Coefficients over powers of x of the bracket of the expansion; empty where all inputs are normal.
+    following : tuple of (int, ndarray)
+        Order k and coefficient of He_k in the next order of the expansion.
     """
 
     weight: np.ndarray
     mean: np.ndarray
     sd: np.ndarray
     series: tuple[np.ndarray, ...] = ()
+    following: tuple[tuple[int, np.ndarray], ...] = ()
 
     @classmethod
     def of(cls, weight, mean, sd, cumulants: np.ndarray | None) -> "Kernels":
-        """Make kernels; `cumulants` 3 to 5, (3, star, kernel), or None."""
+        """Make kernels; `cumulants` 3 to 6, (4, star, kernel), or None."""
         if cumulants is None:
             return cls(weight, mean, sd)
         inverse = 1.0 / sd
@@ -87,11 +90,30 @@ class Kernels:
             0.0 * he8,
             he8,
         )
-        return cls(weight, mean, sd, series)
+        six = cumulants[3] * (cube * cube)
+        following = (
+            (5, six / 720.0),
+            (7, four * four / 1152.0 + three * five / 720.0),
+            (9, square * four / 1728.0),
+            (11, square * square / 31104.0),
+        )
+        return cls(weight, mean, sd, series, following)
 
     def take(self, rows) -> "Kernels":
         """Return some of the stars."""
-        return Kernels(self.weight[rows], self.mean[rows], self.sd[rows], tuple(c[rows] for c in self.series))
+        series = tuple(c[rows] for c in self.series)
+        following = tuple((order, c[rows]) for order, c in self.following)
+        return Kernels(self.weight[rows], self.mean[rows], self.sd[rows], series, following)
+
+    def left_out(self, t: np.ndarray) -> np.ndarray:
+        """What the next order of the expansion would add to the cumulative at t, (star, m)."""
+        out = np.zeros(t.shape)
+        for m in range(t.shape[1]) if self.following else ():
+            x = (t[:, m, None] - self.mean) / self.sd
+            bell = self.weight * np.exp(-0.5 * x * x) / _ROOT_2PI
+            for order, size in self.following:
+                out[:, m] -= (bell * size * hermite_e.hermeval(x, [0.0] * order + [1.0])).sum(axis=-1)
+        return out
 
     @property
     def moments(self) -> tuple[np.ndarray, np.ndarray]:

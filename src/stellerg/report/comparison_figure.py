@@ -111,6 +111,9 @@ def _kind(answer: PriorAnswer) -> str:
 
 def _panel(axis, comparison: Comparison, output: str, places: np.ndarray) -> None:
     rows = [(a, place, a.document["outputs"][output]) for a, place in zip(comparison.given, places, strict=True)]
+    for _, place, values in rows:
+        if values is None:
+            axis.text(0.01, place, "not given", transform=axis.get_yaxis_transform(), va="center", color=_FAINT)
     rows = [row for row in rows if row[2] is not None]
     power = comparison.power(output)
     scale = 10.0**power
@@ -156,6 +159,8 @@ def _density(axis, answer: PriorAnswer, output: str, place: float, span: tuple[f
         return
     values = np.geomspace(*span, _POINTS)
     density = answer.posterior.density(values, output)[0]
+    if axis.get_xscale() == "log":  # per logarithm, so that areas are probabilities there too
+        density = density * values
     foot = place - 0.5 * _BAR - 0.03
     hill = foot - _HEIGHT * density / density.max()
     colours = _COLOURS[_kind(answer)]

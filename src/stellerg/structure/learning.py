@@ -28,7 +28,7 @@ from stellerg.measured import Measured
 from stellerg.structure.learning_likelihood import LEARNED_FROM, TOP, HyperPosterior, ObservedStructures
 from stellerg.wording import counted
 
-__all__ = ["ChainSettings", "LearnedPrior", "PredictiveCheck", "learn_prior"]
+__all__ = ["LEARNED_FROM", "ChainSettings", "LearnedPrior", "PredictiveCheck", "learn_prior"]
 
 _FEWEST = 5  # stars; judgement: with fewer the priors of the hyperparameters decide
 _JUMPS = 0.1  # share of steps by whole differences (ter Braak 2006: every tenth)

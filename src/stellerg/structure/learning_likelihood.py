@@ -11,6 +11,7 @@ import numpy as np
 from scipy.special import ndtr
 
 from stellerg.measured import Measured
+from stellerg.structure.observed import DISCREPANCY, INERTIA_SHARE
 from stellerg.structure.polytrope import gravitational_coefficient
 from stellerg.structure.relations import (
     LARGEST_TABULATED_INDEX,
@@ -18,21 +19,15 @@ from stellerg.structure.relations import (
     log10_moment_of_inertia_factor,
 )
 
-__all__ = ["INERTIA_SHARE", "LEARNED_FROM", "MISFIT_SD", "TOP", "HyperPosterior", "ObservedStructures"]
+__all__ = ["LEARNED_FROM", "TOP", "HyperPosterior", "ObservedStructures"]
 
 TOP = LARGEST_TABULATED_INDEX
-# The moment of inertia sees this part of the misfit of k2: the ratio over the stages of published interior models
-# (structure_from_observables.csv of the tests: slope 1.8), rounded.
-INERTIA_SHARE = 0.55
 # Each observable with its part of the misfit and its logarithm for a polytrope.
 LEARNED_FROM = {
     "log_k2": (1.0, lambda n: np.log(10.0) * log10_apsidal_constant(n)),
     "moment_of_inertia_factor": (INERTIA_SHARE, lambda n: np.log(10.0) * log10_moment_of_inertia_factor(n)),
     "structure_coefficient": (0.0, lambda n: np.log(gravitational_coefficient(n))),
 }
-# Standard deviation of d: the rms over the stages of published interior models (structure_from_observables.csv of the
-# tests), rounded.
-MISFIT_SD = 0.25
 # Half-Cauchy scale of the spread: judgement. Around 0.3, where main-sequence stars lie, it is level in ln spread, for
 # which the intervals of a normal sample's standard deviation have the right coverage.
 _SPREAD_SCALE = 0.3
@@ -322,7 +317,7 @@ class HyperPosterior:
         population, spread, misfit = self.population(coordinates)
         inside = (mean >= 0.0) & (mean < TOP) & (ln_spread > _LN_SPREAD[0]) & (ln_spread < _LN_SPREAD[1])
         prior = ln_spread - np.log1p((spread / _SPREAD_SCALE) ** 2)  # half-Cauchy, over ln spread
-        prior -= 0.5 * np.square(coordinates[:, self._first_misfit :] / MISFIT_SD).sum(axis=1)
+        prior -= 0.5 * np.square(coordinates[:, self._first_misfit :] / DISCREPANCY).sum(axis=1)
         if self.offset is not None:
             prior -= 0.5 * np.square(coordinates[:, 2] / _SLOPE_SD)
         return np.where(inside, prior + self.observed.log_marginal(population, spread, misfit).sum(axis=0), -np.inf)
@@ -336,7 +331,7 @@ class HyperPosterior:
         design = np.zeros((stars, size))
         design[:, 0] = 1.0
         design[seen, place] = -data.share[seen]
-        prior, shift = np.full(size, MISFIT_SD**-2), np.zeros(size)
+        prior, shift = np.full(size, DISCREPANCY**-2), np.zeros(size)
         prior[:2] = TOP**-2, 1.0  # weak; the spread is put in below
         if self.offset is not None:
             design[:, 2], prior[2] = self.offset, _SLOPE_SD**-2

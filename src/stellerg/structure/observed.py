@@ -19,10 +19,11 @@ from scipy.special import ndtr
 from stellerg.measured import Measured
 from stellerg.structure.relations import log10_apsidal_constant, log10_moment_of_inertia_factor
 
-__all__ = ["DISCREPANCY", "Observed", "direct_share"]
+__all__ = ["DISCREPANCY", "INERTIA_SHARE", "Observed", "direct_share"]
 
 DISCREPANCY = 0.25  # standard deviation of delta: derived from interior models, see above (judgement)
-_INERTIA = 0.55  # share of delta that the moment of inertia sees
+# The moment of inertia sees this part of the misfit of k2: the ratio over the stages of interior models, rounded
+INERTIA_SHARE = 0.55
 # slope, intercept and standard deviation of ln w = intercept + slope ln(observable), for M >= 1.9 Msun: fits to 41
 # interior models (rms 2.8 % and 1.6 %)
 _DIRECT = {"k2": (-0.3237, -1.0272, 0.028), "inertia": (-0.6436, -1.2909, 0.016)}
@@ -98,7 +99,7 @@ class Observed:
         if name == "structure_coefficient":
             return q + 0.0 * eps
         if name == "moment_of_inertia_factor":
-            return self._relation("inertia", log10_moment_of_inertia_factor, _INERTIA, q, eps)
+            return self._relation("inertia", log10_moment_of_inertia_factor, INERTIA_SHARE, q, eps)
         own = self._relation("k2", log10_apsidal_constant, 1.0, q, eps)
         if name == "log_k2" or companion is None:
             return own
