@@ -1,23 +1,28 @@
 """`stellerg star`: what is printed, every option, exit codes, every status, and one message for a wrong call."""
 
+import csv
 import json
 import math
 import os
 import re
 import subprocess
 import sys
+from dataclasses import fields
 from pathlib import Path
+from statistics import NormalDist
 
 import matplotlib.image
 import numpy as np
 import pytest
+from astropy import constants
+from astropy.constants import iau2015
 
 from command_line import assert_one_message, stellerg
 from stellerg import Stars, propagate
 from stellerg.cli.options import OBSERVABLE_OPTIONS
 from stellerg.energetics import DEFAULT_OUTPUTS, OUTPUTS, TIME_CONVENTIONS, Conventions
 from stellerg.engines import ENGINES
-from stellerg.observables import OBSERVABLES
+from stellerg.observables import COMPOSITION, MEASURABLE, OBSERVABLES, STRUCTURE_OBSERVABLES
 from stellerg.status import STATUS_TEXT, Status
 
 GIVEN = {"mass": "1.02 ± 0.03", "radius": "1.05(2)", "luminosity": "1.10 +0.12 -0.10"}
@@ -51,11 +56,13 @@ def median(document, name):
 
 # --- the JSON object ---
 NUMBER = (int, float)
+MAYBE = (*NUMBER, type(None))
 OUTPUT_TYPES = {
     "unit": str,
     "median": NUMBER,
     "interval68": list,
     "interval95": list,
+    "calibrated": MAYBE,
     "log10_mean": NUMBER,
     "log10_standard_deviation": NUMBER,
     "linear": dict,
@@ -72,7 +79,15 @@ TYPES = {
     "convention": dict,
     "outputs": dict,
     "structure": dict,
+    "radiation": dict,
+    "ionisation": dict,
     "consistency": (dict, type(None)),
+}
+STRUCTURE_TYPES = {
+    "coefficient": dict,
+    "n_effective": dict,
+    "fully_convective": MAYBE,
+    "predictive_probability": dict,
 }
 
 
@@ -98,12 +113,31 @@ def test_json_has_the_documented_keys_and_types():
         assert set(output["budget"]) == {*GIVEN, "correlations", "structure"}
         assert_interval(output["interval68"])
         assert_interval(output["interval95"])
-    assert list(document["structure"]) == ["coefficient", "n_effective"]
-    for values in document["structure"].values():
+    assert_types(document["structure"], STRUCTURE_TYPES)
+    for values in (document["structure"][name] for name in ("coefficient", "n_effective")):
         assert_types(values, {"median": NUMBER, "interval68": list, "interval95": list})
         assert_interval(values["interval68"])
+    assert document["structure"]["fully_convective"] is None
+    assert document["structure"]["predictive_probability"] == {}
+    for name in ("radiation", "ionisation"):
+        assert_types(document[name], {"share": NUMBER, "counted": bool})
+        assert document[name]["counted"] is False
     assert document["consistency"] is None
     assert [document["outputs"][name]["unit"] for name in BOTH] == ["erg", "Myr"]
+
+
+def test_medians_under_the_calibration_stand_beside_the_flag():
+    """Where the calibrated coefficient lies far out in the prior; nowhere else."""
+    document, calibrated = answer(*STAR), answer(*STAR, "--prior", "main-sequence")
+    assert document["flags"] == ["prior-excludes-calibration"]
+    for name in BOTH:
+        assert document["outputs"][name]["calibrated"] == median(calibrated, name)
+        assert median(document, name) != median(calibrated, name)
+    assert "Medians under the calibrated coefficient: binding energy" in stellerg("star", *STAR).words
+    for other in (calibrated, answer(*STAR, "--prior", "wide-index")):
+        assert other["flags"] == []
+        assert [other["outputs"][name]["calibrated"] for name in BOTH] == [None, None]
+    assert "Medians under" not in stellerg("star", *STAR, "--prior", "wide-index").words
 
 
 def test_consistency_of_an_over_determined_star():
@@ -195,9 +229,9 @@ def test_the_name_of_the_star_is_printed():
 
 # --- options ---
 def test_every_observable_is_an_option_in_the_order_of_the_table():
-    assert list(OBSERVABLE_OPTIONS) == list(OBSERVABLES)
+    assert list(OBSERVABLE_OPTIONS) == list(MEASURABLE)
     help_text = stellerg("star", "--help", columns=200).out
-    places = [re.search(rf"--{name.replace('_', '-')}\s", help_text) for name in OBSERVABLES]
+    places = [re.search(rf"--{name.replace('_', '-')}\s", help_text) for name in MEASURABLE]
     assert all(places)
     assert [place.start() for place in places] == sorted(place.start() for place in places)
 
@@ -218,8 +252,19 @@ QUOTED = {
     "bolometric_flux": "3.5e-10 ± 1e-11 W/m2",
     "absolute_bolometric_magnitude": "4.63 ± 0.05",
     "apparent_bolometric_magnitude": "4.63 ± 0.05",
+    "mean_molecular_weight": "0.61 ± 0.02",
+    "hydrogen_mass_fraction": "0.74 ± 0.02",
+    "metal_mass_fraction": "0.05 ± 0.01",
+    "log_k2": "-1.85 ± 0.03",
+    "mean_log_k2": "-1.85 ± 0.03",
+    "moment_of_inertia_factor": "0.08(1)",
+    "structure_coefficient": "1.40(5)",
     **GIVEN,
 }
+
+
+def test_every_observable_is_quoted_once():
+    assert set(QUOTED) == set(MEASURABLE)
 
 
 @pytest.mark.parametrize("name", OBSERVABLES)
@@ -229,8 +274,23 @@ def test_an_observable_given_as_an_option_reaches_the_star(name):
     document = answer(*options(given), "--use", ",".join(given), "--engine", "linear")
     posterior = propagate(Stars.of("star", **given), use=tuple(given), engine="linear")
     assert_agrees(document, posterior)
-    freedom = len(given) - 4
+    freedom = len(given) - (5 if name == "mean_molecular_weight" else 4)  # which nothing else determines
     assert (document["consistency"] or {"degrees_of_freedom": 0})["degrees_of_freedom"] == freedom
+
+
+@pytest.mark.parametrize("name", [*COMPOSITION, *STRUCTURE_OBSERVABLES])
+def test_what_is_measured_of_the_inside_reaches_the_star(name):
+    """Same bits as the API, and not those of the star without it: composition counts through radiation."""
+    weight = {"mean_log_k2_weight": 0.7} if name == "mean_log_k2" else {}
+    more = ["--pressure", "gas+radiation", "--prior", "wide-index"]
+    conventions = Conventions(pressure="gas+radiation")
+    document = answer(*STAR, *options({name: QUOTED[name], **{k: str(v) for k, v in weight.items()}}), *more)
+    stars = Stars.of("star", **GIVEN, **{name: QUOTED[name]}, **weight)
+    assert_agrees(document, propagate(stars, conventions=conventions, prior="wide-index"))
+    assert median(document, BOTH[0]) != median(answer(*STAR, *more), BOTH[0])
+    predicted = document["structure"]["predictive_probability"]
+    assert list(predicted) == ([name] if name in STRUCTURE_OBSERVABLES else [])
+    assert all(0.0 < probability <= 1.0 for probability in predicted.values())
 
 
 def test_correlation():
@@ -455,6 +515,149 @@ def test_options_of_the_nuclear_time_and_of_the_scaling_relations():
     assert math.isclose(energies[0] / energies[1], 4.0, rel_tol=1e-10)
 
 
+# --- what binds a star: radiation, ionisation, composition ---
+PUBLISHED = Path(__file__).parent / "published"
+
+
+def published(name):
+    lines = (PUBLISHED / name).read_text(encoding="utf-8").splitlines()
+    return list(csv.DictReader(line for line in lines if not line.startswith("#")))
+
+
+@pytest.mark.parametrize("row", published("eddington_quartic.csv"), ids=lambda row: f"mu2M={row['M_mu2']}")
+def test_pressure(row):
+    """Of the standard model, n = 3, gas carries the published share of the pressure: |E| = beta |Omega|/2."""
+    star = {"mass": f"{row['M_mu2']} exact", "radius": "3 exact", "luminosity": "1 exact"}
+    arguments = [*options({**star, "mean_molecular_weight": "1 exact"}), *POINT]
+    gas, both = answer(*arguments, "--pressure", "gas"), answer(*arguments, "--pressure", "gas+radiation")
+    assert answer(*arguments) == gas  # the default
+    share = pytest.approx(float(row["one_minus_beta"]), rel=3e-6, abs=2e-8)  # six digits are printed
+    assert 1.0 - median(both, BOTH[0]) / median(gas, BOTH[0]) == share
+    assert 1.0 - median(both, BOTH[1]) / median(gas, BOTH[1]) == share
+    for document, counted in ((gas, False), (both, True)):
+        assert document["radiation"] == {"share": share, "counted": counted}
+        assert ("radiation-neglected" in document["flags"]) == (float(row["one_minus_beta"]) > 0.03 and not counted)
+    assert both["convention"]["energy"] == "abs(E) = beta abs(Omega)/2 (monatomic ideal gas and radiation)"
+    words = f"Radiation carries {100.0 * float(row['one_minus_beta']):.2g} % of the pressure"
+    assert f"{words} (counted)" in stellerg("star", *arguments, "--pressure", "gas+radiation").words
+    assert f"{words} (not counted)" in stellerg("star", *arguments).words
+
+
+def test_the_calibrated_prior_always_counts_radiation():
+    calibrated = [*STAR, "--prior", "main-sequence"]
+    assert answer(*calibrated) == answer(*calibrated, "--pressure", "gas+radiation")
+    assert answer(*calibrated)["radiation"]["counted"] is True
+
+
+def test_ionisation():
+    """e M is taken from |E|: e of X = 0.70, Y = 0.28 as published, in J/kg."""
+    text = {row["quantity"]: float(row["value"]) for row in published("ionisation.csv")}["mixture_X0.70_Y0.28_no_H2"]
+    mass = (iau2015.GM_sun / constants.G).to_value("kg")
+    plain, ionised = (answer(*EXACT, *POINT, "--energy-unit", "J", *more) for more in ([], ["--ionisation"]))
+    energy = text * mass
+    # published to seven digits; the binding energy is 70 times larger, and a median good to 1e-9
+    assert median(plain, BOTH[0]) - median(ionised, BOTH[0]) == pytest.approx(energy, rel=1e-6)
+    for document, counted in ((plain, False), (ionised, True)):
+        assert document["ionisation"] == {"share": pytest.approx(energy / median(plain, BOTH[0])), "counted": counted}
+    by_energy, by_time = (median(ionised, name) / median(plain, name) for name in BOTH)
+    assert math.isclose(by_energy, by_time, rel_tol=1e-9)
+    assert ionised["convention"]["energy"] == (
+        "abs(E) = abs(Omega)/2 - e M (monatomic ideal gas, less the energy of ionisation)"
+    )
+    sentence = "The energy of ionisation is 1 % of the binding energy"
+    assert f"{sentence} (counted)" in stellerg("star", *EXACT, *POINT, "--ionisation").words
+    assert f"{sentence} (not counted)" in stellerg("star", *EXACT, *POINT).words
+
+
+HEAVY = [*options({"mass": "20 exact", "radius": "6 exact", "luminosity": "40000 exact"}), *POINT]
+MIXTURES = {
+    # X and Z that are given, those that count
+    "both": ({"hydrogen_mass_fraction": "0.6", "metal_mass_fraction": "0.04"}, 0.6, 0.04),
+    "hydrogen alone": ({"hydrogen_mass_fraction": "0.35"}, 0.35, 0.02),
+    "metals alone": ({"metal_mass_fraction": "0.001"}, 0.70, 0.001),
+}
+
+
+@pytest.mark.parametrize("case", MIXTURES)
+def test_mass_fractions_give_the_mean_molecular_weight(case):
+    """1/mu = 2 X + 3 Y/4 + Z/2 with Y = 1 - X - Z; without radiation it counts for nothing."""
+    given, x, z = MIXTURES[case]
+    mu = 1.0 / (2.0 * x + 0.75 * (1.0 - x - z) + 0.5 * z)
+    fractions = options({name: f"{value} exact" for name, value in given.items()})
+    weight = options({"mean_molecular_weight": f"{mu!r} exact"})
+    radiation = ["--pressure", "gas+radiation"]
+    found, expected, usual = (answer(*HEAVY, *more, *radiation) for more in (fractions, weight, []))
+    for name in BOTH:
+        assert math.isclose(median(found, name), median(expected, name), rel_tol=ROUNDING)
+        assert abs(median(found, name) / median(usual, name) - 1.0) > 1e-3
+    assert math.isclose(found["radiation"]["share"], expected["radiation"]["share"], rel_tol=1e-9)
+    assert answer(*HEAVY, *fractions)["outputs"] == answer(*HEAVY)["outputs"]
+    (line,) = re.findall(r"^mean molecular weight .*$", stellerg("star", *HEAVY, *fractions, "--explain").out, re.M)
+    assert line.split()[3:5] == [f"{mu:g}", "none"]
+
+
+def test_errors_of_mass_fractions_give_that_of_the_mean_molecular_weight():
+    """To first order mu^2 times that of 1/mu = 0.75 + 1.25 X - 0.25 Z."""
+    mu = 1.0 / (0.75 + 1.25 * 0.7 - 0.25 * 0.02)
+    error = mu**2 * math.hypot(1.25 * 0.03, 0.25 * 0.004)
+    radiation = ["--pressure", "gas+radiation"]
+    fractions = options({"hydrogen_mass_fraction": "0.70 ± 0.03", "metal_mass_fraction": "0.020 ± 0.004"})
+    weight = options({"mean_molecular_weight": f"{mu!r} ± {error!r}"})
+    found, expected = (answer(*HEAVY, *more, *radiation)["outputs"][BOTH[0]] for more in (fractions, weight))
+    for key in ("median", "log10_standard_deviation"):
+        assert math.isclose(found[key], expected[key], rel_tol=1e-6)
+    assert found["budget"]["mean_molecular_weight"] == pytest.approx(1.0, abs=1e-6)
+
+
+def test_a_mean_molecular_weight_that_is_given_stands_above_mass_fractions():
+    radiation = ["--pressure", "gas+radiation"]
+    weight = options({"mean_molecular_weight": "0.8 exact"})
+    both = [*weight, *options({"hydrogen_mass_fraction": "0.7 exact"})]
+    assert answer(*HEAVY, *both, *radiation) == answer(*HEAVY, *weight, *radiation)
+
+
+@pytest.mark.parametrize("size", [None, 0.1, 0.4])
+def test_discrepancy(size):
+    """Under a flat prior an exact k2 leaves the misfit alone: n is normal about that of k2, with this deviation."""
+    row = next(row for row in published("polytropes.csv") if row["n"] == "2.5")
+    k2 = options({"mass": "1 exact", "radius": "1 exact", "log_k2": f"{math.log10(float(row['k2']))!r} ± 0.0001"})
+    more = [] if size is None else ["--discrepancy", size]
+    document = answer(*k2, *more, "--outputs", BOTH[0], "--prior", "wide-index")
+    width = size or 0.25
+    # wide-index ends at 1.5 and 4, so that the normal distribution is cut at both ends
+    normal = NormalDist(2.5, width)
+    low, high = normal.cdf(1.5), normal.cdf(4.0)
+    for key, probability in INTERVALS.items():
+        ends = [low + (high - low) * 0.5 * (1.0 + sign * probability) for sign in (-1.0, 1.0)]
+        expected = [normal.inv_cdf(end) for end in ends]
+        assert document["structure"]["n_effective"][key] == pytest.approx(expected, abs=0.01 * width)
+
+
+def test_no_discrepancy_is_sharp():
+    row = next(row for row in published("polytropes.csv") if row["n"] == "2.5")
+    k2 = options({"mass": "1 exact", "radius": "1 exact", "log_k2": f"{math.log10(float(row['k2']))!r} ± 0.0001"})
+    document = answer(*k2, "--discrepancy", 0, "--outputs", BOTH[0])
+    assert document["structure"]["n_effective"]["interval95"] == pytest.approx([2.5, 2.5], abs=2e-3)
+
+
+def test_the_weight_in_the_mean_k2_of_a_system():
+    """The star alone is the system at weight 1; the less of it there is in the mean, the less that says of it."""
+    widths = []
+    alone = answer(*STAR, *options({"log_k2": "-1.85 ± 0.02"}), "--discrepancy", 0)
+    for weight in (1, 0.9, 0.5, 0.01):
+        document = answer(
+            *STAR, *options({"mean_log_k2": "-1.85 ± 0.02"}), "--mean-log-k2-weight", weight, "--discrepancy", 0
+        )
+        low, high = document["structure"]["n_effective"]["interval68"]
+        widths.append(high - low)
+        if weight == 1:
+            assert document["outputs"] == alone["outputs"]
+    assert widths == sorted(widths)
+    unmeasured = answer(*STAR)["structure"]["n_effective"]["interval68"]
+    assert widths[-1] == pytest.approx(unmeasured[1] - unmeasured[0], rel=0.02)
+    assert widths[0] < 0.2 * widths[-1]
+
+
 # --- figures ---
 def test_plot_png(tmp_path):
     path = tmp_path / "star.png"
@@ -560,6 +763,29 @@ WRONG = {
     "use of a quantity not given": ([*STAR, "--use", "mass,distance"], ["distance was not given"]),
     "use of no quantity": ([*STAR, "--use", "colour"], ["'colour'"]),
     "nuclear efficiency": ([*STAR, "--nuclear-efficiency", "2"], ["nuclear_efficiency", "2"]),
+    "unknown pressure": ([*STAR, "--pressure", "plasma"], ["pressure", "'plasma'", "gas, gas+radiation"]),
+    "no pressure": ([*STAR, "--pressure"], ["--pressure"]),
+    "ionisation takes no value": ([*STAR, "--ionisation=yes"], ["--ionisation"]),
+    "negative discrepancy": ([*STAR, "--discrepancy", "-1"], ["discrepancy", "not negative", "-1"]),
+    "discrepancy without end": ([*STAR, "--discrepancy", "inf"], ["discrepancy", "must be a number", "inf"]),
+    "discrepancy no number": ([*STAR, "--discrepancy", "some"], ["--discrepancy", "'some'"]),
+    "mean k2 without its weight": (
+        [*STAR, "--mean-log-k2", "-1.85(3)"],
+        ["mean_log_k2", "weight", "missing", "(0, 1]", "log_k2"],
+    ),
+    "weight above one": (
+        [*STAR, "--mean-log-k2", "-1.85(3)", "--mean-log-k2-weight", "1.5"],
+        ["mean_log_k2_weight", "(0, 1]", "1.5"],
+    ),
+    "weight of nothing": (
+        [*STAR, "--mean-log-k2", "-1.85(3)", "--mean-log-k2-weight", "0"],
+        ["mean_log_k2_weight", "(0, 1]", "got 0"],
+    ),
+    "weight no number": (
+        [*STAR, "--mean-log-k2", "-1.85(3)", "--mean-log-k2-weight", "half"],
+        ["--mean-log-k2-weight", "'half'"],
+    ),
+    "use of the inside": ([*STAR, "--log-k2", "-1.85(3)", "--use", "mass,radius,log_k2"], ["'log_k2'"]),
     "solar reference": ([*STAR, "--solar-large-frequency-separation", "0"], ["must be positive", "0"]),
     "no measurement": (["--json"], ["no measurement", "mass"]),
     "only empty measurements": (["--name", "K-7"], ["no measurement", "mass"]),
@@ -663,7 +889,15 @@ STATUSES = {
         ([*with_(mass="2.0(1)"), "--prior", "present-sun"], 3, ["0.98 to 1.02 solar masses", "another prior"])
     ],
     "evolved-or-contracting": [([*STAR, "--evolutionary-state", "evolved"], 3, ["evolved"])],
-    "not-bound": [([*STAR, "--adiabatic-index", "4/3"], 3, ["4/3", "ask for potential_energy"])],
+    "not-bound": [
+        ([*STAR, "--adiabatic-index", "4/3"], 3, ["4/3", "ask for potential_energy"]),
+        # G M^2/R at 1000 solar radii is a fiftieth of what ionises a solar mass
+        (
+            [*with_(radius="1000 ± 10"), "--ionisation", "--evolutionary-state", "pre-main-sequence"],
+            3,
+            ["energy of ionisation", "leave ionisation out"],
+        ),
+    ],
     "engine-refused": [([*STAR, "--correlation", "mass,radius=0.5", "--engine", "quadrature"], 3, ["use montecarlo"])],
 }
 # shape-invalid needs a shape for one quantity: a column of a catalogue. doubtful belongs to the calibrated
@@ -695,7 +929,8 @@ def test_status_and_exit_code(word, case):
 def test_a_star_that_cannot_be_done_has_nulls():
     document = answer("--mass", "1.0(1)", code=3)
     assert document["outputs"] == dict.fromkeys(BOTH)
-    assert document["structure"] == {"coefficient": None, "n_effective": None}
+    assert document["structure"] == {**dict.fromkeys(STRUCTURE_TYPES), "predictive_probability": {}}
+    assert document["radiation"] == document["ionisation"] == {"share": None, "counted": False}
     assert document["engine"] is None
     assert document["engine_reason"] is None
     assert document["convention"]["energy"].startswith("abs(E) = abs(Omega)/2")
@@ -745,6 +980,9 @@ def test_conventions_of_the_api_are_the_options():
     """Every field of the conventions has an option that reaches it."""
     arguments = ["--time-convention", "potential", "--adiabatic-index", "1.6", "--energy-unit", "J"]
     arguments += ["--nuclear-mass-fraction", "0.2", "--nuclear-efficiency", "0.006"]
-    conventions = Conventions("potential", 1.6, "J", 0.2, 0.006)
+    arguments += ["--pressure", "gas+radiation", "--ionisation"]
+    values = ("potential", 1.6, "J", 0.2, 0.006, "gas+radiation", True)
+    assert len(values) == len(fields(Conventions))
+    conventions = Conventions(*values)
     document = answer(*STAR, *arguments, "--outputs", ",".join(OUTPUTS))
     assert_agrees(document, propagate(Stars.of("star", **GIVEN), outputs=tuple(OUTPUTS), conventions=conventions))

@@ -296,13 +296,12 @@ def uniform_coefficient(share_below, value):
     )
 
 
-SUN = reference("structure_nodes.csv", 1.0)
-AT_AGE_ZERO = exactly(1.0, SUN["radius_zams"])
+SUN = reference("structure_nodes.csv", 1.0)  # at age zero
 CALIBRATED = {"prior": "main-sequence"}
 
 
 def excluded(share_below):
-    return AT_AGE_ZERO, {"prior": uniform_coefficient(share_below, SUN["alpha_zams"])}
+    return exactly(1.0, SUN["radius_zams"]), {"prior": uniform_coefficient(share_below, SUN["alpha_zams"])}
 
 
 def inflated(factor):
@@ -390,15 +389,12 @@ def test_a_star_that_the_prior_was_learned_from_is_flagged(tmp_path):
     assert [flag_words(f) for f in posterior.flags] == [(), ("used-in-training",), (), ("used-in-training",)]
     medians = posterior.median("binding_energy")
     assert len(set(medians.tolist())) == 1  # a flag moves no number
-    untrained = path.with_name("plain.toml")
-    untrained.write_text(path.read_text(encoding="utf-8").partition("[training]")[0], encoding="utf-8")
+    untrained = parse_prior(TRAINED.partition("[training]")[0])
     assert propagate(stars, outputs=["binding_energy"], prior=untrained).flags.tolist() == [0] * 4
 
 
 def test_every_flag_has_a_word_and_a_sentence():
     assert set(FLAG_TEXT) == set(Flag) - {Flag.NONE}
-    assert {flag: text.word for flag, text in FLAG_TEXT.items()} == {
-        flag: flag.name.lower().replace("_", "-") for flag in FLAG_TEXT
-    }
+    assert all(text.word == flag.name.lower().replace("_", "-") for flag, text in FLAG_TEXT.items())
     assert all(text.sentence.endswith(".") for text in FLAG_TEXT.values())
     assert flag_words(sum(Flag)) == tuple(text.word for text in FLAG_TEXT.values())

@@ -285,7 +285,8 @@ class Posterior:
         for piece in self.pieces:
             drawn = self.sampler(piece.answer.problem, count, seed)
             u[piece.rows] = drawn.u
-            weight[piece.rows] = 0.0 if drawn.log_weight is None else drawn.log_weight
+            whole = drawn.whole_log_weight
+            weight[piece.rows] = 0.0 if whole is None else whole
             reference[piece.rows] = drawn.log_reference_density()
             for k, name in enumerate(piece.answer.problem.latents):
                 latents.setdefault(name, np.full(shape, np.nan))[piece.rows] = np.exp(drawn.log_latents[:, k])
