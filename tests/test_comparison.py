@@ -219,9 +219,6 @@ def test_an_output_that_one_prior_does_not_give(tmp_path):
     assert bars == [len(SPREAD) + len(LIMITS), 1 + len(SPREAD) + len(LIMITS)]
 
 
-@pytest.mark.xfail(
-    raises=IndexError, strict=True, reason="first order of a calibration that gives a star only what has no structure"
-)
 def test_an_evolved_star_keeps_what_has_no_structure():
     state = ["--evolutionary-state", "evolved", "--outputs", "binding_energy,free_fall_time"]
     found = documents(*STAR, *state)

@@ -123,6 +123,8 @@ def has_derivative(problem: Problem) -> np.ndarray:
     """Whether structure has a first order: it is no mixture, and does not change within the range of the mass."""
     if problem.interior.relation is not None:
         return problem.interior.relation.single
+    if not problem.structured.any():
+        return np.ones(len(problem), bool)
     interval = mass_score(problem).interval
     if problem.interior.cells:
         return interval >= 0

@@ -145,7 +145,8 @@ class Observed:
         companions : ndarray, (star, k), optional
             Equally probable values of ln w of the companion.
         """
-        if not (self.misfit.any() or self.size.any() or self.has_companion.any()):
+        sees_misfit = set(self.measured) != {"structure_coefficient"} and (self.misfit.any() or self.size.any())
+        if not (sees_misfit or self.has_companion.any()):
             return self.log_likelihood(q, 0.0)
         out = np.empty(q.shape)
         count = q.shape[1] * _SEARCH * (1 if companions is None else companions.shape[1])
