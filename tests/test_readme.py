@@ -2,6 +2,8 @@
 
 import re
 import shlex
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -49,3 +51,9 @@ def test_the_python_shown_runs(tmp_path, monkeypatch):
     exec(compile(code, "README.md", "exec"), names)  # the README's own lines, run as a reader would
     assert len(names["survey"]) == 24
     assert names["posterior"].median("binding_energy")[0] > 1e48
+
+
+def test_the_table_of_structure_is_what_the_example_prints():
+    (shown,) = re.findall(r"```console\n\$ python examples/structure.py\n(.*?)```", README, flags=re.DOTALL)
+    run = subprocess.run([sys.executable, "examples/structure.py"], cwd=ROOT, capture_output=True, text=True, check=True)
+    assert [line.rstrip() for line in run.stdout.strip().splitlines()] == shown.strip().splitlines()
