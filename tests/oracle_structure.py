@@ -490,10 +490,12 @@ class _Distribution:
         """Store the distribution of all terms but the last, as a piecewise polynomial."""
 
         def function(s, tolerance=0.2 * _TOLERANCE):
-            return (self._expect(s, tolerance) - self.unbound) / (1.0 - self.unbound)
+            return (self._expect(s, tolerance * (1.0 - self.unbound)) - self.unbound) / (1.0 - self.unbound)
 
         trial, offsets = np.linspace(-40.0, 40.0, 4001), 0.05 * 1.6 ** np.arange(15.0)
         at_medians = self._conditional(trial.reshape([-1] + [1] * len(self.edges)), *[np.zeros(1)] * len(self.edges))
+        if not at_medians.min() < 0.5 * at_medians.max():
+            raise ValueError("the star is not bound at the medians")
         middle = trial[np.searchsorted(at_medians.ravel(), 0.5 * at_medians.max())]
         low = middle - offsets[np.append(function(middle - offsets[:-1], 1e-5) < 1e-9, True).argmax()]
         high = middle + offsets[np.append(function(middle + offsets[:-1], 1e-5) > 1.0 - 1e-9, True).argmax()]
@@ -603,6 +605,8 @@ def medians(cumulatives, probability=0.5):
         for _ in range(3):
             trial = np.linspace(*ends, 17)
             i = int(np.searchsorted(cumulative(trial), probability))
+            if i == 0:
+                raise ValueError("more than this probability is unbound")
             ends = trial[i - 1 : i + 1]
         found.append(brentq(lambda t, f=cumulative: float(f(np.array([t]))[0]) - probability, *ends, xtol=1e-12))
     return np.array(found)

@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 
 import oracle_structure as oracle
+from cases import PROBABILITIES
 from stellerg import Conventions, Stars, load_prior
 from stellerg.assembly import assemble
 from stellerg.energetics import OUTPUTS as ALL_OUTPUTS
@@ -17,7 +18,6 @@ from structure_cases import GAS_AND_RADIATION, IONISED, OUTPUTS, forty, main_seq
 from test_mcmc import z_scores
 
 SEED = 20261209
-PROBABILITIES = np.array([0.5, 0.15865525, 0.84134475, 0.02275013, 0.97724987])
 EXPONENTS = {"binding_energy": (2.0, -1.0, 0.0), "kelvin_helmholtz_time": (2.0, -1.0, -1.0)}
 
 

@@ -30,6 +30,7 @@ _VALUES = 2**17  # star-node pairs treated together: bounds memory, changes no b
 # nodes for every input): above the first an input gets nodes of its own (errors of the mass up to 5.5 %, and beyond),
 # above the second the first term left out decides whether the star is refused.
 _GUARD = (3e-4, 1.6e-3)
+_SLOPE_VARIES = 0.1  # by how much d ln w/d ln R may differ within the errors of a star
 _SMALL = 0.055
 _WORST = 1.6e-3
 _HOPELESS = 0.3  # a bound above which a look at that term is not worth it
@@ -75,10 +76,10 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     scatter = np.minimum(problem.interior.relation.scatter, problem.interior.relation.convective_sd)
     sd = np.sqrt(np.maximum(beside, 0.0) + scatter[:, None] ** 2)
     free = (np.arange(len(problem.inputs)) != carried.through[:, None])[:, None, :]
-    # ln R enters with a slope between those with and without the coefficient's
     bare = carried.forms[:, :counts]
     radius = carried.forms[:, [counts]]
-    weights = np.maximum(np.abs(bare), np.abs(bare + radius)) * free
+    slope = problem.interior.relation.line(carried.log_mass[:, None])[1][:, :, None]
+    weights = (np.abs(bare + slope * radius) + _SLOPE_VARIES * np.abs(radius)) * free
     cumulants = input_cumulants(problem)
     powers = np.stack([weights**k for k in range(3, 7)])
     standard = sd ** np.arange(3, 7)[:, None, None]

@@ -13,6 +13,7 @@ from stellerg.structure.relation import Relation
 
 __all__ = ["Interior"]
 
+_AROUND = 1.2  # in ln w about the median of a calibrated star: beyond lies nothing for errors below 50 %
 _PREDICTIVE = 512  # equally probable structures over which a prediction is averaged
 
 
@@ -99,11 +100,29 @@ class Interior:
     def log_likelihood(self, q, log_mass, log_radius) -> np.ndarray:
         """Log likelihood of the structure observables at ln w, averaged over misfit and companion, (star, m)."""
         if self.relation is None:
-            which = None if len(self.intervals) == 1 else np.searchsorted(self.edges, log_mass, side="right")
-            found = [self.observed.marginal(q, self._companions_of(piece)) for piece in self.intervals]
+            found = [self._likelihood(self.observed, q, number) for number in range(len(self.intervals))]
+            which = None if len(found) == 1 else np.searchsorted(self.edges, log_mass, side="right")
             return found[0] if which is None else np.select([which == k for k in range(len(found))], found)
         centre = self.relation.centre(log_mass, log_radius)
-        return self._of_both(q, centre, lambda observed: observed.marginal(q, self._companions))
+        return self._of_both(q, centre, lambda observed: self._likelihood(observed, q, 0))
+
+    def _likelihood(self, observed: Observed, q: np.ndarray, number: int) -> np.ndarray:
+        """Log likelihood, from a table where each value is an average; `number` is an interval of mass."""
+        return self._tables[number].at(q) if observed is self.observed and observed.blunt else observed.marginal(q)
+
+    @cached_property
+    def _tables(self) -> "tuple[_Tabulated, ...]":
+        """Log likelihoods over all of ln w that matter, one for each interval of mass."""
+        if self.relation is None:
+            ends = [(piece.mixture.bracket, self._companions_of(piece)) for piece in self.intervals]
+            count = len(self.observed.misfit)
+            return tuple(
+                _Tabulated.of(self.observed, np.broadcast_to(np.array(bracket), (count, 2)), companions)
+                for bracket, companions in ends
+            )
+        middle = self.relation.centre(self.relation.log_mass[:, None], self.relation.log_radius[:, None])
+        around = np.concatenate([middle - _AROUND, middle + _AROUND], axis=1)
+        return (_Tabulated.of(self.observed, around, self._companions),)
 
     def _companions_of(self, piece: MassInterval) -> np.ndarray | None:
         """Equally probable ln w of companions under the density of an interval of mass, (star, k)."""

@@ -94,6 +94,12 @@ class Observed:
             return np.zeros(len(self.misfit), bool)
         return self.measured["mean_log_k2"].usable & (self.k2_weight < 1.0)
 
+    @property
+    def blunt(self) -> bool:
+        """Whether the likelihood is an average over misfits or companions: no sharper than these are wide."""
+        sees_misfit = set(self.measured) != {"structure_coefficient"} and bool(self.misfit.any() or self.size.any())
+        return sees_misfit or bool(self.has_companion.any())
+
     def predicted(self, name: str, q: np.ndarray, eps: np.ndarray, companion: np.ndarray | None = None) -> np.ndarray:
         """Natural logarithm of an observable at ln w = q, (star, m); `companion` is ln w of the companion."""
         if name == "structure_coefficient":
@@ -145,8 +151,7 @@ class Observed:
         companions : ndarray, (star, k), optional
             Equally probable values of ln w of the companion.
         """
-        sees_misfit = set(self.measured) != {"structure_coefficient"} and (self.misfit.any() or self.size.any())
-        if not (sees_misfit or self.has_companion.any()):
+        if not self.blunt:
             return self.log_likelihood(q, 0.0)
         out = np.empty(q.shape)
         count = q.shape[1] * _SEARCH * (1 if companions is None else companions.shape[1])
