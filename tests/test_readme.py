@@ -55,5 +55,7 @@ def test_the_python_shown_runs(tmp_path, monkeypatch):
 
 def test_the_table_of_structure_is_what_the_example_prints():
     (shown,) = re.findall(r"```console\n\$ python examples/structure.py\n(.*?)```", README, flags=re.DOTALL)
-    run = subprocess.run([sys.executable, "examples/structure.py"], cwd=ROOT, capture_output=True, text=True, check=True)
+    run = subprocess.run(
+        [sys.executable, "examples/structure.py"], cwd=ROOT, capture_output=True, text=True, check=True
+    )
     assert [line.rstrip() for line in run.stdout.strip().splitlines()] == shown.strip().splitlines()
