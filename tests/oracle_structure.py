@@ -228,9 +228,11 @@ def _score(x, value, upper, lower, shape, positive):
     """Return the normal score of x under a quoted distribution, restricted to positive values or not."""
     if shape == "exact":
         raise ValueError("an exact structure observable is not covered")
+    if not positive and shape in ("normal", "lognormal"):  # of a logarithm the two are one
+        return (x - value) / upper
     if not positive:  # far from 0 the restriction removes nothing
         far = 1000.0 * (upper + lower)
-        x, value, shape = np.maximum(x - value + far, 1e-9 * far), far, "normal" if shape == "lognormal" else shape
+        x, value = np.maximum(x - value + far, 1e-9 * far), far
     low, high = np.clip(Input(shape, value, upper, lower).tails(np.log(x / value)), 0.0, 1.0)
     return np.where(low < high, ndtri(low), -ndtri(high))
 
@@ -277,10 +279,11 @@ class _Averaged:
         units = {"log_k2": _LOG10 / 3.8, "mean_log_k2": _LOG10 / 3.8, "moment_of_inertia_factor": 0.5}  # in ln alpha
         widths = [units.get(o[0], 1.0) * min(o[2:4]) / (1.0 if "log" in o[0] else o[1]) for o in observed]
         self.observed, self.mean = observed, any(o[0] == "mean_log_k2" for o in observed)
+        self.companion = min([w for w, o in zip(widths, observed, strict=True) if o[0] == "mean_log_k2"], default=1.0)
         self.exact = self.width = min(widths)  # what must be resolved with eps given, and without
         if len(observed) == 1 and observed[0][0] in units:
             self.width = np.hypot(self.exact, smear)
-        step = min(0.25, 0.5 * self.exact / smear) / refine if smear else np.inf
+        step = min(0.25, 0.7 * self.exact / smear) / refine if smear else np.inf
         self.eps = np.arange(-8.0, 8.0, step) if smear else np.zeros(1)
         self.shares = step * np.exp(-0.5 * self.eps**2) / np.sqrt(2.0 * np.pi) if smear else np.ones(1)
 
@@ -324,7 +327,7 @@ class _Calibrated:
         ends = [(p.centre(m).min() - 8.5 * p.width, p.centre(m).max() + 8.5 * p.width) for p in parts]
         companions = []
         if average.mean:
-            gaps = [min(0.3 * p.sd, 0.7 * average.exact) / refine for p in parts]
+            gaps = [min(0.3 * p.sd, 0.7 * average.companion) / refine for p in parts]
             nodes = [np.arange(*end, gap) for end, gap in zip(ends, gaps, strict=True)]
             companions = list(zip(nodes, predictors, strict=True))
             chances = np.concatenate(
@@ -335,7 +338,7 @@ class _Calibrated:
             def level(a, predict=predictors[i]):
                 return average(a, predict, companions)
 
-            a = average.grid(*ends[i], 0.1 / np.hypot(1.0 / part.sd, 1.0 / average.width) / refine, level)
+            a = average.grid(*ends[i], 0.15 / np.hypot(1.0 / part.sd, 1.0 / average.width) / refine, level)
             weighted = level(a) @ chances if average.mean else level(a)
             density = weighted * part.density(a[:, None] - part.centre(m))
             primitive = make_interp_spline(a, density, k=5).antiderivative()(a)
@@ -369,7 +372,7 @@ class _Index:
             return
         average, predict = _Averaged(observed, 0.56 * sd, refine), predictor(sd)
         panels = np.linspace(
-            self.low, self.high, refine * (2 + int((self.high - self.low) * (peak + 0.5 / average.exact)))
+            self.low, self.high, refine * (2 + int((self.high - self.low) * (peak + 0.5 / average.companion)))
         )
         other, weights = _gauss(panels, 8)
         companions = [(_LOG3 - np.log(5.0 - other), predict)]
@@ -381,7 +384,7 @@ class _Index:
             values = average(_LOG3 - np.log(5.0 - n), predict, companions)
             return values @ (weights * density(other))[:, None] if average.mean else values
 
-        n = average.grid(self.low, self.high, 0.1 / np.hypot(1.0 / average.width, peak) / refine, level)
+        n = average.grid(self.low, self.high, 0.15 / np.hypot(1.0 / average.width, peak) / refine, level)
         self.low, self.high = n[0], n[-1]
         self.table = make_interp_spline(n, density(n) * level(n)[:, 0], k=5).antiderivative()
 

@@ -216,8 +216,8 @@ def distribution(stars):
 def assert_no_step(values_of, log_places, largest):
     """Where values change by more than `largest` between places, they change less at 16 times the resolution.
 
-    A step does not shrink; the upper quantile of a mixture falls steeply through the space between its parts (0.69 Msun).
-    `values_of` takes places and gives (place, value).
+    A step does not shrink; the upper quantile of a mixture falls steeply through the space between its parts (0.69
+    Msun). `values_of` takes places and gives (place, value).
     """
     change = np.abs(np.diff(values_of(np.exp(log_places)), axis=0))
     change = np.where(np.isnan(change), 0.0, change).max(axis=1)

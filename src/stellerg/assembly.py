@@ -14,7 +14,7 @@ from stellerg.binding import Kind
 from stellerg.energetics import OUTPUTS, Conventions
 from stellerg.errors import InputError
 from stellerg.notes import Notes
-from stellerg.observables import LATENTS, OBSERVABLES
+from stellerg.observables import COMPOSITION, LATENTS, OBSERVABLES
 from stellerg.problem import COEFFICIENT, Problem
 from stellerg.selection import Need, Selection, determined, select
 from stellerg.stars import Stars
@@ -65,6 +65,9 @@ def assemble(
         if absent:
             raise InputError(f"use: {', '.join(absent)} was not given; name observables that the stars have")
     notes = Notes.empty(len(stars))
+    for name in COMPOSITION:
+        if name in stars.measured:
+            notes.flags[stars.measured[name].fault != Status.OK] |= int(Flag.MEASUREMENT_UNUSABLE)
     needs, bound = _needs(outputs, conventions, structure)
     problems: list[Problem] = []
     for rows, selection in _patterns(stars, needs, use, notes):
@@ -123,6 +126,9 @@ def _patterns(stars: Stars, needs, use, notes: Notes):
     """Yield the rows of each pattern of usable and faulty cells with what is selected for them."""
     names = [name for name in OBSERVABLES if name in stars.measured]
     if len(stars) == 0:
+        return
+    if not names:  # nothing but what constrains structure or composition
+        yield np.arange(len(stars)), select([], {}, needs, use)
         return
     # one integer a row: the fault, or the presence, of every observable
     states = np.stack([np.where(stars.measured[n].usable, 1, stars.measured[n].fault + 1) for n in names], axis=1)

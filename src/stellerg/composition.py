@@ -1,10 +1,12 @@
 """Composition of stars: mass fractions, and the mean molecular weight that follows from them."""
 
 from collections.abc import Mapping
+from dataclasses import replace
 
 import numpy as np
 
 from stellerg.measured import Measured, Shape, assign
+from stellerg.status import Status
 from stellerg.structure.radiation import mean_molecular_weight
 
 __all__ = ["HYDROGEN", "METAL", "mass_fractions", "with_molecular_weight"]
@@ -27,6 +29,7 @@ def with_molecular_weight(measured: Mapping[str, Measured]) -> dict[str, Measure
     normal error, or is exact where the mass fractions are.
     """
     count = len(next(iter(measured.values())))
+    measured = _within_range(measured, count)
     values, errors, given = zip(*(_values(measured, name, count) for name in _DEFAULT), strict=True)
     weight = mean_molecular_weight(*values)
     slopes = [_slope(values, k) for k in range(2)]
@@ -42,6 +45,20 @@ def with_molecular_weight(measured: Mapping[str, Measured]) -> dict[str, Measure
         keep = own.usable | (own.fault != 0)
         parts[name] = np.where(keep, getattr(own, name), getattr(made, name))
     return {**measured, "mean_molecular_weight": Measured(**parts, scale=own.scale, cells=own.cells)}
+
+
+def _within_range(measured, count: int) -> dict[str, Measured]:
+    """Take mass fractions out that cannot be: above 1, or of a sum above 1 (a value of 0 is refused on reading)."""
+    whole = sum(_values(measured, name, count)[0] for name in _DEFAULT)
+    checked = dict(measured)
+    for name in _DEFAULT:
+        if name in measured:
+            own = measured[name]
+            wrong = own.usable & ((own.value > 1.0) | (whole > 1.0))
+            shape = np.where(wrong, Shape.ABSENT, own.shape).astype(np.uint8)
+            fault = np.where(wrong, Status.NOT_A_NUMBER, own.fault).astype(np.uint8)
+            checked[name] = replace(own, shape=shape, fault=fault)
+    return checked
 
 
 def _values(measured, name, count):

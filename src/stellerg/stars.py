@@ -222,6 +222,8 @@ def _k2_weight(given, needed: bool, count: int) -> np.ndarray:
                 "(0, 1], or log_k2 if the value is of the star alone"
             )
         return np.ones(count)
+    if not needed:
+        raise InputError("mean_log_k2_weight: it weighs mean_log_k2, which was not given; give both, or leave it out")
     weight = np.broadcast_to(np.asarray(given, float), (count,)).copy()
     weight = np.where(np.isnan(weight), 1.0, weight)
     wrong = ~((weight > 0.0) & (weight <= 1.0))
@@ -248,6 +250,10 @@ def _correlation(pair, value, measured: Mapping[str, Measured], count: int) -> n
     if len(pair) != 2 or pair[0] == pair[1]:
         raise InputError(f"correlation: {pair!r} must name two different observables")
     for name in pair:
+        if name in measured and name not in OBSERVABLES:
+            raise InputError(
+                f"correlation: {name!r} constrains structure or composition, and is taken as independent; drop it"
+            )
         if name not in measured:
             raise InputError(f"correlation: {name!r} was not given as an observable; give it, or drop the correlation")
     try:

@@ -8,8 +8,8 @@ asserted at the end is the one for log-normal errors of 2 %, loose by a factor o
 from functools import partial
 
 import numpy as np
-
 from benchmark_compute import PROBABILITIES, best, by_hand
+
 from stellerg import Conventions, Stars, load_prior
 from stellerg.assembly import assemble
 from stellerg.energetics import DEFAULT_OUTPUTS

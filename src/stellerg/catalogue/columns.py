@@ -69,6 +69,8 @@ class Columns:
         }
         for pair in correlations:
             for name in pair:
+                if name in measured and name not in OBSERVABLES:
+                    raise InputError(f"correlation: {name!r} constrains structure or composition; it is independent")
                 if name not in measured:
                     raise InputError(f"correlation: the table has no column {name!r}")
         for pair, column in self.correlations.items():
@@ -100,6 +102,8 @@ class Columns:
 
     def _weights(self, part, measured, count: int, default: float | None) -> np.ndarray:
         """Weights in the mean k2 of systems; where there is none that can be used, the mean is not used either."""
+        if default is not None and "mean_log_k2" not in measured:
+            raise InputError("--mean-log-k2-weight: the table has no column mean_log_k2")
         weight = np.full(count, np.nan if default is None else default)
         if _WEIGHT in self.names:
             values, bad, units = _numbers(part[_WEIGHT])

@@ -17,7 +17,7 @@ from stellerg.catalogue.tally import Tally, closing_summary
 from stellerg.catalogue.writers import WRITERS, Rejected
 from stellerg.checks.budget import tail_names
 from stellerg.errors import InputError
-from stellerg.observables import OBSERVABLES
+from stellerg.observables import COMPOSITION, OBSERVABLES, STRUCTURE_OBSERVABLES
 from stellerg.posterior.columns import conventions, joined, summary_columns
 from stellerg.propagation import propagate
 from stellerg.stars import Stars
@@ -74,12 +74,16 @@ def run(plan: Run) -> RenderableType:
 
 def _summarise(stars: Stars, propagation, columns: Columns, tally: Tally, advance: Callable[[int], None]):
     """Summary columns of one part, computed batch by batch, and what a reader of them must know."""
-    names = (*columns.observables, *tail_names(propagation["prior"]))
+    measured = [name for name in OBSERVABLES if name in columns.observables]
+    if set(COMPOSITION) & set(columns.observables) and "mean_molecular_weight" not in measured:
+        measured.append("mean_molecular_weight")  # which follows from the mass fractions
+    names = (*measured, *tail_names(propagation["prior"]))
+    inside = tuple(name for name in STRUCTURE_OBSERVABLES if name in columns.observables)
     batches = []
     for start in range(0, len(stars), _BATCH):
         posterior = propagate(stars.take(np.arange(start, min(start + _BATCH, len(stars)))), **propagation)
         tally.add(posterior)
-        batches.append(summary_columns(posterior, names))
+        batches.append(summary_columns(posterior, names, inside))
         advance(len(posterior))
     return joined(batches), conventions(posterior)
 

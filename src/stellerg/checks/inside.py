@@ -71,7 +71,7 @@ def inside(problem: Problem, ionisation_energy: np.ndarray) -> Inside:
         radiation = radiation_share(q, mass, molecular)[:, 0]
         if not problem.binding.radiation:
             flags[radiation > _NEGLECTED] |= int(Flag.RADIATION_NEGLECTED)
-        if radius is not None:
+        if radius is not None and problem.binding.gas > 0.0:
             counted = (1.0 - radiation) if problem.binding.radiation else 1.0
             of_potential = ionisation_share(ionisation_energy[:, None], q, mass, radius)[:, 0]
             ionisation = of_potential / (problem.binding.gas * counted)

@@ -37,7 +37,8 @@ def flags(problem: Problem, answer: Answer, probability: np.ndarray) -> np.ndarr
 
     matters = (problem.input_weights != 0.0).any(axis=(0, 1))
     for name, measured, matter in zip(problem.inputs, problem.measured, matters, strict=True):
-        if not matter:  # a measurement that moves no output says nothing about the result
+        through_radiation = name == "mean_molecular_weight" and problem.binding.radiation
+        if not (matter or through_radiation):  # a measurement that moves no output says nothing about the result
             continue
         with np.errstate(invalid="ignore"):
             ratio = measured.upper / measured.lower

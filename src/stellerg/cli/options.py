@@ -269,7 +269,10 @@ class Settings:
     @property
     def k2_weight(self) -> float | None:
         """Weight of the star in the mean k2 of its system, if it was given."""
-        return None if math.isnan(self.mean_log_k2_weight) else self.mean_log_k2_weight
+        weight = self.mean_log_k2_weight
+        if not math.isnan(weight) and not 0.0 < weight <= 1.0:
+            raise InputError(f"--mean-log-k2-weight: must lie in (0, 1], got {weight:g}")
+        return None if math.isnan(weight) else weight
 
     def solar(self):
         """Return the solar references of the scaling relations."""

@@ -35,7 +35,9 @@ def _words(codes: np.ndarray, word) -> np.ndarray:
     return np.array([word(int(code)) for code in different], dtype=object)[which.ravel()]
 
 
-def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None = None) -> list[Column]:
+def summary_columns(
+    posterior: Posterior, budget_names: tuple[str, ...] | None = None, structure_names: tuple[str, ...] | None = None
+) -> list[Column]:
     """Columns of the summary, one row per star in the order of the input.
 
     Parameters
@@ -44,6 +46,8 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
     budget_names : tuple of str, optional
         Quantities that have a budget column; default: those that some star has. Parts of one catalogue
         share one list.
+    structure_names : tuple of str, optional
+        Structure observables that have a column of predictive probability; default: those that some star has.
     """
     nothing = np.full(len(posterior), np.nan)
     engines = (*posterior.engines, "")
@@ -86,7 +90,7 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
             columns.append(
                 Column(f"{output}_budget_{name}", share, "", f"share of {name} in the variance of ln {output}")
             )
-    columns += _inside(posterior)
+    columns += _inside(posterior, structure_names)
     if posterior.use:  # measurements named as independent may be redundant, and then say whether they agree
         freedom = np.where(np.isnan(posterior.probability), np.nan, posterior.degrees_of_freedom)
         columns += [
@@ -97,14 +101,17 @@ def summary_columns(posterior: Posterior, budget_names: tuple[str, ...] | None =
     return columns
 
 
-def _inside(posterior: Posterior) -> list[Column]:
+def _inside(posterior: Posterior, names: tuple[str, ...] | None) -> list[Column]:
     """What a result leaves out or contradicts of the inside of stars."""
     text = "energy of ionisation over the binding energy, at medians"
     columns = [
         Column("radiation_share", posterior.radiation_share(), "", "share of radiation in the pressure, at medians"),
         Column("ionisation_share", posterior.ionisation_share(), "", text),
     ]
-    for name, values in posterior.predictive_probabilities().items():
+    probabilities = posterior.predictive_probabilities()
+    nothing = np.full(len(posterior), np.nan)
+    for name in probabilities if names is None else names:
+        values = probabilities.get(name, nothing)
         text = f"two-sided predictive probability of {name} under the prior"
         columns.append(Column(f"{name}_predictive_probability", values, "", text))
     return columns

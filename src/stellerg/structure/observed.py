@@ -32,7 +32,7 @@ _LN10 = np.log(10.0)
 _NODE, _WEIGHT = np.polynomial.legendre.leggauss(32)
 _REACH = 8.5  # normal scores of eps: 2e-17 lies beyond
 _SEARCH = 17  # points of a search for the window of eps
-_ROUNDS = 3
+_ROUNDS = 8  # at most; each narrows a window up to 8 times
 _DROP = 32.0  # a likelihood lower by this in the logarithm does not count: 1e-14
 _VALUES = 2**20  # bounds memory, changes no bit
 
@@ -173,16 +173,7 @@ class Observed:
             value = self._averaged(flat_q, flat, companions) - 0.5 * flat**2
             return value.reshape(stars, m, k)
 
-        low, high = np.full((2, stars, m), _REACH)
-        low = -low
-        for _ in range(_ROUNDS):
-            step = (high - low) / (_SEARCH - 1)
-            eps = low[..., None] + step[..., None] * np.arange(_SEARCH)
-            value = log_integrand(eps)
-            counts = value >= value.max(axis=-1, keepdims=True) - _DROP
-            first = np.argmax(counts, axis=-1)
-            last = _SEARCH - 1 - np.argmax(counts[..., ::-1], axis=-1)
-            low, high = low + step * np.maximum(first - 1, 0), low + step * np.minimum(last + 1, _SEARCH - 1)
+        low, high = self._window(q, companions)
         half = 0.5 * (high - low)
         eps = 0.5 * (high + low)[..., None] + half[..., None] * _NODE
         value = log_integrand(eps)
@@ -191,6 +182,30 @@ class Observed:
         total = (np.exp(value - safe[..., None]) * _WEIGHT).sum(axis=-1) * half / np.sqrt(2.0 * np.pi)
         with np.errstate(divide="ignore"):
             return np.where(np.isfinite(top), safe + np.log(total), -np.inf)
+
+    def _window(self, q, companions) -> tuple[np.ndarray, np.ndarray]:
+        """Ends in eps between which the integrand counts, (star, m) each: searched until they stand, star by star."""
+        low, high = np.full((2, *q.shape), _REACH)
+        low, active = -low, np.arange(len(q))
+        for _ in range(_ROUNDS):
+            here = self.take(active)
+            step = (high[active] - low[active]) / (_SEARCH - 1)
+            eps = low[active][..., None] + step[..., None] * np.arange(_SEARCH)
+            flat = eps.reshape(len(active), -1)
+            pairs = None if companions is None else companions[active]
+            value = here._averaged(np.repeat(q[active], _SEARCH, axis=1), flat, pairs) - 0.5 * flat**2
+            value = value.reshape(eps.shape)
+            counts = value >= value.max(axis=-1, keepdims=True) - _DROP
+            first = np.argmax(counts, axis=-1)
+            last = _SEARCH - 1 - np.argmax(counts[..., ::-1], axis=-1)
+            start, length = low[active], high[active] - low[active]
+            low[active] = start + step * np.maximum(first - 1, 0)
+            high[active] = start + step * np.minimum(last + 1, _SEARCH - 1)
+            shrinks = (high[active] - low[active] < 0.5 * length).any(axis=1)
+            active = active[shrinks]
+            if not active.size:
+                break
+        return low, high
 
     def _averaged(self, q, eps, companions):
         """Log likelihood averaged over companions, (star, m)."""
