@@ -76,8 +76,8 @@ def sun():
 def coverage():
     """Share of main-sequence stars whose calibrated coefficient lies in the central intervals of each prior.
 
-    Masses are uniform in ln M from 0.35 solar masses (lighter stars are fully convective, n = 1.4 to 1.5) to 40, radii in
-    ln R from age zero to the end of the main sequence.
+    Masses are uniform in ln M from 0.35 solar masses (lighter stars are fully convective, n = 1.4 to 1.5) to 40, radii
+    in ln R from age zero to the end of the main sequence.
     """
     calibration = load_prior("main-sequence")
     ends = np.log([0.35, 40.0])

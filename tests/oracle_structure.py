@@ -33,6 +33,7 @@ from scipy.special import ndtr, ndtri, owens_t
 from oracle import Input, _base_edges, _Curve, _fold, _Measured
 
 GM_SUN, R_SUN = 1.3271244e20, 6.957e8  # m3 s-2 and m, nominal: IAU 2015 Resolution B3
+MU = (0.61, None)  # mean molecular weight and its error: definition of the calibration
 LARGEST_INDEX = 4.95  # indices are clipped here: definition of the structure observables
 _LOG2, _LOG3, _LOG10 = np.log([2.0, 3.0, 10.0])
 _LOG_ALPHA = (_LOG3 - np.log(5.0), _LOG3 - np.log(5.0 - LARGEST_INDEX))  # of the polytropes 0 and 4.95
@@ -371,10 +372,8 @@ class _Index:
         if not observed:
             return
         average, predict = _Averaged(observed, 0.56 * sd, refine), predictor(sd)
-        panels = np.linspace(
-            self.low, self.high, refine * (2 + int((self.high - self.low) * (peak + 0.5 / average.companion)))
-        )
-        other, weights = _gauss(panels, 8)
+        count = refine * (2 + int((self.high - self.low) * (peak + 0.5 / average.companion)))
+        other, weights = _gauss(np.linspace(self.low, self.high, count), 8)
         companions = [(_LOG3 - np.log(5.0 - other), predict)]
 
         def density(n):
@@ -448,9 +447,8 @@ class _Distribution:
         self.radiation = self.binding and pressure == "gas+radiation"
         self.ionisation = ionisation if self.binding else None
         self.exponents = dict(zip("MRL", (0, 0, 0) if kind == "coefficient" else exponents, strict=True))
-        sources = dict(zip("MRL", sources, strict=True)) | {
-            "mu": Input("normal" if mu[1] else "exact", mu[0], mu[1], mu[1])
-        }
+        molecular_weight = Input("normal" if mu[1] else "exact", mu[0], mu[1], mu[1])
+        sources = dict(zip("MRL", sources, strict=True)) | {"mu": molecular_weight}
         together = bool(structure.coupled or self.ionisation)
         matters = {"M": together or self.radiation, "R": together, "L": False, "mu": self.radiation}
         self.logs, self.coupled, self.edges, self.parts, self.shift = {}, {}, [], [], 0.0
@@ -541,17 +539,7 @@ def _cumulative(t, family, inputs, exponents, observed, *rest):
 
 
 def calibrated_cumulative(
-    t,
-    mass,
-    radius,
-    luminosity,
-    exponents,
-    state=None,
-    kind="binding",
-    mu=(0.61, None),
-    observed=(),
-    ionisation=None,
-    refine=1,
+    t, mass, radius, luminosity, exponents, state=None, kind="binding", mu=MU, observed=(), ionisation=None, refine=1
 ):
     """Return P(ln Y <= t) under the calibrated coefficient, with gas and radiation.
 
@@ -586,7 +574,7 @@ def index_cumulative(
     kind="binding",
     pressure="gas",
     ionisation=None,
-    mu=(0.61, None),
+    mu=MU,
     observed=(),
     discrepancy=0.25,
     refine=1,

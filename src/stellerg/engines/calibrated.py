@@ -30,6 +30,7 @@ _VALUES = 2**17  # star-node pairs treated together: bounds memory, changes no b
 # nodes for every input): above the first an input gets nodes of its own (errors of the mass up to 5.5 %, and beyond),
 # above the second the first term left out decides whether the star is refused.
 _GUARD = (3e-4, 1.6e-3)
+_FINER = 4.0  # times as many nodes with structure observables, whose likelihood may be so much sharper (judgement)
 _SLOPE_VARIES = 0.1  # by how much d ln w/d ln R may differ within the errors of a star
 _SMALL = 0.055
 _WORST = 1.6e-3
@@ -57,6 +58,8 @@ def calibrated_refusal(problem: Problem) -> np.ndarray:
             here = problem.take(left[unsure])
             error = CalibratedAnswer(here).first_left_out()
             refusal[left[unsure]] = np.where(error > np.where(_small(here), *_LEFT_OUT), 2, 0)
+    if problem.interior.observed is not None:  # nodes of three sorts and a likelihood at each: slower than draws
+        refusal[(refusal == 0) & (problem.interior.relation.widening > 0.0) & ~problem.log_normal.all(axis=1)] = 2
     return refusal
 
 
@@ -91,6 +94,13 @@ def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     worst = np.argmax(single, axis=2)
     rest = np.where(np.arange(len(problem.inputs)) == worst[:, :, None], 0.0, each)
     needs = whole > np.where(_small(problem), *_GUARD)[:, None]
+    if problem.interior.observed is not None:
+        # a radius that is not normal is weighed by the structure observables: it needs nodes in any case
+        carries = np.abs(radius[:, 0]) * free[:, 0] * ~problem.log_normal
+        own = carries.max(axis=1) > 0.0
+        worst = np.where(own[:, None], np.argmax(carries, axis=1)[:, None], worst)
+        needs |= own[:, None]
+        rest = np.where(np.arange(len(problem.inputs)) == worst[:, :, None], 0.0, each)
     left = expansion_error(np.abs(rest).sum(axis=-1))
     return np.where(needs, worst, -1), np.where(needs, left, whole)
 
@@ -221,6 +231,8 @@ def _alike(sorts: list[np.ndarray]):
 def _curved(problem: Problem) -> np.ndarray:
     """Whether a kernel of a star is not normal, (star,): inputs that are not log-normal, or a curved share."""
     other = (~problem.log_normal).any(axis=1)
+    if problem.interior.observed is not None:
+        return np.ones(len(problem), bool)
     return other | (~problem.binding.constant & (problem.interior.relation.log_mass > _CURVED_ABOVE))
 
 
@@ -244,6 +256,8 @@ def _plan(problem: Problem, carried: Carried, own: np.ndarray) -> tuple[np.ndarr
     )
     variance = variance.min(axis=2) + scatter[:, None] ** 2
     ratio = (steepest / np.sqrt(variance)).max(axis=1)
+    if problem.interior.observed is not None:
+        ratio = ratio * _FINER  # observables narrow what is summed over, and the kernels
     moving = (carried.mass_slope > 0.0) | (carried.through >= 0)
     first = np.where(moving, _count(ratio), 1)
     second = np.ones(count, int)
@@ -255,7 +269,8 @@ def _plan(problem: Problem, carried: Carried, own: np.ndarray) -> tuple[np.ndarr
         steep = np.abs(np.diff(step, axis=1)).max(axis=1) / (score[0, 1] - score[0, 0])
         left = variance[rows] - form[:, :outputs] ** 2 * problem.log_sd[rows, j, None] ** 2
         left = np.maximum(left, scatter[rows, None] ** 2)
-        second[rows] = _count((size * steep[:, None] / np.sqrt(left)).max(axis=1))
+        finer = 1.0 if problem.interior.observed is None else _FINER
+        second[rows] = _count(finer * (size * steep[:, None] / np.sqrt(left)).max(axis=1))
     return first, second
 
 

@@ -1,5 +1,6 @@
 """The nodes over which quadrature under a calibrated coefficient sums, and the kernels at them."""
 
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
@@ -19,6 +20,10 @@ _HALF, _HALF_WEIGHT = np.polynomial.legendre.leggauss(40)
 _HALF_REACH = 6.0  # half-normal scales covered: 2e-9 lies outside
 _STEP = 0.05  # in ln w, ln R and ln mu, for derivatives of the share; the share is smooth on this scale
 GAIN_NODES = len(_HALF)
+_LEGENDRE, _LEGENDRE_WEIGHT = np.polynomial.legendre.leggauss(24)
+_SEARCH, _ROUNDS = 17, 4  # points, and rounds, of a search for where prior and likelihood of ln w overlap
+_WIDEST = 9.0  # standard deviations of the prior that are searched
+_DROP = 25.0  # in the logarithm: 1e-11
 
 
 @lru_cache(maxsize=64)
@@ -103,20 +108,31 @@ class Nodes:
                 nodes = [np.repeat(v, more, axis=-1) for v in nodes]
                 weight = (weight[:, :, None] * self.gain_weight).reshape(len(weight), -1)
                 gain = np.tile(self.gain, (1, self.log_mass.shape[1]))
-            part = self._part(output, *nodes, relation.scatter[:, None], gain)
-            parts.append(((1.0 - share) * weight, *part))
+            *part, evidence = self._part(output, *nodes, relation.scatter[:, None], gain, self._usual)
+            parts.append(((1.0 - share) * weight, *part, evidence))
         if (relation.convective > 0.0).any():
             height = np.broadcast_to(relation.log_convective[:, None], self.log_mass.shape)
-            part = self._part(output, self.log_mass, height, 0.0 * height, self.mean, relation.convective_sd, 0.0)
-            parts.append((share * self.weight, *part))
-        if len(parts) == 1:
-            return Kernels.of(*parts[0])
+            nodes = (self.log_mass, height, 0.0 * height, self.mean)
+            *part, evidence = self._part(output, *nodes, relation.convective_sd, 0.0, self._convective)
+            parts.append((share * self.weight, *part, evidence))
         weight, mean, sd = (np.concatenate([part[k] for part in parts], axis=1) for k in range(3))
         cumulants = None if parts[0][3] is None else np.concatenate([part[3] for part in parts], axis=2)
+        if parts[0][4] is not None:
+            evidence = np.concatenate([part[4] for part in parts], axis=1)
+            weight = weight * np.exp(evidence - evidence.max(axis=1, keepdims=True))
+            weight = weight / weight.sum(axis=1, keepdims=True)
         return Kernels.of(weight, mean, sd, cumulants)
 
-    def _part(self, output, log_mass, height, slope, means, scatter, gain):
-        """Mean, standard deviation and cumulants of the kernels of one component."""
+    def _usual(self, q: np.ndarray) -> np.ndarray:
+        """Log likelihood of the structure observables at ln w."""
+        return self.problem.interior.likelihood(q)
+
+    def _convective(self, q: np.ndarray) -> np.ndarray:
+        """The same of fully convective stars."""
+        return self.problem.interior.observed.convective().marginal(q)
+
+    def _part(self, output, log_mass, height, slope, means, scatter, gain, likelihood):
+        """Mean, standard deviation, cumulants and log evidence of the kernels of one component."""
         problem, radius = self.problem, len(self.problem.outputs)
         kind = Kind(int(problem.kinds[output]))
         one, r, m = output, radius, radius + 1
@@ -132,7 +148,7 @@ class Nodes:
         sd = np.sqrt(variance)
         mean = mean + q + g + 0.5 * gqq * (slope**2 * v[r, r] + scatter**2)
         if not self.curved:
-            return mean, sd, None
+            return mean, sd, None, None
         shared = slope * (v[one, r] + on_radius * v[r, r] + gm * v[r, m]) + (1.0 + gq) * scatter**2
         cumulants = [3.0 * gqq * shared**2 + 0.0 * sd, 0.0 * sd, 0.0 * sd, 0.0 * sd]
         forms = self.carried.forms
@@ -142,7 +158,14 @@ class Nodes:
             for k in range(4):
                 power = power * weight
                 cumulants[k] = cumulants[k] + power * self.cumulants[k][:, j, None]
-        return mean, sd, np.stack(cumulants)
+        if problem.interior.observed is None:
+            return mean, sd, np.stack(cumulants), None
+        own = slope**2 * v[r, r] + scatter**2  # variance of ln w
+        informed = _inform(likelihood, q, own + 0.0 * q)
+        follows = shared / own
+        sd = np.sqrt(np.maximum(variance - follows**2 * (own - informed.variance), 1e-14))
+        cumulants[0] = cumulants[0] + follows**3 * informed.third
+        return mean + follows * (informed.mean - q), sd, np.stack(cumulants), informed.log_evidence
 
     def _share(self, kind: Kind, q, log_mass, log_radius, log_molecular):
         """ln f with its derivatives in q (two), ln R and ln mu."""
@@ -161,3 +184,42 @@ class Nodes:
         if self.covariance[:, -1, -1].any():
             slope_molecular = (at(dm=_STEP) - at(dm=-_STEP)) / (2.0 * _STEP)
         return centre, (up - down) / (2.0 * _STEP), (up - 2.0 * centre + down) / _STEP**2, slope_radius, slope_molecular
+
+
+@dataclass(frozen=True)
+class _Informed:
+    """ln w at nodes after structure observables: moments, and the logarithm of the mean likelihood."""
+
+    mean: np.ndarray
+    variance: np.ndarray
+    third: np.ndarray
+    log_evidence: np.ndarray
+
+
+def _inform(likelihood, q: np.ndarray, variance: np.ndarray) -> _Informed:
+    """Weigh a normal density of ln w with a likelihood: moments by Gauss-Legendre where their product counts."""
+    sd = np.sqrt(variance)
+    low, high = q - _WIDEST * sd, q + _WIDEST * sd
+
+    def log_product(at):
+        flat = likelihood(at.reshape(len(q), -1)).reshape(at.shape)
+        return flat - 0.5 * ((at - q[..., None]) / sd[..., None]) ** 2
+
+    for _ in range(_ROUNDS):
+        step = (high - low) / (_SEARCH - 1)
+        value = log_product(low[..., None] + step[..., None] * np.arange(_SEARCH))
+        counts = value >= value.max(axis=-1, keepdims=True) - _DROP
+        first = np.argmax(counts, axis=-1)
+        last = _SEARCH - 1 - np.argmax(counts[..., ::-1], axis=-1)
+        low, high = low + step * np.maximum(first - 1, 0), low + step * np.minimum(last + 1, _SEARCH - 1)
+    half = 0.5 * (high - low)
+    at = 0.5 * (high + low)[..., None] + half[..., None] * _LEGENDRE
+    value = log_product(at)
+    top = value.max(axis=-1)
+    share = np.exp(value - top[..., None]) * _LEGENDRE_WEIGHT
+    total = share.sum(axis=-1)
+    share = share / total[..., None]
+    mean = (share * at).sum(axis=-1)
+    off = at - mean[..., None]
+    evidence = top + np.log(total * half / (sd * np.sqrt(2.0 * np.pi)))
+    return _Informed(mean, (share * off**2).sum(axis=-1), (share * off**3).sum(axis=-1), evidence)

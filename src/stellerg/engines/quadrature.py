@@ -56,7 +56,6 @@ class Quadrature:
         "errors whose upper and lower side differ by more than a factor of two: use montecarlo",
         "errors too large for the expansions used with a calibrated coefficient, structure observables or a curved "
         "binding energy: use montecarlo",
-        "structure observables under a calibrated coefficient weigh mass and radius too: use montecarlo",
     )
 
     def accepts(self, problem: Problem) -> np.ndarray:
@@ -68,8 +67,6 @@ class Quadrature:
             refusal = calibrated_refusal(problem.only(np.flatnonzero(problem.structured)))
 
             reason = np.where(refusal > 0, np.where(refusal == 1, 3, 5), reason)
-            if problem.interior.observed is not None:
-                reason[:] = 6
         elif _needs_cells(problem):
             refusal = cells_refusal(problem)
             reason = np.where(refusal > 0, np.where(refusal == 1, 3, 5), reason)

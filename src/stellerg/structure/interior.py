@@ -106,6 +106,10 @@ class Interior:
         centre = self.relation.centre(log_mass, log_radius)
         return self._of_both(q, centre, lambda observed: self._likelihood(observed, q, 0))
 
+    def likelihood(self, q: np.ndarray) -> np.ndarray:
+        """Log likelihood of the structure observables of calibrated stars that are not fully convective, (star, m)."""
+        return self._likelihood(self.observed, q, 0)
+
     def _likelihood(self, observed: Observed, q: np.ndarray, number: int) -> np.ndarray:
         """Log likelihood, from a table where each value is an average; `number` is an interval of mass."""
         return self._tables[number].at(q) if observed is self.observed and observed.blunt else observed.marginal(q)
