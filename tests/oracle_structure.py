@@ -37,7 +37,7 @@ MU = (0.61, None)  # mean molecular weight and its error: definition of the cali
 LARGEST_INDEX = 4.95  # indices are clipped here: definition of the structure observables
 _LOG2, _LOG3, _LOG10 = np.log([2.0, 3.0, 10.0])
 _LOG_ALPHA = (_LOG3 - np.log(5.0), _LOG3 - np.log(5.0 - LARGEST_INDEX))  # of the polytropes 0 and 4.95
-_TOLERANCE = 1e-8  # of one box; the estimate is that of a lower rule (judgement; tests double the resolution)
+_TOLERANCE = 3e-9  # of one box; the estimate is that of a lower rule (judgement; tests double the resolution)
 _PANELS = np.array([-6.6, -2.5, 0.0, 2.5, 6.6])  # scores; 4e-11 lies beyond
 _NODES, _RULE = np.polynomial.legendre.leggauss(15)
 _NULL = _RULE * np.polynomial.legendre.legval(_NODES, [0.0] * 14 + [1.0])  # sees the 14th Legendre coefficient only
@@ -77,7 +77,7 @@ def polytrope(n):
         return y[0] - 0.1
 
     edge.terminal = True
-    x, options = 1e-3, {"method": "DOP853", "rtol": 1e-12, "atol": 1e-14, "dense_output": True}
+    x, options = 1e-3, {"method": "DOP853", "rtol": 1e-11, "atol": 1e-13, "dense_output": True}
     start = [1 - x**2 / 6 + n * x**4 / 120, -x / 3 + n * x**3 / 30, 2 * n * x**2 / 35, x**5 / 5]  # series
     core = solve_ivp(rates, (x, 1e3), start, events=edge, **options)
     shell = solve_ivp(inward, (core.y_events[0][0][0], 0.0), [core.t[-1], *core.y_events[0][0][1:]], **options)
@@ -161,8 +161,9 @@ def _nodes():
 
 def calibration(log_mass):
     """Return ln R_zams, ln alpha_zams and gamma; natural splines are straight outside their nodes."""
-    inside = np.clip(log_mass, *_nodes()[0][[0, -1]])
-    return [spline(inside) + spline(inside, 1) * (log_mass - inside) for spline in _nodes()[1]]
+    first, last = _nodes()[0][[0, -1]]
+    low, high = np.minimum(log_mass - first, 0.0), np.maximum(log_mass - last, 0.0)
+    return [s(log_mass - low - high) + s(first, 1) * low + s(last, 1) * high for s in _nodes()[1]]
 
 
 def boundary(name, mass):
@@ -179,8 +180,10 @@ class _Component:
         self.width = float(np.hypot(sd, tau))
 
     def location(self, log_mass, log_radius):
+        if self.fixed is not None:
+            return self.centre(log_mass + log_radius)
         zams, alpha, gamma = calibration(log_mass)
-        return self.centre(alpha + gamma * (self.slope * (log_radius - zams) + self.shift))
+        return alpha + gamma * (self.slope * (log_radius - zams) + self.shift)
 
     def centre(self, location):
         """Return the location of this component where that of the relation is `location`."""
@@ -280,13 +283,13 @@ class _Averaged:
         units = {"log_k2": _LOG10 / 3.8, "mean_log_k2": _LOG10 / 3.8, "moment_of_inertia_factor": 0.5}  # in ln alpha
         widths = [units.get(o[0], 1.0) * min(o[2:4]) / (1.0 if "log" in o[0] else o[1]) for o in observed]
         self.observed, self.mean = observed, any(o[0] == "mean_log_k2" for o in observed)
-        self.companion = min([w for w, o in zip(widths, observed, strict=True) if o[0] == "mean_log_k2"], default=1.0)
-        self.exact = self.width = min(widths)  # what must be resolved with eps given, and without
-        if len(observed) == 1 and observed[0][0] in units:
-            self.width = np.hypot(self.exact, smear)
-        step = min(0.25, 0.7 * self.exact / smear) / refine if smear else np.inf
-        self.eps = np.arange(-8.0, 8.0, step) if smear else np.zeros(1)
-        self.shares = step * np.exp(-0.5 * self.eps**2) / np.sqrt(2.0 * np.pi) if smear else np.ones(1)
+        by_name = [(o[0], width) for o, width in zip(observed, widths, strict=True)]
+        self.companion = min([width for name, width in by_name if name == "mean_log_k2"], default=1.0)
+        self.width = min(widths) if len(observed) > 1 or observed[0][0] not in units else np.hypot(widths[0], smear)
+        sharp = min([width for name, width in by_name if name in units], default=np.inf)  # with eps given
+        step = min(0.25, 0.7 * sharp / smear) / refine if smear and np.isfinite(sharp) else 0.0
+        self.eps = np.arange(-8.0, 8.0, step) if step else np.zeros(1)
+        self.shares = step * np.exp(-0.5 * self.eps**2) / np.sqrt(2.0 * np.pi) if step else np.ones(1)
 
     def __call__(self, a, predict, companions=()):
         """Return shape (a, nodes); `companions`: pairs of nodes in ln alpha and a predictor."""
@@ -339,7 +342,7 @@ class _Calibrated:
             def level(a, predict=predictors[i]):
                 return average(a, predict, companions)
 
-            a = average.grid(*ends[i], 0.15 / np.hypot(1.0 / part.sd, 1.0 / average.width) / refine, level)
+            a = average.grid(*ends[i], 0.1 / np.hypot(1.0 / part.sd, 1.0 / average.width) / refine, level)
             weighted = level(a) @ chances if average.mean else level(a)
             density = weighted * part.density(a[:, None] - part.centre(m))
             primitive = make_interp_spline(a, density, k=5).antiderivative()(a)
@@ -383,7 +386,7 @@ class _Index:
             values = average(_LOG3 - np.log(5.0 - n), predict, companions)
             return values @ (weights * density(other))[:, None] if average.mean else values
 
-        n = average.grid(self.low, self.high, 0.15 / np.hypot(1.0 / average.width, peak) / refine, level)
+        n = average.grid(self.low, self.high, 0.1 / np.hypot(1.0 / average.width, peak) / refine, level)
         self.low, self.high = n[0], n[-1]
         self.table = make_interp_spline(n, density(n) * level(n)[:, 0], k=5).antiderivative()
 
@@ -490,7 +493,7 @@ class _Distribution:
     def _fold_all_but_one(self):
         """Store the distribution of all terms but the last, as a piecewise polynomial."""
 
-        def function(s, tolerance=0.2 * _TOLERANCE):
+        def function(s, tolerance=0.6 * _TOLERANCE):
             return (self._expect(s, tolerance * (1.0 - self.unbound)) - self.unbound) / (1.0 - self.unbound)
 
         trial, offsets = np.linspace(-40.0, 40.0, 4001), 0.05 * 1.6 ** np.arange(15.0)

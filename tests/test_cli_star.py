@@ -788,11 +788,11 @@ WRONG = {
     ),
     "weight above one": (
         [*STAR, "--mean-log-k2", "-1.85(3)", "--mean-log-k2-weight", "1.5"],
-        ["mean_log_k2_weight", "(0, 1]", "1.5"],
+        ["--mean-log-k2-weight", "(0, 1]", "1.5"],
     ),
     "weight of nothing": (
         [*STAR, "--mean-log-k2", "-1.85(3)", "--mean-log-k2-weight", "0"],
-        ["mean_log_k2_weight", "(0, 1]", "got 0"],
+        ["--mean-log-k2-weight", "(0, 1]", "got 0"],
     ),
     "weight no number": (
         [*STAR, "--mean-log-k2", "-1.85(3)", "--mean-log-k2-weight", "half"],

@@ -38,9 +38,6 @@ def log_k2(value, error):
     return "log_k2", value, error, error, "normal"
 
 
-# -------------------------------------------------------------------------------------- polytropes and radiation
-
-
 @pytest.mark.parametrize("row", published("polytropes.csv"), ids=lambda row: f"n={row['n']}")
 def test_polytropes(row):
     n, (k2, moment, omega, _, _) = float(row["n"]), reference.polytrope(float(row["n"]))
@@ -88,23 +85,20 @@ def test_score_of_observables():
     assert score(0.25, "normal", 0.1, 0.1, 0.2, positive=True) == pytest.approx(truth, abs=1e-12)
 
 
-# ------------------------------------------------------------------------------------------------ the calibration
-
-
 @pytest.mark.parametrize("row", published("structure_checks.csv"), ids=lambda row: f"{row['mass']}-{row['what']}")
 def test_directly_integrated_models(row):
-    """ATTAINED."""
+    """Attained: 0.3 Msun -0.29 %; 1 at zero age -1.44 %; the Sun -1.08 %; 3 -0.05 %; 10 -0.25 %; 30 -1.46 %."""
     mass, radius = float(row["mass"]), float(row["radius"])
-    median = medians(
-        [lambda t: calibrated_cumulative(t, exact(mass), exact(radius), None, (0, 0, 0), kind="coefficient")]
-    )
-    assert np.exp(median[0]) == pytest.approx(float(row["alpha"]), rel=0.02)
+    star = exact(mass), exact(radius), None, (0, 0, 0)
+    (median,) = medians([lambda t: calibrated_cumulative(t, *star, kind="coefficient")])
+    assert np.exp(median) == pytest.approx(float(row["alpha"]), rel=0.02)
 
 
-ROWS = {float(row["mass"]): {k: float(v or "nan") for k, v in row.items()} for row in published("structure_nodes.csv")}
-EDGES = {
-    float(row["mass"]): {k: float(v or "nan") for k, v in row.items()} for row in published("structure_branches.csv")
-}
+def by_mass(name):
+    return {float(row["mass"]): {k: float(v or "nan") for k, v in row.items()} for row in published(name)}
+
+
+ROWS, EDGES = by_mass("structure_nodes.csv"), by_mass("structure_branches.csv")
 
 
 def at(mass, x, state=None):
@@ -140,17 +134,12 @@ def test_contracting():
     assert alone.fixed == pytest.approx(np.log(ROWS[0.2]["alpha_zams"]), abs=1e-12)
 
 
-@pytest.mark.parametrize(
-    ("mass", "x", "start", "above"),
-    [
-        (1.0, 1.2, 1.0, 1.4),
-        (4.0, 3.6, 0.8 * (3.0 + 2.0 * np.log(4 / 3) / np.log(5 / 3)), 3.0 + 2.0 * np.log(4 / 3) / np.log(5 / 3)),
-    ],
-)
-def test_stated_pre_main_sequence(mass, x, start, above):
-    weights = [part.weight for part in at(mass, x, "pre-main-sequence")]
+@pytest.mark.parametrize(("mass", "x"), [(1.0, 1.2), (4.0, 3.6)])
+def test_stated_pre_main_sequence(mass, x):
+    above = 1.4 if mass < 1.5 else 3.0 + 2.0 * np.log(4 / 3) / np.log(5 / 3)  # structure_branches.csv at 3 and 5 Msun
+    start = 1.0 if mass < 1.5 else 0.8 * above
     c = np.log(x / start) / np.log(above / start)
-    assert weights == pytest.approx([1 - c, c], rel=1e-9)
+    assert [part.weight for part in at(mass, x, "pre-main-sequence")] == pytest.approx([1 - c, c], rel=1e-9)
 
 
 @pytest.mark.parametrize(
@@ -170,8 +159,6 @@ def test_refused(mass, x, state):
     with pytest.raises(ValueError, match="calibration"):
         calibrated_cumulative([0.0], exact(mass), exact(radius), None, (2, -1, 0), state=state)
 
-
-# -------------------------------------------------------------------------------- closed forms: all is Gaussian
 
 OBSERVED = {
     "nothing": [],
@@ -246,9 +233,6 @@ def test_discrepancy_by_brute_force():
     np.testing.assert_allclose(found, truth[pick], atol=2e-6)
 
 
-# -------------------------------------------------------------------------------------------------- index priors
-
-
 @pytest.mark.parametrize("prior", [("uniform", 1.5, 3.0), ("normal", 3.0, 0.2)])
 def test_ideal_gas_against_the_other_reference(prior):
     star = (quoted(1.2, 0.1), quoted(1.5, 0.03, 0.06, "three-quantile"), quoted(2.0, 0.2, 0.1, "split-normal"))
@@ -289,30 +273,28 @@ def test_ionisation_by_quadrature(radius):
     assert (truth[0] > 0.01) == (radius > 10.0)  # unbound
 
 
-# -------------------------------------------------------------------------------------------------------- draws
-
 CALIBRATED = {
-    "like the Sun": ((quoted(1.0, 0.05), quoted(1.0, 0.04), quoted(1.0, 0.1), KELVIN_HELMHOLTZ), {}),
+    "like the Sun": ((quoted(1.0, 0.05), quoted(1.0, 0.04), quoted(1.0, 0.1), KELVIN_HELMHOLTZ), {"ionisation": 1.4e9}),
     "at its end, uncertain mu": (
         (quoted(15.0, 0.06, 0.03, "split-normal"), quoted(10.15, 0.04, 0.05, "three-quantile"), None, (2, -1, 0)),
-        {"mu": (0.61, 0.03), "ionisation": 1.4e9},
+        {"mu": (0.61, 0.03)},
     ),
     "contracting, k2": (
         (quoted(0.6, 0.05), log_normal(0.522 * 1.43, 0.03), None, (2, -1, 0)),
         {"observed": [log_k2(-1.2, 0.15)]},
     ),
     "between the relations": (
-        (quoted(1.5, 0.08), quoted(1.8, 0.06), None, (1, -1, 0)),
+        (quoted(1.5, 0.08), log_normal(1.8, 0.06), None, (1, -1, 0)),
         {"observed": [log_k2(-2.3, 0.05), ("moment_of_inertia_factor", 0.05, 0.003, 0.002, "three-quantile")]},
     ),
     "young, mean of two": (
         (quoted(1.0, 0.05), quoted(1.05, 0.08), None, (2, -1, 0)),
-        {"state": "pre-main-sequence", "observed": [("mean_log_k2", -1.4, 0.1, 0.2, "split-normal", 0.6)]},
+        {"state": "pre-main-sequence", "observed": [("mean_log_k2", -1.4, 0.15, 0.15, "normal", 0.6)]},
     ),
 }
 INDEX = {
     "massive, mean of two": (
-        (("normal", 3.0, 0.4), quoted(20.0, 0.1), quoted(8.0, 0.05), quoted(5e4, 0.2), KELVIN_HELMHOLTZ),
+        (("normal", 3.0, 0.4), quoted(20.0, 0.1), log_normal(8.0, 0.05), log_normal(5e4, 0.2), KELVIN_HELMHOLTZ),
         {"pressure": "gas+radiation", "observed": [("mean_log_k2", -2.0, 0.08, 0.08, "normal", 0.4)]},
     ),
 }
@@ -333,7 +315,7 @@ def calibrated_structure(rng, medians_, state, logs):
 
 def index_structure(rng, prior):
     """Return the same of draws from a normal prior of the index, truncated by rejection."""
-    n = prior[1] + prior[2] * rng.standard_normal(2 * DRAWS)
+    n = prior[1] + prior[2] * rng.standard_normal(DRAWS + DRAWS // 100)
     n = n[(n >= 0.0) & (n < 5.0)][:DRAWS]
     return np.log(3.0 / (5.0 - n)), 0.25, 0.0
 
@@ -401,10 +383,17 @@ def test_index_against_draws():
         assert np.abs((index_cumulative(t, prior, *star, **rest) - p) / error).max() > ERRORS, key
 
 
-@pytest.mark.parametrize("name", ["like the Sun", "contracting, k2", "between the relations", "young, mean of two"])
+DOUBLED = {name: CALIBRATED[name] for name in ("like the Sun", "contracting, k2", "between the relations")}
+DOUBLED["mean of two"] = (
+    (quoted(3.0, 0.05), quoted(2.1, 0.05), None, (2, -1, 0)),
+    {"observed": [("mean_log_k2", -2.3, 0.05, 0.05, "normal", 0.6)]},
+)
+
+
+@pytest.mark.parametrize("name", DOUBLED)
 def test_doubled_resolution(name):
-    star, options = CALIBRATED[name]
-    centre = medians([lambda t: calibrated_cumulative(t, *star, **options)])[0]
+    star, options = DOUBLED[name]
+    (centre,) = medians([lambda t: calibrated_cumulative(t, *star, **options)])
     t = centre + np.array([-0.3, -0.1, 0.0, 0.1, 0.3])
     coarse, fine = (calibrated_cumulative(t, *star, **options, refine=k) for k in (1, 2))
     assert 0.0 < np.abs(fine - coarse).max() < ACCURACY

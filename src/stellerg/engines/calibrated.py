@@ -17,6 +17,7 @@ from stellerg.engines.answer import REPORTED
 from stellerg.engines.carried import Carried, along, carried_forms, input_cumulants
 from stellerg.engines.kernels import expansion_error
 from stellerg.engines.nodes import GAIN_NODES, REACH, Nodes, kinks
+from stellerg.measured import Shape
 from stellerg.problem import Problem
 from stellerg.status import Status
 
@@ -26,16 +27,19 @@ _SPACING = 1.2  # of the nodes in normal scores, for a kernel much wider than th
 _WHERE_SLOPE_COUNTS = 3.5  # normal scores within which the slope sets the spacing
 _COUNTS = np.array([8, 10, 12, 14, 16, 20, 24, 28, 32, 40, 48, 56, 64, 80, 96, 128, 160, 192, 256, 320, 384, 512])
 _VALUES = 2**17  # star-node pairs treated together: bounds memory, changes no bit
-# The bound on what the expansion leaves out exceeds the error 16 times or more (normal errors of 5 to 10 %, against
-# nodes for every input): above the first an input gets nodes of its own (errors of the mass up to 5.5 %, and beyond),
-# above the second the first term left out decides whether the star is refused.
-_GUARD = (3e-4, 1.6e-3)
-_FINER = 4.0  # times as many nodes with structure observables, whose likelihood may be so much sharper (judgement)
-_SLOPE_VARIES = 0.1  # by how much d ln w/d ln R may differ within the errors of a star
-_SMALL = 0.055
-_WORST = 1.6e-3
+# Bounds on what the expansion leaves out: above the first an input gets nodes of its own (errors of the mass up to
+# 5.5 %, and beyond; the error is a twentieth of it for normal errors of 5 to 10 %, a half for those of 20 %), above the
+# second the first term left out decides whether the star is refused.
+_GUARD = (3e-4, 5e-4)
+_WORST = 1e-4
 _HOPELESS = 0.3  # a bound above which a look at that term is not worth it
 _LEFT_OUT = (1.5e-5, 8e-5)  # of the cumulative
+# Normal errors s below 3 %: the standardised cumulants of ln are at most 3.1 s, 20.2 s^2, 213 s^3 and 3100 s^4, and the
+# bound no more than this.
+_MILD, _MILD_ERROR = 0.03, 3.6e-5
+_SMALL = 0.055
+_SLOPE_VARIES = 0.1  # by how much d ln w/d ln R may differ within the errors of a star
+_FINER = 4.0  # times as many nodes with structure observables, whose likelihood may be so much sharper (judgement)
 _CURVED_ABOVE = np.log(6.0)  # ln M: below, the curvature of ln f moves the cumulative by less than 1e-5
 
 
@@ -71,8 +75,23 @@ def _small(problem: Problem) -> np.ndarray:
 
 def _own_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     """Input that needs nodes of its own (-1: none), and the error of the expansion that is left, (star, output)."""
+    shape = (len(problem), len(problem.outputs))
+    own, error = np.full(shape, -1), np.zeros(shape)
     if problem.log_normal.all():
-        return np.full((len(problem), len(problem.outputs)), -1), np.zeros((len(problem), len(problem.outputs)))
+        return own, error
+    mild = np.zeros(len(problem), bool)
+    if problem.interior.observed is None:
+        narrow = [m.log_normal | ((m.shape == Shape.NORMAL) & (m.log_sd < _MILD)) for m in problem.measured]
+        mild = np.logical_and.reduce(narrow)
+    error[mild] = _MILD_ERROR
+    rest = np.flatnonzero(~mild)
+    if rest.size:
+        own[rest], error[rest] = _judged_nodes(problem.take(rest))
+    return own, error
+
+
+def _judged_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
+    """What `_own_nodes` returns, from the cumulants."""
     carried = carried_forms(problem)
     counts = len(problem.outputs)
     beside = np.einsum("sff->sf", carried.covariance)[:, :counts]

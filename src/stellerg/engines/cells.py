@@ -317,6 +317,11 @@ class _Sums:
         second = (mass * (off**2 + width**2 / 12.0 + self.sd**2) + 2.0 * off * tilt).sum(axis=-1)
         return mean, np.sqrt(second)
 
+    @property
+    def skewness(self) -> np.ndarray:
+        """No guess of it, (star,)."""
+        return np.zeros(len(self.low))
+
     def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Cumulative and density at t, (star, m) each."""
         cumulative, density = self._sum(t, self._integrals)

@@ -122,6 +122,13 @@ class Kernels:
         variance = (self.weight * (self.sd**2 + (self.mean - mean[:, None]) ** 2)).sum(axis=-1)
         return mean, np.sqrt(variance)
 
+    @property
+    def skewness(self) -> np.ndarray:
+        """Third standardised cumulant of the sum of normal kernels, (star,)."""
+        mean, sd = self.moments
+        off = self.mean - mean[:, None]
+        return (self.weight * off * (off**2 + 3.0 * self.sd**2)).sum(axis=-1) / sd**3
+
     def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Cumulative and density at t, (star, m) each."""
         cumulative, density = np.empty(t.shape), np.empty(t.shape)
