@@ -8,20 +8,18 @@ half-normal spread towards the end of the main sequence adds nodes of its own, a
 for the expansion of the kernel.
 """
 
-from dataclasses import dataclass, field
-from functools import cached_property
+from dataclasses import dataclass
 
 import numpy as np
 
-from stellerg.engines.answer import REPORTED
 from stellerg.engines.carried import Carried, along, carried_forms, input_cumulants
 from stellerg.engines.kernels import expansion_error
 from stellerg.engines.nodes import GAIN_NODES, REACH, Nodes, kinks
+from stellerg.engines.summed import SummedAnswer
 from stellerg.measured import Shape
 from stellerg.problem import Problem
-from stellerg.status import Status
 
-__all__ = ["CalibratedAnswer", "calibrated_refusal"]
+__all__ = ["CalibratedSums", "calibrated_refusal"]
 
 _SPACING = 1.2  # of the nodes in normal scores, for a kernel much wider than the slope: exp(-2 pi^2/1.2^2) = 1e-6
 _WHERE_SLOPE_COUNTS = 3.5  # normal scores within which the slope sets the spacing
@@ -60,7 +58,7 @@ def calibrated_refusal(problem: Problem) -> np.ndarray:
         refusal[left[bound >= _HOPELESS]] = 2
         if unsure.size:  # the bound exceeds the error by far: the first term left out decides
             here = problem.take(left[unsure])
-            error = CalibratedAnswer(here).first_left_out()
+            error = SummedAnswer(here, CalibratedSums()).first_left_out()
             refusal[left[unsure]] = np.where(error > np.where(_small(here), *_LEFT_OUT), 2, 0)
     if problem.interior.observed is not None:  # nodes of three sorts and a likelihood at each: slower than draws
         refusal[(refusal == 0) & (problem.interior.relation.widening > 0.0) & ~problem.log_normal.all(axis=1)] = 2
@@ -125,88 +123,11 @@ def _judged_nodes(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
 
 
 @dataclass(frozen=True)
-class CalibratedAnswer:
-    """Distributions under a calibration of outputs that carry structure. See `stellerg.engines.answer.Answer`."""
+class CalibratedSums:
+    """Kernels at the nodes of each star. See `stellerg.engines.summed.Sums`."""
 
-    problem: Problem
-    diagnostics: dict = field(default_factory=dict)
-
-    def take(self, which: np.ndarray) -> "CalibratedAnswer":
-        """Return some of the stars."""
-        return CalibratedAnswer(self.problem.take(which))
-
-    def failure(self, star: int) -> str:
-        """Nothing fails."""
-        return ""
-
-    @property
-    def status(self) -> np.ndarray:
-        """Always OK, (star,)."""
-        return np.full(len(self.problem), Status.OK, np.uint8)
-
-    @property
-    def log_mean(self) -> np.ndarray:
-        """Mean of ln Y, (star, output)."""
-        return self._moments[0]
-
-    @property
-    def log_sd(self) -> np.ndarray:
-        """Standard deviation of ln Y, (star, output)."""
-        return self._moments[1]
-
-    @cached_property
-    def _moments(self) -> np.ndarray:
-        out = np.empty((2, len(self.problem), len(self.problem.outputs)))
-        for rows, output, kernels in self._kernels():
-            out[0, rows, output], out[1, rows, output] = kernels.moments
-        return out
-
-    @cached_property
-    def numerical_error(self) -> np.ndarray:
-        """Estimated error of the cumulative, (star, output): against half as many nodes, and of the expansion."""
-        p, quantiles = np.array(REPORTED), self.quantile(np.array(REPORTED))
-        error = np.full((len(self.problem), len(self.problem.outputs)), 1e-6)
-        for rows, output, kernels in self._kernels():
-            error[rows, output] += np.abs(kernels.left_out(quantiles[rows, output])).max(axis=1)
-        for rows, output, kernels in self._kernels(coarser=2):
-            below, _ = kernels.evaluate(quantiles[rows, output])
-            # the error of a spectral rule falls with the square of the number of nodes in the exponent
-            error[rows, output] += np.abs(below - p).max(axis=1) ** 2
-        return error
-
-    def first_left_out(self) -> np.ndarray:
-        """Largest of the first term the expansions leave out, at the reported quantiles of all outputs, (star,)."""
-        found = np.zeros(len(self.problem))
-        for rows, _, kernels in self._kernels():
-            term = np.abs(kernels.left_out(kernels.quantile(np.array(REPORTED)))).max(axis=1)
-            found[rows] = np.maximum(found[rows], term)
-        return found
-
-    def quantile(self, p: np.ndarray) -> np.ndarray:
-        """ln Y at cumulative probabilities p (m,): (star, output, m)."""
-        p = np.atleast_1d(np.asarray(p, float))
-        out = np.empty((len(self.problem), len(self.problem.outputs), len(p)))
-        for rows, output, kernels in self._kernels():
-            out[rows, output] = kernels.quantile(p)
-        return out
-
-    def cumulative(self, log_value: np.ndarray) -> np.ndarray:
-        """Cumulative probability at ln Y (star, output, m)."""
-        return self._evaluate(log_value, 0)
-
-    def density(self, log_value: np.ndarray) -> np.ndarray:
-        """Density over ln Y at (star, output, m)."""
-        return self._evaluate(log_value, 1)
-
-    def _evaluate(self, log_value, which):
-        out = np.empty(log_value.shape)
-        for rows, output, kernels in self._kernels():
-            out[rows, output] = kernels.evaluate(log_value[rows, output])[which]
-        return out
-
-    def _kernels(self, coarser: int = 1):
+    def parts(self, problem: Problem, *, coarser: bool = False):
         """Yield (rows, output, Kernels) of stars with as many nodes of each sort."""
-        problem = self.problem
         own = _own_nodes(problem)[0]
         alone = (own >= 0).any(axis=1)  # an input gets nodes of its own for one output, and not for another
         for rows in (np.flatnonzero(~alone),) if (~alone).any() else ():
@@ -217,8 +138,16 @@ class CalibratedAnswer:
             for some, _, kernels in _sorted(problem.take(rows).only(np.array([output])), own[rows, output], coarser):
                 yield rows[some], output, kernels
 
+    def other_error(self, problem: Problem) -> np.ndarray:
+        """What lies beyond the nodes, (star, output)."""
+        return np.full((len(problem), len(problem.outputs)), 1e-6)
 
-def _sorted(problem: Problem, own: np.ndarray, coarser: int):
+    def error_of(self, difference: np.ndarray) -> np.ndarray:
+        """The error of a spectral rule falls with the square of the number of nodes in the exponent."""
+        return difference**2
+
+
+def _sorted(problem: Problem, own: np.ndarray, coarser: bool):
     """Yield (rows, output, Kernels) of stars in groups alike."""
     relation, carried = problem.interior.relation, carried_forms(problem)
     first, second = _plan(problem, carried, own)
@@ -230,7 +159,8 @@ def _sorted(problem: Problem, own: np.ndarray, coarser: int):
         size = max(1, _VALUES // (counts[0] * counts[1] * (GAIN_NODES if sort[3] else 1)))
         for start in range(0, len(rows), size):
             some = rows[start : start + size]
-            work = Nodes(problem.take(some), carried.take(some), counts, int(sort[2]) - 1, bool(sort[7]), coarser)
+            kind = (counts, int(sort[2]) - 1, bool(sort[7]), 2 if coarser else 1)
+            work = Nodes(problem.take(some), carried.take(some), *kind)
             for output in range(len(problem.outputs)):
                 yield some, output, work.kernels(output)
 

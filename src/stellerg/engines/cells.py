@@ -7,24 +7,22 @@ is piecewise linear, so each cell has a closed integral, in the kernel's cumulat
 over the score: exact for kernels much narrower and much wider than a cell.
 """
 
-from dataclasses import dataclass, field
-from functools import cached_property
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.polynomial import hermite_e
 from scipy.special import ndtr
 
 from stellerg.binding import MEAN_MOLECULAR_WEIGHT, Kind
-from stellerg.engines.answer import REPORTED
 from stellerg.engines.carried import input_cumulants
 from stellerg.engines.intervals import mass_score
 from stellerg.engines.inversion import invert
 from stellerg.engines.kernels import expansion_error
+from stellerg.engines.summed import SummedAnswer
 from stellerg.problem import Problem
-from stellerg.status import Status
 from stellerg.structure.informed import Cells, cells_of
 
-__all__ = ["CellsAnswer", "cells_refusal"]
+__all__ = ["CellsSums", "cells_refusal"]
 
 _ROOT_2PI = np.sqrt(2.0 * np.pi)
 _STARS = 128  # treated together: bounds memory, changes no bit
@@ -44,87 +42,26 @@ _HE = {order: _polynomial(order) for order in range(12)}
 
 
 @dataclass(frozen=True)
-class CellsAnswer:
-    """Distributions by cells of ln w. See `stellerg.engines.answer.Answer`."""
+class CellsSums:
+    """Kernels smeared over the cells of each star. See `stellerg.engines.summed.Sums`."""
 
-    problem: Problem
-    diagnostics: dict = field(default_factory=dict)
-
-    def take(self, which: np.ndarray) -> "CellsAnswer":
-        """Return some of the stars."""
-        return CellsAnswer(self.problem.take(which))
-
-    def failure(self, star: int) -> str:
-        """Nothing fails."""
-        return ""
-
-    @property
-    def status(self) -> np.ndarray:
-        """Always OK, (star,)."""
-        return np.full(len(self.problem), Status.OK, np.uint8)
-
-    @property
-    def log_mean(self) -> np.ndarray:
-        """Mean of ln Y, (star, output)."""
-        return self._moments[0]
-
-    @property
-    def log_sd(self) -> np.ndarray:
-        """Standard deviation of ln Y, (star, output)."""
-        return self._moments[1]
-
-    @cached_property
-    def _moments(self) -> np.ndarray:
-        out = np.empty((2, len(self.problem), len(self.problem.outputs)))
-        for rows, output, sums in self._sums():
-            out[0, rows, output], out[1, rows, output] = sums.moments
-        return out
-
-    @cached_property
-    def numerical_error(self) -> np.ndarray:
-        """Estimated error of the cumulative, (star, output): of the cells (against half as many) and the expansions."""
-        p = np.array(REPORTED)
-        quantiles = self.quantile(p)
-        error = _expansion_error(self.problem)[1]
-        for rows, output, sums in self._sums():
-            error[rows, output] += np.abs(sums.left_out(quantiles[rows, output])).max(axis=1)
-        for rows, output, sums in self._sums(coarser=True):
-            below, _ = sums.evaluate(quantiles[rows, output])
-            # a rule of second order: half as many cells have four times the error
-            error[rows, output] += np.abs(below - p).max(axis=1) / 3.0
-        return error + 1e-9
-
-    def quantile(self, p: np.ndarray) -> np.ndarray:
-        """ln Y at cumulative probabilities p (m,): (star, output, m)."""
-        p = np.atleast_1d(np.asarray(p, float))
-        out = np.empty((len(self.problem), len(self.problem.outputs), len(p)))
-        for rows, output, sums in self._sums():
-            out[rows, output] = sums.quantile(p)
-        return out
-
-    def cumulative(self, log_value: np.ndarray) -> np.ndarray:
-        """Cumulative probability at ln Y (star, output, m)."""
-        return self._evaluate(log_value, 0)
-
-    def density(self, log_value: np.ndarray) -> np.ndarray:
-        """Density over ln Y at (star, output, m)."""
-        return self._evaluate(log_value, 1)
-
-    def _evaluate(self, log_value, which):
-        out = np.empty(log_value.shape)
-        for rows, output, sums in self._sums():
-            out[rows, output] = sums.evaluate(log_value[rows, output])[which]
-        return out
-
-    def _sums(self, coarser: bool = False):
+    def parts(self, problem: Problem, *, coarser: bool = False):
         """Yield (rows, output, _Sums)."""
-        for rows, cells in _densities(self.problem):
+        for rows, cells in _densities(problem):
             for start in range(0, len(rows), _STARS):
                 some = rows[start : start + _STARS]
                 here = cells.take(np.arange(start, start + len(some)))
-                part = self.problem.take(some)
+                part = problem.take(some)
                 for output in range(len(part.outputs)):
                     yield some, output, _Sums.of(part, output, here.halved() if coarser else here)
+
+    def other_error(self, problem: Problem) -> np.ndarray:
+        """What third derivatives of ln f would add, (star, output)."""
+        return _expansion_error(problem)[1] + 1e-9
+
+    def error_of(self, difference: np.ndarray) -> np.ndarray:
+        """A rule of second order: half as many cells have four times the error."""
+        return difference / 3.0
 
 
 def _densities(problem: Problem):
@@ -148,16 +85,8 @@ def cells_refusal(problem: Problem) -> np.ndarray:
     # the bound exceeds the error by far where the density of ln w is wide: there the first term left out decides
     unsure = np.flatnonzero(~straddles & (error > _WORST) & (error < _HOPELESS))
     if unsure.size:
-        error[unsure] = _first_left_out(problem.take(unsure)) + curved[unsure].max(axis=1)
+        error[unsure] = SummedAnswer(problem.take(unsure), CellsSums()).first_left_out() + curved[unsure].max(axis=1)
     return np.where(straddles, 1, np.where(error > _WORST, 2, 0))
-
-
-def _first_left_out(problem: Problem) -> np.ndarray:
-    """Largest of the fourth order of the expansion at the reported quantiles of all outputs, (star,)."""
-    p, found = np.array(REPORTED), np.zeros(len(problem))
-    for rows, _, sums in CellsAnswer(problem)._sums():
-        found[rows] = np.maximum(found[rows], np.abs(sums.left_out(sums.quantile(p))).max(axis=1))
-    return found
 
 
 @dataclass(frozen=True)

@@ -12,7 +12,7 @@ tail: use montecarlo.
 """
 
 from dataclasses import dataclass, field
-from functools import cached_property
+from functools import cached_property, partial
 from typing import ClassVar
 
 import numpy as np
@@ -21,13 +21,15 @@ from scipy.special import ndtri
 from stellerg.binding import Kind
 from stellerg.engines import smoothing
 from stellerg.engines.answer import Answer
-from stellerg.engines.calibrated import CalibratedAnswer, calibrated_refusal
-from stellerg.engines.cells import CellsAnswer, cells_refusal
+from stellerg.engines.calibrated import CalibratedSums, calibrated_refusal
+from stellerg.engines.cells import CellsSums, cells_refusal
 from stellerg.engines.convolution import convolve
 from stellerg.engines.intervals import MassScore, mass_score, moments_of_structure
 from stellerg.engines.joined import JoinedAnswer
+from stellerg.engines.offsets import TABLE_ERROR, quantile_by_table
 from stellerg.engines.parts import GaussianPart, GridPart, SharpPart
 from stellerg.engines.straddling import mass_shift, straddling_terms
+from stellerg.engines.summed import SummedAnswer
 from stellerg.measured import Shape
 from stellerg.problem import Problem
 from stellerg.status import Status
@@ -97,8 +99,8 @@ def _needs_cells(problem: Problem) -> bool:
 def _sorted_outputs(problem: Problem):
     """Yield the positions of outputs that are treated alike, and how."""
     carrying = problem.structured
-    curved = CellsAnswer if _needs_cells(problem) else QuadratureAnswer
-    carried = curved if problem.interior.relation is None else CalibratedAnswer
+    curved = partial(SummedAnswer, sums=CellsSums()) if _needs_cells(problem) else QuadratureAnswer
+    carried = curved if problem.interior.relation is None else partial(SummedAnswer, sums=CalibratedSums())
     if carried is QuadratureAnswer:
         yield np.arange(len(carrying)), carried
         return
@@ -141,7 +143,7 @@ class QuadratureAnswer:
     @cached_property
     def numerical_error(self) -> np.ndarray:
         """Estimated error of the cumulative, (star, output)."""
-        error = np.full((len(self.problem), len(self.problem.outputs)), 1e-12)
+        error = np.full((len(self.problem), len(self.problem.outputs)), TABLE_ERROR)
         for chunk, piece, output in self._pieces():
             view = error[chunk, output]
             for rows, _, estimate in _terms(piece, output):
@@ -157,6 +159,14 @@ class QuadratureAnswer:
             view = out[chunk, output]
             for rows, terms, _ in _terms(piece, output):
                 start = guess[rows]
+                if len(terms) == 1 and isinstance(terms[0][1], GaussianPart) and not terms[0][0].is_point:
+                    mixture, part = terms[0]
+                    looked_up = quantile_by_table(mixture, part.mean, part.sd, p)
+                    view[rows] = looked_up
+                    left = np.flatnonzero(np.isnan(looked_up[:, 0]))
+                    if not left.size:
+                        continue
+                    rows, start, terms = rows[left], start[left], [(mixture, part.take(left))]
                 if len(terms) == 1 and isinstance(terms[0][1], GridPart):
                     # the quantiles for a normal measured part of the same mean and width lie close by
                     mixture, part = terms[0]

@@ -96,6 +96,11 @@ class Mixture:
         """Finite values of ln w between which (all but 1e-12 of) the probability lies."""
         return min(c.panels[0] for c in self.components), max(c.panels[-1] for c in self.components)
 
+    @property
+    def is_point(self) -> bool:
+        """Whether all probability is at one value."""
+        return self.bracket[0] == self.bracket[1]
+
     def quantile(self, u: np.ndarray) -> np.ndarray:
         """ln w at cumulative probability u."""
         if len(self.components) == 1:
