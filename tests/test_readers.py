@@ -232,13 +232,15 @@ def test_types_of_fits_columns(tmp_path):
         fits.Column("star", "K", array=np.array([2**62 + 1, -9, 7]), null=-9),
         fits.Column("unsigned", "K", bzero=2**63, array=np.array([2**64 - 1, 0, 5], np.uint64)),
         fits.Column("mass", "I", null=-1, array=np.array([1, -1, 3], np.int16)),
-        fits.Column("scaled", "J", bscale=0.5, bzero=1.0, array=np.array([1.5, 2.0, 3.5])),
+        fits.Column("scaled", "J", array=np.array([1, 2, 5])),
         fits.Column("radius", "E", array=np.array([0.1, np.nan, 3.0], np.float32)),
         fits.Column("name", "6A", array=np.array(["  x", "", "y z"])),
         fits.Column("flag", "L", array=np.array([True, False, True])),
         fits.Column("vector", "2D", array=np.ones((3, 2))),
     ]
     fits.HDUList([fits.PrimaryHDU(np.ones(3)), fits.BinTableHDU.from_columns(columns)]).writeto(tmp_path / "t.fits")
+    fits.setval(tmp_path / "t.fits", "TSCAL4", value=0.5, ext=1)
+    fits.setval(tmp_path / "t.fits", "TZERO4", value=1.0, ext=1)
     source = open_table(tmp_path / "t.fits")
     assert source.names == tuple(column.name for column in columns)
     part = next(source.parts())
@@ -269,13 +271,16 @@ def test_parts_of_fits(tmp_path):
 
 
 # --- what cannot be read ---
-@pytest.mark.parametrize("name", FORMATS)
-@pytest.mark.parametrize("share", [0.02, 0.5, 0.9])
+# a text that ends early after its header is a shorter table
+BINARY = [name for name in FORMATS if not FORMATS[name]["format"].startswith("ascii")]
+
+
+@pytest.mark.parametrize(
+    ("name", "share"), [*((n, 0.02) for n in FORMATS), *((n, s) for n in BINARY for s in (0.5, 0.9))]
+)
 def test_a_truncated_file_is_one_message(tmp_path, name, share):
     table = Table({"star": np.arange(900), "mass": np.arange(900) + 0.5, "radius": np.arange(900) + 0.25})
     table.write(tmp_path / name, **FORMATS[name])
-    if FORMATS[name]["format"].startswith("ascii") and share > 0.1:
-        pytest.skip("a text that ends early is a shorter table")
     content = (tmp_path / name).read_bytes()
     (tmp_path / name).write_bytes(content[: int(share * len(content))])
     refused(tmp_path / name)

@@ -12,7 +12,7 @@ from stellerg.errors import InputError
 from stellerg.inputs import measured_from
 from stellerg.keyed_random import hash_identifiers
 from stellerg.measured import Measured
-from stellerg.observables import COMPOSITION, MEASURABLE, OBSERVABLES, SolarReferences
+from stellerg.observables import COMPOSITION, MEASURABLE, OBSERVABLES, STRUCTURE_OBSERVABLES, SolarReferences
 
 __all__ = ["EvolutionaryState", "Stars", "state_codes"]
 
@@ -128,6 +128,9 @@ class Stars:
             for name, given in observables.items()
             if given is not None
         }
+        for name in STRUCTURE_OBSERVABLES:
+            if name in measured and measured[name].exact.any():
+                raise InputError(f"{name}: what is measured of the inside needs an error; give one, however small")
         count = _common_length(measured, star)
         if star is None:
             star = np.arange(1, count + 1).astype(str)

@@ -10,7 +10,7 @@ from stellerg.errors import InputError
 from stellerg.inputs import in_unit_of_value, measured_from_columns
 from stellerg.measured import Measured, Shape
 from stellerg.measured.text import TextKind, parse_text
-from stellerg.observables import MEASURABLE, OBSERVABLES, SolarReferences
+from stellerg.observables import MEASURABLE, OBSERVABLES, STRUCTURE_OBSERVABLES, SolarReferences
 from stellerg.stars import Stars, state_codes
 from stellerg.status import Status
 
@@ -79,6 +79,14 @@ class Columns:
             given = correlations.pop(pair[::-1], correlations.get(pair, np.zeros(count)))
             # a cell that is no number is an invalid correlation, not a missing one
             correlations[pair] = np.where(bad, np.inf, np.where(np.isnan(value), given, value))
+        for name in STRUCTURE_OBSERVABLES:  # needs an error: an exact cell is one that cannot be used
+            if name in measured and measured[name].exact.any():
+                own = measured[name]
+                measured[name] = replace(
+                    own,
+                    shape=np.where(own.exact, Shape.ABSENT, own.shape).astype(np.uint8),
+                    fault=np.where(own.exact, Status.ERROR_MISSING, own.fault).astype(np.uint8),
+                )
         states = self._states(part, count, evolutionary_state)
         return Stars(
             identifier=self._identifiers(part, count, first_row),

@@ -1,6 +1,7 @@
 """Binary tables in FITS, read by slices of rows from the mapped file (a compressed file is unpacked whole)."""
 
 import warnings
+import zlib
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -55,19 +56,31 @@ def _table(path: Path):
     from astropy.io import fits
 
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # what matters is checked below
+        with _quiet():
             file = fits.open(path, memmap=True)
-            hdu = next((hdu for hdu in file if type(hdu) is fits.BinTableHDU), None)
         with file:
-            if hdu is None:
-                raise InputError(f"{path}: the FITS file holds no binary table (BINTABLE extension)")
-            _check_length(path, hdu)
+            with _quiet():
+                hdu = next((hdu for hdu in file if type(hdu) is fits.BinTableHDU), None)
+                if hdu is None:
+                    raise InputError(f"{path}: the FITS file holds no binary table (BINTABLE extension)")
+                _check_length(path, hdu)
+                _ = hdu.columns, hdu.data  # read here, where warnings are off; the data are mapped, not loaded
             yield hdu
     except InputError:
         raise
-    except (OSError, EOFError, ValueError, TypeError, KeyError, IndexError, fits.VerifyError) as problem:
+    except (
+        *(OSError, EOFError, zlib.error, ValueError, TypeError, LookupError, AttributeError, OverflowError),
+        fits.VerifyError,
+    ) as problem:  # whatever a damaged header leads astropy into
         raise InputError(f"{path}: not a readable FITS file, or a damaged one: {first_line(problem)}") from None
+
+
+@contextmanager
+def _quiet():
+    """Without warnings: what matters is checked. Never held open across a yield of ours, since filters are global."""
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        yield
 
 
 def _check_length(path: Path, hdu) -> None:

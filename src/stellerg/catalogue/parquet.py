@@ -39,22 +39,23 @@ def open_parquet(path: Path) -> Source:
             kind = schema.field(name).type
             raise InputError(f"{files[0]}: column {name!r} is nested ({kind}); give one value in a cell")
     units = _units(files[0], schema)
+    names = _names(schema)
     for file, other in zip(files[1:], schemas[1:], strict=True):
-        if other.names != schema.names:
-            raise InputError(f"{file}: its columns differ from those of {files[0].name}; all files need the same")
+        if _names(other) != names:
+            raise InputError(
+                f"{file}: its columns differ from those of {files[0].name}; all files need the same in the same order"
+            )
         if _units(file, other) != units:
             raise InputError(f"{file}: its units differ from those of {files[0].name}; all files need the same")
     if rows == 0:
         raise no_rows(path)
-    masks = {name for name in schema.names if _is_mask(schema, name)}
-    read = [name for name in schema.names if name not in nested]
-    names = tuple(name for name in schema.names if name not in masks)
+    read = [name for name in names if name not in nested]
 
     def parts() -> Iterator[dict[str, RawColumn]]:
         for table in _tables(files, read):
-            yield {name: _column(table, name, units, masks) for name in names if name not in nested}
+            yield {name: _column(table[name], units.get(name, "")) for name in read}
 
-    return Source(path, names, units, rows, parts, tuple(files) if path.is_dir() else ())
+    return Source(path, tuple(names), units, rows, parts, tuple(files) if path.is_dir() else ())
 
 
 def _files(folder: Path) -> list[Path]:
@@ -77,7 +78,7 @@ def _opened(path: Path):
     try:
         with pq.ParquetFile(path, pre_buffer=False, buffer_size=_BUFFER) as file:
             yield file
-    except (pa.ArrowException, OSError) as problem:
+    except (pa.ArrowException, OSError, UnicodeDecodeError) as problem:
         raise InputError(f"{path}: not a readable Parquet file, or a damaged one: {first_line(problem)}") from None
 
 
@@ -87,11 +88,16 @@ def _is_nested(kind) -> bool:
     return pa.types.is_nested(kind.value_type if pa.types.is_dictionary(kind) else kind)
 
 
+def _names(schema) -> list[str]:
+    """Names without those of masks, which one file of a folder has and another has not."""
+    return [name for name in schema.names if not _is_mask(schema, name)]
+
+
 def _is_mask(schema, name: str) -> bool:
     import pyarrow as pa
 
     owner = name.removesuffix(_MASK)
-    return owner != name and owner in schema.names and pa.types.is_boolean(schema.field(name).type)
+    return owner != name and {owner, name} <= set(schema.names) and pa.types.is_boolean(schema.field(name).type)
 
 
 def _units(path: Path, schema) -> dict[str, str]:
@@ -116,13 +122,13 @@ def _units(path: Path, schema) -> dict[str, str]:
 
 def _tables(files: list[Path], names: list[str]) -> Iterator:
     """Tables of `PART_ROWS` rows each but the last, across row groups and files."""
-    import pyarrow as pa
 
     waiting, count = [], 0
     for path in files:
         with _opened(path) as file:
-            for batch in file.iter_batches(PART_ROWS, columns=names):
-                waiting.append(_plain(pa.Table.from_batches([batch])))
+            masks = [name + _MASK for name in names if _is_mask(file.schema_arrow, name + _MASK)]
+            for batch in file.iter_batches(PART_ROWS, columns=[*names, *masks]):
+                waiting.append(_plain(batch, names, masks))
                 count += batch.num_rows
                 while count >= PART_ROWS:
                     table = _joined(path, waiting)
@@ -132,13 +138,19 @@ def _tables(files: list[Path], names: list[str]) -> Iterator:
         yield _joined(files[-1], waiting)
 
 
-def _plain(table):
-    """The same cells in few types: integers, doubles, texts, booleans, nulls."""
+def _plain(batch, names: list[str], masks: list[str]):
+    """The same cells as a table of few types: integers, doubles, texts, booleans, nulls."""
     import pyarrow as pa
+    import pyarrow.compute as pc
 
-    for place, name in enumerate(table.column_names):
-        table = table.set_column(place, name, pa.chunked_array([_plain_cells(table[name].combine_chunks())]))
-    return table
+    columns = []
+    for name in names:
+        cells = _plain_cells(batch[name])
+        if name + _MASK in masks:
+            hidden = pc.fill_null(batch[name + _MASK], False)
+            cells = pc.if_else(hidden, pa.scalar(None, cells.type), cells)
+        columns.append(cells)
+    return pa.table(columns, names=names)
 
 
 def _plain_cells(cells):
@@ -179,15 +191,11 @@ def _joined(path: Path, tables: list):
         raise InputError(f"{path}: a column has another type than before: {first_line(problem)}") from None
 
 
-def _column(table, name: str, units: dict[str, str], masks: set[str]) -> RawColumn:
+def _column(column, unit: str) -> RawColumn:
     import pyarrow as pa
     import pyarrow.compute as pc
 
-    cells = _one_array(table[name])
-    if name + _MASK in masks:
-        hidden = pc.fill_null(_one_array(table[name + _MASK]), False)
-        cells = pc.if_else(hidden, pa.scalar(None, cells.type), cells)
-    unit = units.get(name, "")
+    cells = _one_array(column)
     kind = cells.type
     if pa.types.is_floating(kind):
         return RawColumn(None, np.array(cells.to_numpy(zero_copy_only=False), float), unit)

@@ -129,7 +129,7 @@ class Nodes:
 
     def _convective(self, q: np.ndarray) -> np.ndarray:
         """The same of fully convective stars."""
-        return self.problem.interior.observed.convective().marginal(q)
+        return self.problem.interior.convective_likelihood(q)
 
     def _part(self, output, log_mass, height, slope, means, scatter, gain, likelihood):
         """Mean, standard deviation, cumulants and log evidence of the kernels of one component."""
@@ -164,7 +164,10 @@ class Nodes:
         informed = _inform(likelihood, q, own + 0.0 * q)
         follows = shared / own
         sd = np.sqrt(np.maximum(variance - follows**2 * (own - informed.variance), 1e-14))
-        cumulants[0] = cumulants[0] + follows**3 * informed.third
+        # what ln f bends, it bends over the narrower density of ln w
+        kept = informed.variance / own
+        cumulants[0] = cumulants[0] + follows**3 * informed.third + 3.0 * gqq * shared**2 * (kept**2 - 1.0)
+        mean = mean - 0.5 * gqq * (own - informed.variance)
         return mean + follows * (informed.mean - q), sd, np.stack(cumulants), informed.log_evidence
 
     def _share(self, kind: Kind, q, log_mass, log_radius, log_molecular):

@@ -14,6 +14,9 @@ from stellerg.structure.relation import Relation
 __all__ = ["Interior"]
 
 _AROUND = 1.2  # in ln w about the median of a calibrated star: beyond lies nothing for errors below 50 %
+_POINTS = 1024
+_DEEPEST = 900.0  # below the largest log likelihood of a table: 45 normal scores, those of the misfit
+_POINTS_WITH_COMPANIONS = 256  # each is an average over companions: dear, and smoother
 _PREDICTIVE = 512  # equally probable structures over which a prediction is averaged
 
 
@@ -95,7 +98,7 @@ class Interior:
             which = np.searchsorted(self.edges, log_mass, side="right")
             return np.select([which == number for number in range(len(evidence))], evidence)
         centre = self.relation.centre(log_mass, log_radius)
-        return self._of_both(q, centre, lambda observed: _Tabulated.of(observed, q, self._companions).at(q))
+        return self._of_both(q, centre, self.likelihood(q), self.convective_likelihood)
 
     def log_likelihood(self, q, log_mass, log_radius) -> np.ndarray:
         """Log likelihood of the structure observables at ln w, averaged over misfit and companion, (star, m)."""
@@ -104,15 +107,26 @@ class Interior:
             which = None if len(found) == 1 else np.searchsorted(self.edges, log_mass, side="right")
             return found[0] if which is None else np.select([which == k for k in range(len(found))], found)
         centre = self.relation.centre(log_mass, log_radius)
-        return self._of_both(q, centre, lambda observed: self._likelihood(observed, q, 0))
+        return self._of_both(q, centre, self.likelihood(q), self.convective_likelihood)
 
     def likelihood(self, q: np.ndarray) -> np.ndarray:
         """Log likelihood of the structure observables of calibrated stars that are not fully convective, (star, m)."""
         return self._likelihood(self.observed, q, 0)
 
+    def convective_likelihood(self, q: np.ndarray) -> np.ndarray:
+        """The same of calibrated stars that are fully convective."""
+        return self._likelihood(self.observed.convective(), q, -1)
+
     def _likelihood(self, observed: Observed, q: np.ndarray, number: int) -> np.ndarray:
-        """Log likelihood, from a table where each value is an average; `number` is an interval of mass."""
-        return self._tables[number].at(q) if observed is self.observed and observed.blunt else observed.marginal(q)
+        """Log likelihood, from a table where each value is an average; `number`: interval of mass, -1 convective."""
+        blunt = np.flatnonzero(observed.blunt)
+        if not blunt.size:
+            return observed.marginal(q)
+        out = self._tables[number].at(q)
+        sharp = np.flatnonzero(~observed.blunt)
+        if sharp.size:
+            out[sharp] = observed.take(sharp).marginal(q[sharp])
+        return out
 
     @cached_property
     def _tables(self) -> "tuple[_Tabulated, ...]":
@@ -126,7 +140,10 @@ class Interior:
             )
         middle = self.relation.centre(self.relation.log_mass[:, None], self.relation.log_radius[:, None])
         around = np.concatenate([middle - _AROUND, middle + _AROUND], axis=1)
-        return (_Tabulated.of(self.observed, around, self._companions),)
+        usual = _Tabulated.of(self.observed, around, self._companions)
+        if not self.relation.convective.any():
+            return (usual,)
+        return usual, _Tabulated.of(self.observed.convective(), around, self._companions)
 
     def _companions_of(self, piece: MassInterval) -> np.ndarray | None:
         """Equally probable ln w of companions under the density of an interval of mass, (star, k)."""
@@ -134,14 +151,14 @@ class Interior:
             return None
         return equally_probable(piece.mixture, len(self.observed.misfit))
 
-    def _of_both(self, q, centre, value):
+    def _of_both(self, q, centre, usual, convective):
         """A log likelihood, averaged over the two kinds of interior a calibrated star may have, given ln w."""
         if not self.relation.convective.any():
-            return value(self.observed)
+            return usual
         share = self.relation.log_convective_share(q, centre)
         with np.errstate(divide="ignore"):
             rest = np.log(-np.expm1(np.minimum(share, 0.0)))
-        return np.logaddexp(share + value(self.observed.convective()), rest + value(self.observed))
+        return np.logaddexp(share + convective(q), rest + usual)
 
     @cached_property
     def _companions(self) -> np.ndarray | None:
@@ -173,11 +190,14 @@ class _Tabulated:
     values: np.ndarray
 
     @classmethod
-    def of(cls, observed: Observed, q: np.ndarray, companions, points: int = 1024) -> "_Tabulated":
+    def of(cls, observed: Observed, q: np.ndarray, companions) -> "_Tabulated":
+        points = _POINTS if companions is None else _POINTS_WITH_COMPANIONS
         low, high = q.min(axis=1), q.max(axis=1)
         step = (high - low + 1e-9) / (points - 4)
         start = low - 1.5 * step
-        return cls(start, step, observed.marginal(start[:, None] + step[:, None] * np.arange(points), companions))
+        values = observed.marginal(start[:, None] + step[:, None] * np.arange(points), companions)
+        # beyond the reach of a misfit a sharp measurement falls off a cliff, over which a cubic would leap
+        return cls(start, step, np.maximum(values, values.max(axis=1, keepdims=True) - _DEEPEST))
 
     def at(self, q: np.ndarray) -> np.ndarray:
         place = (q - self.start[:, None]) / self.step[:, None]

@@ -14,7 +14,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy.special import ndtr
+from scipy.special import ndtr, ndtri
 
 from stellerg.measured import Measured
 from stellerg.structure.relations import log10_apsidal_constant, log10_moment_of_inertia_factor
@@ -30,10 +30,11 @@ _DIRECT = {"k2": (-0.3237, -1.0272, 0.028), "inertia": (-0.6436, -1.2909, 0.016)
 _DIRECT_FROM = (1.2, 1.9)  # solar masses between which the direct relations take over (judgement)
 _LN10 = np.log(10.0)
 _NODE, _WEIGHT = np.polynomial.legendre.leggauss(32)
-_REACH = 8.5  # normal scores of eps: 2e-17 lies beyond
+_REACH = 45.0  # normal scores of eps: a sharp measurement that contradicts the prior is as far as that
 _SEARCH = 17  # points of a search for the window of eps
-_ROUNDS = 8  # at most; each narrows a window up to 8 times
+_ROUNDS = 9  # at most; each narrows a window up to 8 times
 _DROP = 32.0  # a likelihood lower by this in the logarithm does not count: 1e-14
+_STRIDES = (59, 101, 149, 211, 277, 331, 383, 449)  # primes: share no factor with a power of two
 _VALUES = 2**20  # bounds memory, changes no bit
 
 
@@ -95,10 +96,11 @@ class Observed:
         return self.measured["mean_log_k2"].usable & (self.k2_weight < 1.0)
 
     @property
-    def blunt(self) -> bool:
-        """Whether the likelihood is an average over misfits or companions: no sharper than these are wide."""
-        sees_misfit = set(self.measured) != {"structure_coefficient"} and bool(self.misfit.any() or self.size.any())
-        return sees_misfit or bool(self.has_companion.any())
+    def blunt(self) -> np.ndarray:
+        """Whether the likelihood of a star is an average over misfits or companions: no sharper than these, (star,)."""
+        seen = [m.usable for name, m in self.measured.items() if name != "structure_coefficient"]
+        sees = np.logical_or.reduce(seen) if seen else np.zeros(len(self.misfit), bool)
+        return (sees & ((self.misfit > 0.0) | ((self.size > 0.0) & (self.direct > 0.0)))) | self.has_companion
 
     def predicted(self, name: str, q: np.ndarray, eps: np.ndarray, companion: np.ndarray | None = None) -> np.ndarray:
         """Natural logarithm of an observable at ln w = q, (star, m); `companion` is ln w of the companion."""
@@ -151,15 +153,19 @@ class Observed:
         companions : ndarray, (star, k), optional
             Equally probable values of ln w of the companion.
         """
-        if not self.blunt:
-            return self.log_likelihood(q, 0.0)
         out = np.empty(q.shape)
-        count = q.shape[1] * _SEARCH * (1 if companions is None else companions.shape[1])
-        size = max(1, _VALUES // count)
-        for start in range(0, len(q), size):
-            rows = np.arange(start, min(start + size, len(q)))
-            pairs = None if companions is None else companions[rows]
-            out[rows] = self.take(rows)._marginal(q[rows], pairs)
+        kind = np.where(self.has_companion, 2, np.where(self.blunt, 1, 0))
+        for number in np.unique(kind):  # star by star, so that company changes no bit
+            rows = np.flatnonzero(kind == number)
+            if number == 0:
+                out[rows] = self.take(rows).log_likelihood(q[rows], 0.0)
+                continue
+            pairs = companions if number == 2 else None
+            count = q.shape[1] * _SEARCH * (1 if pairs is None else pairs.shape[1])
+            size = max(1, _VALUES // count)
+            for start in range(0, len(rows), size):
+                some = rows[start : start + size]
+                out[some] = self.take(some)._marginal(q[some], None if pairs is None else pairs[some])
         return out
 
     def _marginal(self, q, companions):
@@ -225,9 +231,10 @@ class Observed:
         companions : ndarray, (star, m), optional
             Idem of the companion, in an order of its own.
         """
-        node, weight = np.polynomial.hermite_e.hermegauss(24)
-        below = np.zeros(len(q))
-        for eps, share in zip(node, weight / weight.sum(), strict=True):
-            below += share * ndtr(-self.scores(name, q, np.full(q.shape, eps), companions)).mean(axis=-1)
+        below, count = np.zeros(len(q)), q.shape[1]
+        for stride in _STRIDES:  # equally probable misfits, in orders that have nothing to do with that of ln w
+            eps = ndtri(((np.arange(count) * stride) % count + 0.5) / count)
+            scores = self.scores(name, q, np.broadcast_to(eps, q.shape), companions)
+            below += ndtr(-scores).mean(axis=-1) / len(_STRIDES)
         sense = np.where(below > 0.5, 1.0 - below, below)
         return np.where(self.measured[name].usable, 2.0 * np.maximum(sense, 0.0), np.nan)
