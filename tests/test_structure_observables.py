@@ -315,3 +315,82 @@ def test_composition_gives_the_mean_molecular_weight():
     assert measured.upper[0] == pytest.approx(weight**2 * np.hypot(1.25 * 0.02, 0.25 * 0.005), rel=1e-6)
     own = Stars.of("a", **SUN, hydrogen_mass_fraction=(0.70, 0.02), mean_molecular_weight=(0.6, 0.01))
     assert own.measured["mean_molecular_weight"].value[0] == 0.6
+
+
+# --- findings of a review ---
+
+
+def test_an_exact_observable_of_the_inside_is_refused_in_a_call_and_left_aside_in_a_table(tmp_path):
+    with pytest.raises(InputError, match="needs an error"):
+        Stars.of(**SUN, log_k2="-1.8 exact")
+    from stellerg import read_stars
+
+    path = tmp_path / "stars.csv"
+    path.write_text("star,mass,radius,log_k2\na,1 exact,1 exact,-1.8 exact\nb,1 exact,1 exact,\n")
+    posterior = propagate(read_stars(path), outputs="potential_energy")
+    assert posterior.flags[0] & Flag.MEASUREMENT_UNUSABLE
+    assert posterior.median("potential_energy")[0] == posterior.median("potential_energy")[1]
+
+
+@pytest.mark.parametrize("value", [-2.2, -1.9, -1.5, -1.4])
+def test_the_predictive_probability_of_a_point_is_that_of_the_misfit(value):
+    """For n = 3 sharp k2 is predicted below a value where the misfit lies on one side: closed form in its score."""
+    from scipy.optimize import brentq
+    from scipy.special import ndtr
+
+    index = brentq(lambda n: np.log10(polytrope(n).apsidal_constant) - value, 1.0, 4.5)
+    tail = ndtr(-abs(3.0 - index) / 0.25)
+    probability = answer("polytrope-3", log_k2=(value, 1e-4)).predictive_probabilities()["log_k2"][0]
+    assert probability == pytest.approx(2.0 * tail, abs=0.004)
+
+
+def test_the_companion_of_a_convective_star_counts():
+    """Weight 0.5: what is measured is a mean, and says half of what the star's own k2 would."""
+    stars = {
+        weight: Stars.of(
+            "a",
+            mass=(0.5, 0.005),
+            radius=(1.2, 0.005),
+            mean_log_k2=(-0.86, 0.003),
+            mean_log_k2_weight=weight,
+            evolutionary_state="pre-main-sequence",
+        )
+        for weight in (1.0, 0.5)
+    }
+    widths = {}
+    for weight, star in stars.items():
+        by_engine = [
+            propagate(star, outputs="potential_energy", prior="main-sequence", engine=engine).log10_sd(COEFFICIENT)[0]
+            for engine in ENGINES
+        ]
+        assert by_engine[0] == pytest.approx(by_engine[1], rel=0.03)
+        widths[weight] = by_engine[0]
+    assert widths[0.5] > 1.3 * widths[1.0]
+
+
+@pytest.mark.parametrize("prior", ["main-sequence", "wide-index"])
+def test_company_with_other_observables_changes_no_bit(prior):
+    given = {"mass": ["2.0 ± 0.1"] * 4, "radius": ["2.0 ± 0.1"] * 4}
+    given |= {
+        "structure_coefficient": ["1.5 ± 0.03", "", "", "1.6 ± 0.1"],
+        "log_k2": ["", "-2.2 ± 0.05", "", "-2 ± 0.1"],
+    }
+    given |= {"mean_log_k2": ["", "", "-2.2 ± 0.05", ""], "mean_log_k2_weight": [1.0, 1.0, 0.6, 1.0]}
+    stars = Stars.of(list("abcd"), **given)
+    for engine in ENGINES:
+        together = propagate(stars, outputs="potential_energy", prior=prior, engine=engine)
+        quantiles = together.quantile((0.1, 0.5, 0.9), "potential_energy")
+        for row in range(4):
+            alone = propagate(stars.take(np.array([row])), outputs="potential_energy", prior=prior, engine=engine)
+            np.testing.assert_array_equal(alone.quantile((0.1, 0.5, 0.9), "potential_energy")[0], quantiles[row])
+
+
+def test_a_sharper_k2_than_the_misfit_changes_nothing_more():
+    medians = []
+    for error in (1e-3, 1e-5, 1e-7):
+        stars = Stars.of("a", mass=(5.0, 0.5), radius=(3.0, 0.2), log_k2=(-2.2, error))
+        for engine in ENGINES:
+            posterior = propagate(stars, outputs="potential_energy", prior="main-sequence", engine=engine)
+            assert posterior.status[0] == Status.OK
+            medians.append(posterior.median(COEFFICIENT)[0])
+    np.testing.assert_allclose(medians, medians[0], rtol=2e-3)

@@ -16,7 +16,7 @@ class Run:
     Attributes
     ----------
     source : Path
-        CSV or ECSV.
+        See `stellerg.catalogue.readers.open_table`.
     folder : Path or None
         For the results.
     output_format : str

@@ -18,7 +18,7 @@ def read_stars(
     Parameters
     ----------
     path : str or Path
-        CSV or ECSV; columns as described in the README.
+        See `stellerg.catalogue.readers.open_table`; columns as described in the README.
     shape, evolutionary_state : str
         For rows that do not say themselves.
     solar : SolarReferences, optional

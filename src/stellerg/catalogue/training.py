@@ -43,7 +43,7 @@ def read_training_stars(path: Path, stage: str = "") -> Training:
     Parameters
     ----------
     path : Path
-        CSV or ECSV, with our names of columns.
+        As `stellerg catalogue` reads, with our names of columns.
     stage : str
         Column whose cells name the evolutionary stage of each star; '' for one stage.
 

@@ -11,7 +11,9 @@ __all__ = ["catalogue"]
 
 
 def catalogue(
-    file: Annotated[Path, typer.Argument(help="Table of stars: CSV or ECSV.", show_default=False)],
+    file: Annotated[
+        Path, typer.Argument(help="Table of stars: CSV, Parquet, FITS, ECSV, VOTable or MRT.", show_default=False)
+    ],
     *,
     settings: Settings,
     out: Annotated[Path | None, typer.Option(help="Folder for the results.", show_default=False)] = None,

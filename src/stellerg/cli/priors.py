@@ -44,7 +44,7 @@ def show(
     stars: Annotated[
         Path | None,
         typer.Option(
-            help="With --plot, of a calibration: a table of stars (CSV or ECSV) to draw in it and to count by place.",
+            help="With --plot, of a calibration: a table of stars to draw in it and to count by place.",
             show_default=False,
         ),
     ] = None,

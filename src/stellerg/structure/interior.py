@@ -122,28 +122,30 @@ class Interior:
         blunt = np.flatnonzero(observed.blunt)
         if not blunt.size:
             return observed.marginal(q)
-        out = self._tables[number].at(q)
+        out = np.empty(q.shape)
+        for rows, table in self._tables[number]:
+            out[rows] = table.at(q[rows])
         sharp = np.flatnonzero(~observed.blunt)
         if sharp.size:
             out[sharp] = observed.take(sharp).marginal(q[sharp])
         return out
 
     @cached_property
-    def _tables(self) -> "tuple[_Tabulated, ...]":
+    def _tables(self) -> tuple:
         """Log likelihoods over all of ln w that matter, one for each interval of mass."""
         if self.relation is None:
             ends = [(piece.mixture.bracket, self._companions_of(piece)) for piece in self.intervals]
             count = len(self.observed.misfit)
             return tuple(
-                _Tabulated.of(self.observed, np.broadcast_to(np.array(bracket), (count, 2)), companions)
+                _tabulated(self.observed, np.broadcast_to(np.array(bracket), (count, 2)), companions)
                 for bracket, companions in ends
             )
         middle = self.relation.centre(self.relation.log_mass[:, None], self.relation.log_radius[:, None])
         around = np.concatenate([middle - _AROUND, middle + _AROUND], axis=1)
-        usual = _Tabulated.of(self.observed, around, self._companions)
+        usual = _tabulated(self.observed, around, self._companions)
         if not self.relation.convective.any():
             return (usual,)
-        return usual, _Tabulated.of(self.observed.convective(), around, self._companions)
+        return usual, _tabulated(self.observed.convective(), around, self._companions)
 
     def _companions_of(self, piece: MassInterval) -> np.ndarray | None:
         """Equally probable ln w of companions under the density of an interval of mass, (star, k)."""
@@ -179,6 +181,17 @@ class Interior:
         # the companion's structures in an order that has nothing to do with the star's: a step that shares no factor
         other = q[:, (np.arange(_PREDICTIVE) * 197) % _PREDICTIVE] if self.observed.has_companion.any() else None
         return {name: self.observed.predictive_probability(name, q, other) for name in self.observed.measured}
+
+
+def _tabulated(observed: Observed, ends: np.ndarray, companions: np.ndarray | None) -> list:
+    """Tables of the stars whose likelihood is an average, with their rows: those with companions apart."""
+    tables = []
+    for with_companion in (False, True):
+        rows = np.flatnonzero(observed.blunt & (observed.has_companion == with_companion))
+        if rows.size:
+            pairs = companions[rows] if with_companion else None
+            tables.append((rows, _Tabulated.of(observed.take(rows), ends[rows], pairs)))
+    return tables
 
 
 @dataclass(frozen=True)
