@@ -58,4 +58,7 @@ def test_the_table_of_structure_is_what_the_example_prints():
     run = subprocess.run(
         [sys.executable, "examples/structure.py"], cwd=ROOT, capture_output=True, text=True, check=True
     )
-    assert [line.rstrip() for line in run.stdout.strip().splitlines()] == shown.strip().splitlines()
+    number = r"\d+\.\d+"  # a last digit may turn over on another processor
+    assert re.sub(number, "#", run.stdout).split() == re.sub(number, "#", shown).split()
+    printed, stored = (list(map(float, re.findall(number, text))) for text in (run.stdout, shown))
+    assert printed == pytest.approx(stored, abs=1.5e-3)
