@@ -320,7 +320,13 @@ def test_between_the_branches_it_is_a_mixture_of_both():
     below = posterior.cumulative(np.array([1.15]), "structure_coefficient")[0, 0]
     assert below == pytest.approx(c, abs=1e-3)  # the branches lie apart: 0.86 and 1.74
     assert posterior.linear_value(OUTPUT)[0] != posterior.linear_value(OUTPUT)[0]  # no derivative: null
-    assert calibration.convective_coefficient == 0.86
+    from stellerg.posterior.document import star_document
+
+    convective, other = star_document(posterior)["structure"]["components"]
+    assert (convective["coefficient"], convective["weight"]) == (pytest.approx(0.86), pytest.approx(c))
+    at_age_zero = calibration.relation_at(np.log([1.0]))[0]
+    expected = np.exp(at_age_zero[1] + at_age_zero[2] * np.log(ratio))
+    assert (other["coefficient"], other["weight"]) == (pytest.approx(expected), pytest.approx(1.0 - c))
 
 
 def test_a_light_star_of_large_radius_is_taken_as_contracting():

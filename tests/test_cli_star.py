@@ -86,7 +86,7 @@ TYPES = {
 STRUCTURE_TYPES = {
     "coefficient": dict,
     "n_effective": dict,
-    "fully_convective": MAYBE,
+    "components": (list, type(None)),
     "predictive_probability": dict,
 }
 
@@ -117,7 +117,7 @@ def test_json_has_the_documented_keys_and_types():
     for values in (document["structure"][name] for name in ("coefficient", "n_effective")):
         assert_types(values, {"median": NUMBER, "interval68": list, "interval95": list})
         assert_interval(values["interval68"])
-    assert document["structure"]["fully_convective"] is None
+    assert document["structure"]["components"] is None
     assert document["structure"]["predictive_probability"] == {}
     for name in ("radiation", "ionisation"):
         assert_types(document[name], {"share": NUMBER, "counted": bool})

@@ -29,6 +29,8 @@ class Inside:
         Two-sided predictive probability of each structure observable.
     convective : ndarray
         Weight of a fully convective interior, of stars whose calibrated structure has two kinds.
+    branches : ndarray, (star, 2)
+        Median structure coefficient of the fully convective interior and of the other, of these stars.
     flags : ndarray of int64
     """
 
@@ -36,6 +38,7 @@ class Inside:
     ionisation: np.ndarray
     predictive: Mapping[str, np.ndarray] = field(default_factory=dict)
     convective: np.ndarray | None = None
+    branches: np.ndarray | None = None
     flags: np.ndarray | None = None
 
     def take(self, which: np.ndarray) -> "Inside":
@@ -45,6 +48,7 @@ class Inside:
             self.ionisation[which],
             {name: values[which] for name, values in self.predictive.items()},
             self.convective[which],
+            self.branches[which],
             self.flags[which],
         )
 
@@ -75,9 +79,11 @@ def inside(problem: Problem, ionisation_energy: np.ndarray) -> Inside:
             counted = (1.0 - radiation) if problem.binding.radiation else 1.0
             of_potential = ionisation_share(ionisation_energy[:, None], q, mass, radius)[:, 0]
             ionisation = of_potential / (problem.binding.gas * counted)
-    relation = problem.interior.relation
+    relation, branches = problem.interior.relation, np.full((count, 2), np.nan)
     if relation is not None:
         convective = np.where(relation.single, np.nan, relation.convective)
+        both = np.stack([relation.log_convective, relation.centre(mass, radius)[:, 0]], axis=1)
+        branches = np.where(relation.single[:, None], np.nan, np.exp(both))
     predictive = {}
     if problem.interior.observed is not None and problem.structured.any():
         medians = (None if x is None else x[:, 0] for x in (mass, radius))
@@ -85,4 +91,4 @@ def inside(problem: Problem, ionisation_energy: np.ndarray) -> Inside:
         for probability in predictive.values():
             with np.errstate(invalid="ignore"):
                 flags[probability < _CONFLICT] |= int(Flag.PRIOR_DATA_CONFLICT)
-    return Inside(radiation, ionisation, predictive, convective, flags)
+    return Inside(radiation, ionisation, predictive, convective, branches, flags)

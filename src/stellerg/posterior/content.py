@@ -175,12 +175,10 @@ def _inside(answer: dict, given: dict) -> list[str]:
         if part["share"] is not None:
             counted = "counted" if part["counted"] else "not counted"
             lines.append(sentence.format(share=f"{100.0 * part['share']:.2g} %", counted=counted))
-    weight = answer["structure"]["fully_convective"]
-    if weight is not None:
-        lines.append(
-            f"Structure is a mixture: fully convective with a probability of {percentage(weight)}, else as the "
-            "calibration of stars with a radiative core."
-        )
+    components = answer["structure"]["components"]
+    if components:
+        words = (f"{c['interior']} (w {number(c['coefficient'])}): {percentage(c['weight'])}" for c in components)
+        lines.append(f"Structure is a mixture: {'; '.join(words)}.")
     for name, probability in answer["structure"]["predictive_probability"].items():
         if probability is not None:
             lines.append(f"{label(name)}: two-sided predictive probability under the prior {probability:.2g}.")

@@ -46,7 +46,7 @@ def star_document(posterior: Posterior, row: int = 0) -> dict:
         "structure": {
             "coefficient": _quantiles(posterior, COEFFICIENT, row),
             "n_effective": _quantiles(posterior, EFFECTIVE_INDEX, row),
-            "fully_convective": _plain(posterior.convective_share()[row]),
+            "components": _components(posterior, row),
             "predictive_probability": {
                 name: _plain(values[row]) for name, values in posterior.predictive_probabilities().items()
             },
@@ -61,6 +61,19 @@ def star_document(posterior: Posterior, row: int = 0) -> dict:
         if over_determined
         else None,
     }
+
+
+def _components(posterior: Posterior, row: int) -> list[dict] | None:
+    """The two kinds of interior of a star whose calibrated structure is a mixture: weight and median coefficient."""
+    weight = float(posterior.convective_share()[row])
+    if math.isnan(weight):
+        return None
+    kinds = ("fully convective", "with a radiative core")
+    shares, values = (weight, 1.0 - weight), posterior.branches()[row]
+    return [
+        {"interior": kind, "weight": share, "coefficient": float(value)}
+        for kind, share, value in zip(kinds, shares, values, strict=True)
+    ]
 
 
 def _quantiles(posterior: Posterior, name: str, row: int) -> dict | None:

@@ -211,6 +211,13 @@ class Posterior:
         """Weight of a fully convective interior where the calibrated structure is a mixture of two, (star,)."""
         return self._judged(lambda inside: inside.convective)
 
+    def branches(self) -> np.ndarray:
+        """Median structure coefficient of the fully convective interior and of the other of such stars, (star, 2)."""
+        out = np.full((len(self), 2), np.nan)
+        for piece in self.pieces:
+            out[piece.rows] = piece.inside.branches
+        return out
+
     def predictive_probabilities(self) -> dict[str, np.ndarray]:
         """Two-sided predictive probability of each structure observable, (star,) each; NaN where there is none."""
         names = dict.fromkeys(name for piece in self.pieces for name in piece.inside.predictive)
