@@ -1,6 +1,8 @@
 """A learned structure prior: its likelihood against plain sums, its posterior against closed forms, its coverage."""
 
 import dataclasses
+from concurrent.futures import ProcessPoolExecutor
+from multiprocessing import get_context
 
 import numpy as np
 import pytest
@@ -355,23 +357,27 @@ def shares_covered(fits):
     return counts
 
 
+def fitted(number):
+    """The fit of one sample and, for the first, that of a misfit of each star's own (for processes)."""
+    measured = some(sample(np.random.default_rng([4111, number])), "log_k2")
+    settings = ChainSettings(seed=number, walkers=12, burn_in=20, block=70, times=6.0)
+    fit = learn_prior(measured, keys(), settings=settings)
+    if number >= CONTROLS:
+        return fit, None
+    # a misfit of its own for each star, integrated over: 0.25 in n, in dex at its own k2, added to its error
+    value = measured["log_k2"].value
+    slope = (log10_apsidal_constant(fit.observed + 0.01) - log10_apsidal_constant(fit.observed)) / 0.01
+    error = np.hypot(measured["log_k2"].upper, 0.25 * slope)
+    apart = {"log_k2": assign(value, error, error, scale=Scale.DEX)}
+    return fit, learn_prior(apart, keys(), misfit_scale=np.zeros(STARS), settings=settings)
+
+
 @pytest.mark.slow
 def test_coverage_with_a_common_misfit():
     """Stated intervals hold the truth as often as they say; with individual misfits those of the mean do not."""
-    fits, controls = [], []
-    for number in range(SAMPLES):
-        measured = some(sample(np.random.default_rng([4111, number])), "log_k2")
-        settings = ChainSettings(seed=number, walkers=12, burn_in=20, block=70, times=6.0)
-        fits.append(learn_prior(measured, keys(), settings=settings))
-        if number < CONTROLS:
-            # a misfit of its own for each star, integrated over: 0.25 in n, in dex at its own k2, added to its error
-            value = measured["log_k2"].value
-            slope = (
-                log10_apsidal_constant(fits[-1].observed + 0.01) - log10_apsidal_constant(fits[-1].observed)
-            ) / 0.01
-            error = np.hypot(measured["log_k2"].upper, 0.25 * slope)
-            apart = {"log_k2": assign(value, error, error, scale=Scale.DEX)}
-            controls.append(learn_prior(apart, keys(), misfit_scale=np.zeros(STARS), settings=settings))
+    with ProcessPoolExecutor(2, mp_context=get_context("spawn")) as pool:
+        pairs = list(pool.map(fitted, range(SAMPLES)))
+    fits, controls = [fit for fit, _ in pairs], [control for _, control in pairs if control is not None]
     for (name, level), count in shares_covered(fits).items():
         low, high = binom.interval(0.999, SAMPLES, level)
         assert low <= count <= high, (name, level, count)

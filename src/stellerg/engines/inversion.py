@@ -54,7 +54,7 @@ def invert(found: Evaluated, p: np.ndarray, low: np.ndarray, high: np.ndarray) -
     low, high = (np.repeat(end[:, None], len(p), axis=1) for end in (low, high))
     t = np.clip(mean[:, None] + sd[:, None] * (score + bend), low, high)
     active = np.arange(len(t))
-    miss = np.full(t.shape, np.inf)
+    miss, settled = np.full(t.shape, np.inf), np.zeros(t.shape, bool)  # a probability's value waits for no other's
     for _ in range(_STEPS):
         here = found if len(active) == len(t) else found.take(active)
         cumulative, density = here.evaluate(t[active])
@@ -69,8 +69,9 @@ def invert(found: Evaluated, p: np.ndarray, low: np.ndarray, high: np.ndarray) -
         done = (np.abs(error) <= _TOLERANCE) | narrow
         near = good & (np.abs(error) <= _NEAR)
         miss[active] = np.abs(error)
-        t[active] = np.where(done, t[active], following)
-        active = active[~(done | near).all(axis=1)]
+        t[active] = np.where(settled[active] | done, t[active], following)
+        settled[active] |= done | near
+        active = active[~settled[active].all(axis=1)]
         if not active.size:
             break
     return t
