@@ -49,3 +49,10 @@ def oracle_terms(problem, output, star=0):
         oracle.Input(WORDS[Shape(m.shape[star])], m.value[star], m.upper[star], m.lower[star]) for m in problem.measured
     ]
     return constant, inputs, tuple(weights)
+
+
+def assert_like_normal_scores(z):
+    """Scores (star, output, p) of a comparison: none far off, and their spread over stars that of a standard normal."""
+    assert np.abs(z).max() < 5.0, f"largest |z| {np.abs(z).max():.2f}"
+    rms = np.sqrt(np.mean(np.square(z), axis=0))
+    assert ((rms > 0.65) & (rms < 1.4)).all(), f"rms over stars by output and p: {rms}"

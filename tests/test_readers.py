@@ -226,6 +226,14 @@ def test_nested_columns(tmp_path):
     refused(tmp_path / "t.fits", "'radius'", "array")
 
 
+def test_a_time_in_a_zone_that_no_one_knows_is_read_all_the_same(tmp_path):
+    times = pa.array([0, None], pa.timestamp("s", tz="Isle/Nowhere"))
+    pq.write_table(pa.table({"mass": [1.0, 2.0], "observed": times}), tmp_path / "t.parquet")
+    part = next(open_table(tmp_path / "t.parquet").parts())
+    assert part["observed"].as_texts().tolist()[0].startswith("1970-01-01 00:00:00")
+    assert part["observed"].as_texts().tolist()[1] == ""
+
+
 # --- FITS ---
 def test_types_of_fits_columns(tmp_path):
     columns = [

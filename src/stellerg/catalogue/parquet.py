@@ -83,6 +83,7 @@ def _opened(path: Path):
 
 
 def _is_nested(kind) -> bool:
+    """Whether a cell holds several values."""
     import pyarrow as pa
 
     return pa.types.is_nested(kind.value_type if pa.types.is_dictionary(kind) else kind)
@@ -122,7 +123,6 @@ def _units(path: Path, schema) -> dict[str, str]:
 
 def _tables(files: list[Path], names: list[str]) -> Iterator:
     """Tables of `PART_ROWS` rows each but the last, across row groups and files."""
-
     waiting, count = [], 0
     for path in files:
         with _opened(path) as file:
@@ -174,11 +174,10 @@ def _plain_cells(cells):
     if pa.types.is_binary(kind) or pa.types.is_large_binary(kind) or pa.types.is_fixed_size_binary(kind):
         texts = [None if cell is None else cell.rstrip(b"\0").decode("utf-8", "replace") for cell in cells.to_pylist()]
         return pa.array(texts, pa.string())
-    try:
-        # texts in their several layouts; decimals, whose text is read once and so rounded once; dates
-        return cells.cast(pa.string())
-    except (pa.ArrowInvalid, pa.ArrowNotImplementedError):
-        return pa.array([None if cell is None else str(cell) for cell in cells.to_pylist()], pa.string())
+    if pa.types.is_timestamp(kind):  # without the zone, whose name this machine may not know
+        cells = cells.cast(pa.timestamp(kind.unit))
+    # texts in their several layouts; decimals, whose text is read once and so rounded once; dates
+    return cells.cast(pa.string())
 
 
 def _joined(path: Path, tables: list):

@@ -16,7 +16,7 @@ from scipy.special import ndtr
 from stellerg.binding import MEAN_MOLECULAR_WEIGHT, Kind
 from stellerg.engines.carried import input_cumulants
 from stellerg.engines.intervals import mass_score
-from stellerg.engines.inversion import invert
+from stellerg.engines.inversion import first_guess, invert
 from stellerg.engines.kernels import expansion_error
 from stellerg.engines.summed import SummedAnswer
 from stellerg.problem import Problem
@@ -246,11 +246,6 @@ class _Sums:
         second = (mass * (off**2 + width**2 / 12.0 + self.sd**2) + 2.0 * off * tilt).sum(axis=-1)
         return mean, np.sqrt(second)
 
-    @property
-    def skewness(self) -> np.ndarray:
-        """No guess of it, (star,)."""
-        return np.zeros(len(self.low))
-
     def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Cumulative and density at t, (star, m) each."""
         cumulative, density = self._sum(t, self._integrals)
@@ -299,7 +294,8 @@ class _Sums:
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """Values at cumulative probabilities p (m,): (star, m)."""
         reach = _REACH * self.sd
-        return invert(self, p, (self.low - reach).min(axis=1), (self.high + reach).max(axis=1))
+        start = first_guess(p, self.moments, np.zeros(len(reach)))
+        return invert(self, p, (self.low - reach).min(axis=1), (self.high + reach).max(axis=1), start)
 
 
 def _value(order: int, x: np.ndarray) -> np.ndarray:

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.polynomial import hermite_e
 from scipy.special import ndtr
 
-from stellerg.engines.inversion import invert
+from stellerg.engines.inversion import first_guess, invert
 
 __all__ = ["Kernels", "expansion_error"]
 
@@ -158,4 +158,5 @@ class Kernels:
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """Values at cumulative probabilities p (m,): (star, m)."""
         reach = _REACH * self.sd
-        return invert(self, p, (self.mean - reach).min(axis=1), (self.mean + reach).max(axis=1))
+        start = first_guess(p, self.moments, self.skewness)
+        return invert(self, p, (self.mean - reach).min(axis=1), (self.mean + reach).max(axis=1), start)

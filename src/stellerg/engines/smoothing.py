@@ -6,10 +6,12 @@ window in which F_X is neither 0 nor 1: exact for X much narrower and much wider
 """
 
 import itertools
+from dataclasses import dataclass
 
 import numpy as np
 from scipy.special import log_ndtr, ndtr, ndtri
 
+from stellerg.engines.inversion import invert
 from stellerg.engines.parts import GaussianPart, GridPart, Part, SharpPart
 from stellerg.structure.distributions import Uniform
 from stellerg.structure.model import Component, Coordinate, Mixture
@@ -17,8 +19,6 @@ from stellerg.structure.model import Component, Coordinate, Mixture
 __all__ = ["Term", "evaluate", "quantile", "uniform_index"]
 
 _NODE, _WEIGHT = np.polynomial.legendre.leggauss(32)
-_STEPS = 100  # bracketed Newton steps; bisection alone needs 50
-_TOLERANCE = 1e-12  # in probability
 
 Term = tuple[Mixture, Part]
 
@@ -137,25 +137,19 @@ def quantile(terms: list[Term], p: np.ndarray, start: np.ndarray) -> np.ndarray:
     low = np.min([part.lower + mixture.bracket[0] for mixture, part in terms], axis=0)
     high = np.max([part.upper + mixture.bracket[1] for mixture, part in terms], axis=0)
     # a touch wider, so that the ends themselves are never the answer by rounding
-    low, high = (np.repeat(x[:, None], len(p), axis=1) for x in (low - 1e-9, high + 1e-9))
-    t = np.clip(start, low, high)
-    active = np.arange(len(t))
-    miss = np.full(t.shape, np.inf)
-    for _ in range(_STEPS):
-        here = [(mixture, part.take(active)) for mixture, part in terms]
-        cumulative, density = evaluate(here, t[active])
-        error = cumulative - p
-        low[active] = np.where(error < 0.0, t[active], low[active])
-        high[active] = np.where(error >= 0.0, t[active], high[active])
-        with np.errstate(divide="ignore", invalid="ignore"):
-            newton = t[active] - error / density
-        good = (newton > low[active]) & (newton < high[active]) & (np.abs(error) < 0.5 * miss[active])
-        following = np.where(good, newton, 0.5 * (low[active] + high[active]))
-        width = high[active] - low[active]
-        done = (np.abs(error) <= _TOLERANCE) | (width <= 1e-13 * (1.0 + np.abs(t[active])))
-        miss[active] = np.abs(error)
-        t[active] = np.where(done, t[active], following)
-        active = active[~done.all(axis=1)]
-        if not active.size:
-            break
-    return t
+    return invert(_Smoothed(terms), p, low - 1e-9, high + 1e-9, start, near=0.0)
+
+
+@dataclass(frozen=True)
+class _Smoothed:
+    """The sum of terms, for `invert`."""
+
+    terms: list[Term]
+
+    def take(self, rows: np.ndarray) -> "_Smoothed":
+        """Return some of the stars."""
+        return _Smoothed([(mixture, part.take(rows)) for mixture, part in self.terms])
+
+    def evaluate(self, t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Cumulative and density at t, (star, m) each."""
+        return evaluate(self.terms, t)

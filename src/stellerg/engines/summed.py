@@ -18,6 +18,11 @@ __all__ = ["Sum", "SummedAnswer", "Sums"]
 class Sum(Evaluated, Protocol):
     """The distribution of one output of some stars."""
 
+    @property
+    def moments(self) -> tuple[np.ndarray, np.ndarray]:
+        """Mean and standard deviation, (star,) each."""
+        ...
+
     def quantile(self, p: np.ndarray) -> np.ndarray:
         """Values at cumulative probabilities p (m,): (star, m)."""
         ...
