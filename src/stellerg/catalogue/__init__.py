@@ -1,4 +1,4 @@
-"""Tables of stars: `readers`, what the columns mean (`columns`), `writers`, and a whole run (`run`).
+"""Tables of stars: `readers` by format, what the columns mean (`columns`), `writers`, and a whole run (`run`).
 
-Imports `propagate` and `posterior`; imported by `cli` only.
+Imports `propagation` and `posterior`; imported by `cli` only.
 """

@@ -1,4 +1,4 @@
-"""Figures, tables and texts for people: of a star's answer, of what was read, of a structure model.
+"""Figures, tables and texts for people: of a star's answer, of several priors, of what was read, of structure models.
 
-Imports `posterior`, `stars` and `structure`; nothing imports it but `cli`.
+Imports `propagation`, `posterior`, `stars` and `structure`; nothing imports it but `cli`.
 """

@@ -1,4 +1,4 @@
-"""Figures of one star's answer (matplotlib; with `prior_figure` the only modules that import it)."""
+"""Figures of one star's answer (matplotlib, which only this file and the `*_figure` files import)."""
 
 from pathlib import Path
 

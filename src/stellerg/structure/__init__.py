@@ -1,4 +1,5 @@
-"""The inside of a star: polytropes, densities of structure (`distributions`, `model`) and the files that hold them.
+"""The inside of a star: polytropes, densities, the calibration, what was observed of it, and the files that hold models.
 
-Imports only the leaf `errors`.
+`interior` brings them together for the stars of a problem. Imports `measured`, `keyed_random`, `diagnostics` (for
+`learning`) and the leaves.
 """

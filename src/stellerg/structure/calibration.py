@@ -21,7 +21,7 @@ __all__ = ["Boundaries", "Calibration", "Nodes", "Place"]
 
 # Judgement, where the definition leaves a step: a star too large for the main sequence and too light to have left it
 # turns from the relation to a fully convective star within this factor in radius.
-_LINE_UP = 1.05
+_TURNS_WITHIN = 1.05
 _CONVECTIVE_FROM_AGE_ZERO = 1.4  # solar masses: up to here the convective share of a contracting star grows from x = 1,
 _CONVECTIVE_NEAR_LIMIT = 1.5  # from here on from this share of the radius of full convection
 _NEAR_LIMIT = 0.8
@@ -250,5 +250,5 @@ class Calibration:
 
     def _share_too_large(self, log_mass, log_x):
         """Weight of the convective component of a star too large for the main sequence, too light to have left it."""
-        share = self._share(log_x, np.log(self.boundaries.at("end", log_mass)), np.log(_LINE_UP))
+        share = self._share(log_x, np.log(self.boundaries.at("end", log_mass)), np.log(_TURNS_WITHIN))
         return np.where(np.exp(log_mass) < self.none_evolved_below, share, 0.0)
